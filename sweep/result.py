@@ -89,7 +89,7 @@ class CameraNoise:
 
 @dataclass(frozen=True, slots=True)
 class LensModel:
-    """The fitted lens. `best_focus_mm` is the depth, from the plane of focus, that is sharpest at the recommended stop."""
+    """The fitted lens. `best_focus_mm`: the depth, from the plane of focus, sharpest at the recommended stop."""
 
     best_focus_mm: float | None
     spherical_waves: float | None
@@ -156,35 +156,115 @@ class NoteCode:
 
 
 NOTE_CODES: dict[str, NoteCode] = {
-    "frames-saturated": NoteCode("Pixels of a patch sit at the top of the scale or at a full well.", "Take the stop again at a shorter exposure."),
-    "low-signal": NoteCode("The light tone is too dark to measure well.", "Take the stop again at a longer exposure or with more light."),
-    "too-few-frames": NoteCode("A stop has fewer than two usable frames, so noise cannot be told from detail.", "Take at least two frames, better eight, at every stop."),
-    "frames-identical": NoteCode("Frames that should differ by noise are the same bit for bit.", "Check that the camera delivers new frames and that no file was copied."),
-    "frame-unreadable": NoteCode("An image file cannot be read and was left out.", "Copy the file again from the camera's computer, or take the frame again."),
-    "frame-missing": NoteCode("A file named in shots.csv is not there and was left out.", "Put the file back, or take its row out of shots.csv."),
-    "light-unchanged": NoteCode("Two different stops let the same light through.", "Turn the ring to each mark and take those stops again; check that no files were mixed up."),
-    "stop-order": NoteCode("The light does not follow the order of the stop labels.", "Check the stop column of shots.csv against the ring."),
-    "ring-off": NoteCode("The light says that the ring stood clearly away from its mark.", "Come to the mark from the wide side and take that stop again."),
-    "light-drift": NoteCode("The lamp changed during the sweep.", "Warm the lamp up for 20 to 30 minutes, and visit the first stop once more at the end."),
-    "flicker": NoteCode("The light ripples from frame to frame or over the rows of a frame.", "Use a steady lamp, or whole periods of the ripple as exposure, and set need.flicker_hz."),
-    "vibration": NoteCode("The image moves between frames of one stop.", "Hold the camera and the parts firmly, take the hand off the ring, and take the stop again."),
-    "target-moved": NoteCode("A target stands elsewhere than at the other stops.", "Fix the target and take the sweep again from that stop."),
+    "frames-saturated": NoteCode(
+        "Pixels of a patch sit at the top of the scale or at a full well.", "Take the stop again at a shorter exposure."
+    ),
+    "low-signal": NoteCode(
+        "The light tone is too dark to measure well.", "Take the stop again at a longer exposure or with more light."
+    ),
+    "too-few-frames": NoteCode(
+        "A stop has fewer than two usable frames, so noise cannot be told from detail.",
+        "Take at least two frames, better eight, at every stop.",
+    ),
+    "frames-identical": NoteCode(
+        "Frames that should differ by noise are the same bit for bit.",
+        "Check that the camera delivers new frames and that no file was copied.",
+    ),
+    "frame-unreadable": NoteCode(
+        "An image file cannot be read and was left out.",
+        "Copy the file again from the camera's computer, or take the frame again.",
+    ),
+    "frame-missing": NoteCode(
+        "A file named in shots.csv is not there and was left out.",
+        "Put the file back, or take its row out of shots.csv.",
+    ),
+    "light-unchanged": NoteCode(
+        "Two different stops let the same light through.",
+        "Turn the ring to each mark and take those stops again; check that no files were mixed up.",
+    ),
+    "stop-order": NoteCode(
+        "The light does not follow the order of the stop labels.",
+        "Check the stop column of shots.csv against the ring.",
+    ),
+    "ring-off": NoteCode(
+        "The light says that the ring stood clearly away from its mark.",
+        "Come to the mark from the wide side and take that stop again.",
+    ),
+    "light-drift": NoteCode(
+        "The lamp changed during the sweep.",
+        "Warm the lamp up for 20 to 30 minutes, and visit the first stop once more at the end.",
+    ),
+    "flicker": NoteCode(
+        "The light ripples from frame to frame or over the rows of a frame.",
+        "Use a steady lamp, or whole periods of the ripple as exposure, and set need.flicker_hz.",
+    ),
+    "vibration": NoteCode(
+        "The image moves between frames of one stop.",
+        "Hold the camera and the parts firmly, take the hand off the ring, and take the stop again.",
+    ),
+    "target-moved": NoteCode(
+        "A target stands elsewhere than at the other stops.", "Fix the target and take the sweep again from that stop."
+    ),
     "focus-moved": NoteCode("The focus changed during the sweep.", "Lock the focus ring and take the sweep again."),
-    "edge-angle": NoteCode("The edge is not tilted by 2 to 12 degrees from an axis.", "Turn the target by some 5 degrees, or move the region."),
-    "edge-not-straight": NoteCode("The edge is bent, ragged or dirty.", "Clean or replace the target, or move the region to a clean part of the edge."),
-    "edge-not-found": NoteCode("The region does not hold one dark/light edge with room on both sides.", "Move or enlarge the region so that one edge crosses it from side to side."),
-    "pattern-not-found": NoteCode("The region does not hold the star, bars or tri-bar target that the station file names.", "Check region, cycles, period and group in the station file."),
-    "processed-image": NoteCode("The camera sharpens or smooths its images.", "Turn sharpening, denoising and enhancement off in the camera and take the sweep again."),
-    "response-not-linear": NoteCode("The pixel values do not follow the light as camera.response says.", "Set the camera's gamma to 1, or state its true response in the station file."),
-    "compressed-source": NoteCode("Frames are JPEG files; the compression changes detail and noise.", "Record PNG or TIFF files."),
-    "bit-depth": NoteCode("The pixel values do not use the bits that the station file or the file format says.", "State camera.bit_depth as the camera delivers it."),
-    "beyond-nyquist": NoteCode("The feature is finer than two pixels per period.", "Use a larger magnification or smaller pixels."),
-    "model-misfit": NoteCode("The lens model does not describe the readings within their uncertainty.", "Trust the readings more than the model; look for tilt, dirt, movement or processing at the places named."),
-    "optimum-outside": NoteCode("The best stop is at the end of the sweep.", "Sweep further stops beyond that end, where the ring has them."),
-    "no-reading": NoteCode("There is no sound reading to judge by.", "Take the stop again so that every target gives a sound reading."),
-    "exposure": NoteCode("The exposure or gain that this stop needs exceeds the limits.", "More light, a longer allowed exposure, or more allowed gain."),
-    "noise": NoteCode("The light tone is noisier than need.min_snr_db allows.", "More light or exposure and less gain."),
-    "contrast": NoteCode("The feature's contrast falls short of the need at the worst target.", "See the shortfalls for what would cure it."),
-    "unproven": NoteCode("The contrast may meet the need, but not with the wanted confidence.", "Take more frames at that stop."),
-    "gain-spent": NoteCode("Gain has to make up for exposure, or the wanted level gives way.", "More light, or a longer allowed exposure."),
+    "edge-angle": NoteCode(
+        "The edge is not tilted by 2 to 12 degrees from an axis.",
+        "Turn the target by some 5 degrees, or move the region.",
+    ),
+    "edge-not-straight": NoteCode(
+        "The edge is bent, ragged or dirty.",
+        "Clean or replace the target, or move the region to a clean part of the edge.",
+    ),
+    "edge-not-found": NoteCode(
+        "The region does not hold one dark/light edge with room on both sides.",
+        "Move or enlarge the region so that one edge crosses it from side to side.",
+    ),
+    "pattern-not-found": NoteCode(
+        "The region does not hold the star, bars or tri-bar target that the station file names.",
+        "Check region, cycles, period and group in the station file.",
+    ),
+    "processed-image": NoteCode(
+        "The camera sharpens or smooths its images.",
+        "Turn sharpening, denoising and enhancement off in the camera and take the sweep again.",
+    ),
+    "response-not-linear": NoteCode(
+        "The pixel values do not follow the light as camera.response says.",
+        "Set the camera's gamma to 1, or state its true response in the station file.",
+    ),
+    "compressed-source": NoteCode(
+        "Frames are JPEG files; the compression changes detail and noise.", "Record PNG or TIFF files."
+    ),
+    "bit-depth": NoteCode(
+        "The pixel values do not use the bits that the station file or the file format says.",
+        "State camera.bit_depth as the camera delivers it.",
+    ),
+    "beyond-nyquist": NoteCode(
+        "The feature is finer than two pixels per period.", "Use a larger magnification or smaller pixels."
+    ),
+    "model-misfit": NoteCode(
+        "The lens model does not describe the readings within their uncertainty.",
+        "Trust the readings more than the model; look for tilt, dirt, movement or processing at the places named.",
+    ),
+    "optimum-outside": NoteCode(
+        "The best stop is at the end of the sweep.", "Sweep further stops beyond that end, where the ring has them."
+    ),
+    "no-reading": NoteCode(
+        "There is no sound reading to judge by.", "Take the stop again so that every target gives a sound reading."
+    ),
+    "exposure": NoteCode(
+        "The exposure or gain that this stop needs exceeds the limits.",
+        "More light, a longer allowed exposure, or more allowed gain.",
+    ),
+    "noise": NoteCode(
+        "The light tone is noisier than need.min_snr_db allows.", "More light or exposure and less gain."
+    ),
+    "contrast": NoteCode(
+        "The feature's contrast falls short of the need at the worst target.",
+        "See the shortfalls for what would cure it.",
+    ),
+    "unproven": NoteCode(
+        "The contrast may meet the need, but not with the wanted confidence.", "Take more frames at that stop."
+    ),
+    "gain-spent": NoteCode(
+        "Gain has to make up for exposure, or the wanted level gives way.", "More light, or a longer allowed exposure."
+    ),
 }
