@@ -264,6 +264,10 @@ NOTE_CODES: dict[str, NoteCode] = {
     "unproven": NoteCode(
         "The contrast may meet the need, but not with the wanted confidence.", "Take more frames at that stop."
     ),
+    "ripple-not-averaged": NoteCode(
+        "An exposure is shorter than one period of the light's ripple, so brightness changes from frame to frame.",
+        "Use a steady lamp, or less light so that the exposure reaches a whole period.",
+    ),
     "gain-spent": NoteCode(
         "Gain has to make up for exposure, or the wanted level gives way.", "More light, or a longer allowed exposure."
     ),

@@ -1,0 +1,131 @@
+"""The optimum between the engraved marks, from the lens model's curve of worst contrast over the f-number.
+
+A ring without clicks can stand anywhere. Rings are close to even in stops from mark to mark (common practice, no
+source), so a place on the ring is given as a fraction of the way in log2 of light.
+"""
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sweep.choose.candidates import Candidate
+from sweep.choose.chances import TIE, motion_transfer
+from sweep.choose.evidence import Outlook
+from sweep.choose.settings import exposure_limit_ms
+from sweep.station import Station
+
+_FRACTIONS = {"a quarter": 1 / 4, "a third": 1 / 3, "half": 1 / 2, "two thirds": 2 / 3, "three quarters": 3 / 4}
+
+
+@dataclass(frozen=True, slots=True)
+class Between:
+    """A ring position between two marks that beats the best mark by more than a tie.
+
+    `fraction` is the way from the wider mark, `light` the share of that mark's light, `gain` the relative gain in
+    worst contrast over the best mark, `chance` its probability to be more than a tie (None without draws).
+    """
+
+    wider: str
+    narrower: str
+    f_number: float
+    fraction: float
+    light: float
+    contrast: float
+    gain: float
+    chance: float | None
+
+    @property
+    def way(self) -> str:
+        """The place on the ring in words."""
+        word = min(_FRACTIONS, key=lambda k: abs(_FRACTIONS[k] - self.fraction))
+        if abs(_FRACTIONS[word] - self.fraction) < 0.05:
+            return f"{word} of the way" if word != "half" else "half way"
+        return f"{100 * self.fraction:.0f} % of the way"
+
+
+def optimum_f_number(outlook: Outlook) -> float | None:
+    """Where the model's worst contrast peaks when exposure and noise don't matter, refined by a parabola."""
+    if outlook.curve_f_numbers is None or outlook.curve is None:
+        return None
+    worst = np.maximum(outlook.curve, 0.0).min(axis=1)
+    if not np.all(np.isfinite(worst)) or worst.max() <= 0:
+        return None
+    return _peak(np.log(outlook.curve_f_numbers), worst)
+
+
+def rises_outward(outlook: Outlook, f_number: float, narrower: bool) -> bool:
+    """Whether the model's worst contrast still grows beyond an f-number, on the narrower or the wider side."""
+    if outlook.curve_f_numbers is None or outlook.curve is None:
+        return False
+    order = np.argsort(outlook.curve_f_numbers)
+    grid, worst = outlook.curve_f_numbers[order], np.maximum(outlook.curve[order], 0.0).min(axis=1)
+    at = float(np.interp(f_number, grid, worst))
+    outside = worst[grid > f_number] if narrower else worst[grid < f_number]
+    if len(outside) and outside.max() > at * (1 + TIE):
+        return True
+    # Where the curve ends at the sweep's end, its last slope tells: half a stop inward must already be lower.
+    inward = float(np.interp(f_number * 2 ** (-0.25 if narrower else 0.25), grid, worst))
+    return not len(outside) and at > inward
+
+
+def between_marks(
+    best: Candidate, candidates: Sequence[Candidate], station: Station, outlook: Outlook
+) -> Between | None:
+    """A position between the best mark and a neighbour, within the limits, that beats the mark by more than a tie."""
+    grid, curve = outlook.curve_f_numbers, outlook.curve
+    tone = best.evidence.tone_per_ms
+    if grid is None or curve is None or tone is None:
+        return None
+    marks = sorted(candidates, key=lambda c: c.f_number)
+    place = next(k for k, c in enumerate(marks) if c.index == best.index)
+    near = marks[max(place - 1, 0) : place + 2]
+    total_ms = station.need.level / tone * (grid / best.f_number) ** 2
+    limit_ms = exposure_limit_ms(station)
+    kept = total_ms <= limit_ms * 10 ** (station.need.max_gain_db / 20)
+    inside = (grid > near[0].f_number) & (grid < near[-1].f_number) & kept
+    if best.setting.fails or not inside.any():
+        return None
+    blur = np.array([motion_transfer(station.need, min(t, limit_ms), outlook.places) for t in total_ms])
+    worst = np.maximum(curve * blur, 0.0).min(axis=1)
+    top = int(np.argmax(np.where(inside, worst, -np.inf)))
+    order = np.argsort(grid)
+    at_mark = float(np.interp(best.f_number, grid[order], worst[order]))
+    if at_mark <= 0 or worst[top] <= (1 + TIE) * at_mark:
+        return None
+    f_number = float(grid[top])
+    wider, narrower = (near[0], best) if f_number < best.f_number else (best, near[-1])
+    return Between(
+        wider=wider.name,
+        narrower=narrower.name,
+        f_number=f_number,
+        fraction=math.log(f_number / wider.f_number) / math.log(narrower.f_number / wider.f_number),
+        light=(wider.f_number / f_number) ** 2,
+        contrast=float(worst[top]),
+        gain=float(worst[top]) / at_mark - 1,
+        chance=_chance_better(outlook, blur, top, best.f_number),
+    )
+
+
+def _chance_better(outlook: Outlook, blur: NDArray[np.float64], top: int, mark: float) -> float | None:
+    """The probability that the grid point `top` beats the mark by more than a tie."""
+    if outlook.curve_draws is None or outlook.curve_f_numbers is None:
+        return None
+    worst = np.maximum(outlook.curve_draws * blur, 0.0).min(axis=2)
+    nearest = int(np.argmin(np.abs(np.log(outlook.curve_f_numbers / mark))))
+    return float(np.mean(worst[:, top] > (1 + TIE) * worst[:, nearest]))
+
+
+def _peak(x: NDArray[np.float64], y: NDArray[np.float64]) -> float:
+    """exp of the abscissa of the highest point, by the parabola through it and its neighbours; an end stays an end."""
+    order = np.argsort(x)
+    x, y = x[order], y[order]
+    k = int(np.argmax(y))
+    if 0 < k < len(x) - 1:
+        a, b, _ = np.polyfit(x[k - 1 : k + 2] - x[k], y[k - 1 : k + 2], 2)
+        if a < 0:
+            shift = float(np.clip(-b / (2 * a), x[k - 1] - x[k], x[k + 1] - x[k]))
+            return float(math.exp(x[k] + shift))
+    return float(math.exp(x[k]))
