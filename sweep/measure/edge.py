@@ -8,7 +8,7 @@ away is not read too sharp. Uncertainties come from the residuals. The task and 
 edge, region, angle, oversampling) are those of ISO 12233.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -42,12 +42,51 @@ class EdgeProfile:
 
 
 @dataclass(frozen=True, slots=True)
+class EdgeCurve:
+    """Where an edge runs: position across = c0 + c1 t + c2 t^2, with t from -1 to 1 along it.
+
+    `across_x`: the normal is near the x axis (else near y); `polarity` +1: light at the larger coordinate.
+    """
+
+    across_x: bool
+    polarity: int
+    coefficients: tuple[float, float, float]
+    middle_px: float
+    half_px: float
+
+    @property
+    def tilt(self) -> float:
+        """Cosine of the angle between the normal and the axis."""
+        return float(1.0 / np.hypot(1.0, self.coefficients[1] / self.half_px))
+
+    @property
+    def direction_deg(self) -> float:
+        """Direction of the normal from the x axis towards y, 0 to 180."""
+        lean = float(np.degrees(np.arctan2(-self.coefficients[1] / self.half_px, 1.0)))
+        return (lean if self.across_x else 90.0 - lean) % 180.0
+
+    def along(self, x: Floats, y: Floats) -> Floats:
+        """t of the points x, y (px)."""
+        return ((y if self.across_x else x) - self.middle_px) / self.half_px
+
+    def distance(self, x: Floats, y: Floats) -> Floats:
+        """Signed distance from the edge along its normal, positive on the light side, px."""
+        t = self.along(x, y)
+        c0, c1, c2 = self.coefficients
+        return np.asarray(self.polarity * self.tilt * ((x if self.across_x else y) - c0 - t * (c1 + t * c2)))
+
+    def moved(self, c0: float, c1: float, c2: float) -> "EdgeCurve":
+        """The curve with other coefficients."""
+        return EdgeCurve(self.across_x, self.polarity, (c0, c1, c2), self.middle_px, self.half_px)
+
+
+@dataclass(frozen=True, slots=True)
 class EdgeMeasure:
     """What one edge says. Without `ok`, `why_not` holds codes and the figures are None.
 
     `dark`, `light`: levels far from the edge, unit of the samples; `angle_deg`: tilt from the nearest axis;
-    `direction_deg`: of the normal, from the x axis; `centre_px`: (x, y) where the edge crosses the region's middle;
-    `shift_px`: (n,) of each frame along the normal; `ragged_px`: rms wander of the print's edge beyond the curve;
+    `spread_px`: 10 to 90 % width; `shift_px`: (n,) of each frame along the normal, each with `shift_u_px`;
+    `ragged_px`: rms wander of the print's edge beyond the curve; `bend_px`: how far the curve bows from end to end;
     `overshoot`: by which the spread function leaves its levels near the edge, part of the step, dark and light.
     """
 
@@ -58,23 +97,21 @@ class EdgeMeasure:
     dark: float = 0.0
     light: float = 0.0
     angle_deg: float = 0.0
-    direction_deg: float = 0.0
-    offset_px: float = 0.0
     spread_px: float = 0.0
     shift_px: Floats | None = None
     shift_u_px: float = 0.0
     ragged_px: float = 0.0
     bend_px: float = 0.0
     overshoot: tuple[float, float] = (0.0, 0.0)
-    overshoot_u: float = 0.0
-    side: NDArray[np.int8] | None = None
+    curve: EdgeCurve | None = None
 
 
-def read_edge(x: Floats, y: Floats, values: Floats, valid: Bools | None = None) -> EdgeMeasure:
+def read_edge(x: Floats, y: Floats, values: Floats, valid: Bools | None = None, weights: Floats | None = None) -> EdgeMeasure:
     """Read one slanted edge from n frames of one stop.
 
     x, y: (k,) sample positions in pixels; values: (n, k) linear light; valid: (n, k), False where a sample must
-    not count. Frames are brought to one level and one place before they are averaged.
+    not count; weights: (n,), in proportion to the light that each frame caught. Frames are brought to one level and
+    one place before they are averaged.
     Returns levels in the unit of `values`, frequencies in cycles per pixel. Valid for one edge, tilted 2 to 12
     degrees, with room for 1.5 spread widths (10 to 90 %) on both sides.
     """
@@ -83,12 +120,14 @@ def read_edge(x: Floats, y: Floats, values: Floats, valid: Bools | None = None) 
     counts = good.sum(axis=0)
     if level is None or np.mean(counts > 0) < 0.5:
         return EdgeMeasure(False, ("edge-not-found",))
-    mean = np.where(good, values / level[:, None], 0.0).sum(axis=0) / np.maximum(counts, 1)
+    frames = values / level[:, None]
+    share = good * (np.ones(len(values)) if weights is None else weights)[:, None]
+    mean = np.where(good, frames * share, 0.0).sum(axis=0) / np.maximum(share.sum(axis=0), 1e-300)
     mean = np.where(counts > 0, mean, np.nan)
     line = _find_edge(x, y, mean)
     if line is None:
         return EdgeMeasure(False, ("edge-not-found",))
-    return _fit_edge(x, y, values / level[:, None], good, mean, line)
+    return _fit_edge(x, y, frames, good, mean, line)
 
 
 def _frame_levels(values: Floats, good: Bools) -> Floats | None:
@@ -100,17 +139,7 @@ def _frame_levels(values: Floats, good: Bools) -> Floats | None:
     return means / total
 
 
-@dataclass(frozen=True, slots=True)
-class _Line:
-    """An edge across x (`across_x`) as position = c0 + c1 t + c2 t^2 along t, in pixels; `polarity` +1: light at large x."""
-
-    across_x: bool
-    polarity: int
-    coefficients: Floats
-    middle: float
-
-
-def _find_edge(x: Floats, y: Floats, mean: Floats) -> _Line | None:
+def _find_edge(x: Floats, y: Floats, mean: Floats) -> EdgeCurve | None:
     """A first, straight line through the edge, from the row by row crossing of the middle level."""
     grid = _cell_grid(x, y, mean)
     if grid is None:
@@ -144,9 +173,9 @@ def _find_edge(x: Floats, y: Floats, mean: Floats) -> _Line | None:
         keep = found & (off < limit)
         if keep.sum() < max(6, 0.6 * len(t)):
             return None
-    middle = 0.5 * float(t[0] + t[-1])
-    c0 = float(fit[0] + fit[1] * middle)
-    return _Line(across_x, polarity, np.array([c0, fit[1]]), middle)
+    along = y if across_x else x
+    middle, half = 0.5 * float(along.min() + along.max()), max(0.5 * float(np.ptp(along)), 1.0)
+    return EdgeCurve(across_x, polarity, (float(fit[0] + fit[1] * middle), float(fit[1]) * half, 0.0), middle, half)
 
 
 def _cell_grid(x: Floats, y: Floats, mean: Floats) -> tuple[Floats, int] | None:
@@ -278,9 +307,9 @@ def _transform(knots: tuple[float, ...]) -> NDArray[np.complex128]:
 
 @dataclass(slots=True)
 class _State:
-    """The fit as it goes on: curve coefficients over t (-1 to 1 along the edge), light gradient, noise, what counts."""
+    """The fit as it goes on: the curve, the light gradient along it, the noise, which samples count."""
 
-    curve: Floats
+    curve: EdgeCurve
     keep: Bools
     deviation: Floats
     along_gradient: float = 0.0
@@ -288,35 +317,35 @@ class _State:
     spread_px: float = 0.0
     room_px: float = 0.0
 
+    def model(self, d: Floats, t: Floats) -> Floats:
+        """Light at distance d and place t along the edge, gradients included."""
+        assert self.fitted is not None
+        return np.asarray(self.fitted.value(d) * (1.0 + self.fitted.gradient * d) * (1.0 + self.along_gradient * t))
+
 
 _TURNS = 6
 
 
-def _fit_edge(x: Floats, y: Floats, frames: Floats, good: Bools, mean: Floats, line: _Line) -> EdgeMeasure:
+def _fit_edge(x: Floats, y: Floats, frames: Floats, good: Bools, mean: Floats, curve: EdgeCurve) -> EdgeMeasure:
     """From a first line to the finished measure: curve, spread function, shifts, transfer."""
-    across, along = (x, y) if line.across_x else (y, x)
-    half = max(float(np.abs(along - line.middle).max()), 1.0)
-    t = (along - line.middle) / half
     there = np.isfinite(mean)
     light = np.where(there, mean, 0.0)
-    state = _State(np.array([line.coefficients[0], line.coefficients[1] * half, 0.0]), there, np.ones_like(light))
-    d = t
+    t = curve.along(x, y)
+    state = _State(curve, there, np.ones_like(light))
     for turn in range(_TURNS):
-        tilt = 1.0 / np.hypot(1.0, state.curve[1] / half)
-        d = line.polarity * tilt * (across - state.curve[0] - t * (state.curve[1] + t * state.curve[2]))
+        d = state.curve.distance(x, y)
         if not _refit(state, d, t, light, there):
             return EdgeMeasure(False, ("edge-not-found",))
         if turn < _TURNS - 1:
-            _move_curve(state, d, t, light, line.polarity / tilt, bend=turn >= 2)
-    assert state.fitted is not None
-    angle = float(np.degrees(np.arctan(abs(state.curve[1]) / half)))
+            _move_curve(state, d, t, light, bend=turn >= 2)
+    angle = float(np.degrees(np.arccos(state.curve.tilt)))
     if not ANGLE_RANGE_DEG[0] <= angle <= ANGLE_RANGE_DEG[1]:
-        return EdgeMeasure(False, ("edge-angle",), angle_deg=angle)
+        return EdgeMeasure(False, ("edge-angle",), angle_deg=angle, curve=state.curve)
     shift, shift_u = _frame_shifts(state, d, t, frames, good)
     if np.abs(shift).max() > _SHIFT_MATTERS_PX:
         d, t, light, state = _align_frames(state, d, t, frames, good, shift)
-        _refit(state, d, t, light, np.ones_like(d, bool))
-    return _finish(state, d, t, light, line, half, angle, (shift, shift_u))
+        _refit(state, d, t, light, state.keep)
+    return _finish(state, d, t, light, (shift, shift_u))
 
 
 def _refit(state: _State, d: Floats, t: Floats, light: Floats, there: Bools) -> bool:
@@ -342,23 +371,21 @@ def _refit(state: _State, d: Floats, t: Floats, light: Floats, there: Bools) -> 
     return state.keep.mean() > 0.5
 
 
-def _move_curve(state: _State, d: Floats, t: Floats, light: Floats, scale: float, bend: bool) -> None:
+def _move_curve(state: _State, d: Floats, t: Floats, light: Floats, bend: bool) -> None:
     """Move the curve to where the residuals say; the middle goes to where the light is half way up."""
     assert state.fitted is not None
     slope = state.fitted.slope(d)
-    model = state.fitted.value(d) * (1.0 + state.fitted.gradient * d)
-    residual = light / (1.0 + state.along_gradient * t) - model
+    residual = light - state.model(d, t)
     weight = state.keep / state.deviation**2
     columns = np.column_stack([slope, slope * t, slope * (t * t - 1.0 / 3.0)])[:, : 3 if bend else 2]
-    normal = columns.T @ (columns * weight[:, None])
-    move = -scale * np.linalg.solve(normal, columns.T @ (weight * residual))
+    scale = state.curve.polarity / state.curve.tilt
+    move = np.zeros(3)
+    move[: columns.shape[1]] = -scale * np.linalg.solve(columns.T @ (columns * weight[:, None]), columns.T @ (weight * residual))
     fine = np.linspace(-0.5 * state.room_px, 0.5 * state.room_px, 801)
     dark, bright = state.fitted.levels
-    state.curve[0] += scale * float(np.interp(0.5 * (dark + bright), np.maximum.accumulate(state.fitted.value(fine)), fine))
-    state.curve[1] += move[1]
-    if bend:
-        state.curve[2] += move[2]
-        state.curve[0] -= move[2] / 3.0
+    half_way = float(np.interp(0.5 * (dark + bright), np.maximum.accumulate(state.fitted.value(fine)), fine))
+    c0, c1, c2 = state.curve.coefficients
+    state.curve = state.curve.moved(c0 + scale * half_way - move[2] / 3.0, c1 + move[1], c2 + move[2])
 
 
 def _spread_width(d: Floats, light: Floats) -> float | None:
@@ -435,58 +462,62 @@ _SHIFT_MATTERS_PX = 0.012
 def _frame_shifts(state: _State, d: Floats, t: Floats, frames: Floats, good: Bools) -> tuple[Floats, float]:
     """How far each frame's edge lies from the mean, (n,) px along the normal, and the u of one of them."""
     assert state.fitted is not None
-    gain = 1.0 + state.along_gradient * t
-    slope = state.fitted.slope(d) * gain
-    model = state.fitted.value(d) * (1.0 + state.fitted.gradient * d) * gain
+    slope = state.fitted.slope(d) * (1.0 + state.along_gradient * t)
     weight = state.keep / state.deviation**2
     usable = good & state.keep
     bottom = (usable * (weight * slope**2)).sum(axis=1)
-    top = (usable * (weight * slope) * (np.where(good, frames, 0.0) - model)).sum(axis=1)
+    top = (usable * (weight * slope) * (np.where(good, frames, 0.0) - state.model(d, t))).sum(axis=1)
     shift = -top / np.maximum(bottom, 1e-300)
     return shift - shift.mean(), float(np.sqrt(len(frames)) / np.sqrt(np.mean(bottom)))
 
 
-def _align_frames(state: _State, d: Floats, t: Floats, frames: Floats, good: Bools, shift: Floats) -> tuple[Floats, Floats, Floats, _State]:
-    """All frames' samples side by side, each at its distance from its own edge; noise as if they shared theirs."""
+def _align_frames(
+    state: _State, d: Floats, t: Floats, frames: Floats, good: Bools, shift: Floats
+) -> tuple[Floats, Floats, Floats, _State]:
+    """All frames' samples side by side, each at its distance from its own edge.
+
+    The deviation of each is such that all frames together weigh what their mean weighed: pattern noise is common to them.
+    """
     n = len(frames)
-    usable = (good & state.keep).ravel()
-    moved = _State(state.curve, usable, np.tile(state.deviation, n) * np.sqrt(n), state.along_gradient, state.fitted, state.spread_px, state.room_px)
+    moved = replace(state, keep=(good & state.keep).ravel(), deviation=np.tile(state.deviation, n) * np.sqrt(n))
     return (d[None, :] - shift[:, None]).ravel(), np.tile(t, n), np.where(good, frames, 0.0).ravel(), moved
 
 
-def _finish(
-    state: _State, d: Floats, t: Floats, light: Floats, line: _Line, half: float, angle: float, shifts: tuple[Floats, float]
-) -> EdgeMeasure:
+def _finish(state: _State, d: Floats, t: Floats, light: Floats, shifts: tuple[Floats, float]) -> EdgeMeasure:
     """Transfer, profile and side figures from the final state."""
     fitted = state.fitted
     assert fitted is not None
-    ragged = _ragged(state, d, t, light, half)
+    ragged = _ragged(state, d, t, light)
     flat = light / (1.0 + state.along_gradient * t)
-    slope = fitted.slope(d)
-    deviation = np.hypot(state.deviation, ragged * np.abs(slope))
-    weight = state.keep / deviation**2
+    weight = state.keep / np.hypot(state.deviation, ragged * np.abs(fitted.slope(d))) ** 2
     centre, (value, gradient_column), total = _binned(d, [flat, d * fitted.value(d)], weight)
-    profile = EdgeProfile(centre, value - fitted.gradient * gradient_column, 1.0 / np.sqrt(total), gradient_column)
-    transfer = _transfer(fitted)
     dark, bright = fitted.levels
-    direction = np.degrees(np.arctan2(-state.curve[1] / half, 1.0))
-    direction = direction if line.across_x else 90.0 - direction
-    fine = np.linspace(-min(3 * state.spread_px, state.room_px), min(3 * state.spread_px, state.room_px), 401)
-    curve = (fitted.value(fine) - dark) / (bright - dark)
+    reach = min(3.0 * state.spread_px, state.room_px)
+    rise = (fitted.value(np.linspace(-reach, reach, 401)) - dark) / (bright - dark)
     return EdgeMeasure(
-        True, (), transfer, profile, dark, bright, angle, float(direction % 180.0), float(state.curve[0]), state.spread_px,
-        shifts[0], shifts[1], ragged, float(state.curve[2]), (float(-curve.min()), float(curve.max() - 1.0)),
+        ok=True,
+        transfer=_transfer(fitted),
+        profile=EdgeProfile(centre, value - fitted.gradient * gradient_column, 1.0 / np.sqrt(total), gradient_column),
+        dark=dark,
+        light=bright,
+        angle_deg=float(np.degrees(np.arccos(state.curve.tilt))),
+        spread_px=state.spread_px,
+        shift_px=shifts[0],
+        shift_u_px=shifts[1],
+        ragged_px=ragged,
+        bend_px=abs(state.curve.coefficients[2]),
+        overshoot=(float(-rise.min()), float(rise.max() - 1.0)),
+        curve=state.curve,
     )
 
 
-def _ragged(state: _State, d: Floats, t: Floats, light: Floats, half: float) -> float:
+def _ragged(state: _State, d: Floats, t: Floats, light: Floats) -> float:
     """How far the print's edge wanders about the curve, rms px: the variance of row positions beyond their noise."""
-    fitted = state.fitted
-    assert fitted is not None
-    slope = fitted.slope(d)
-    residual = light / (1.0 + state.along_gradient * t) - fitted.value(d) * (1.0 + fitted.gradient * d)
+    assert state.fitted is not None
+    slope = state.fitted.slope(d)
+    residual = light - state.model(d, t)
     weight = state.keep / state.deviation**2
-    row = np.floor((t + 1.0) * half * 0.5).astype(int)
+    row = np.floor((t + 1.0) * state.curve.half_px * 0.5).astype(int)
     bottom = np.bincount(row, weights=weight * slope**2)
     top = np.bincount(row, weights=weight * slope * residual)
     strong = bottom > 0.3 * np.median(bottom)

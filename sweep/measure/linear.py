@@ -66,6 +66,17 @@ class Scale:
             light = part ** float(self.response)
         return np.asarray(np.sign(above) * light * self.span_dn)
 
+    def stored(self, light_dn: float) -> float:
+        """The stored value (DN, black included) that stands for an amount of linear light: the inverse of `linear`."""
+        if self.response == "linear":
+            return light_dn + self.black_dn
+        part = max(light_dn, 0.0) / self.span_dn
+        if self.response == "srgb":
+            code = 12.92 * part if part <= 0.0031308 else 1.055 * part ** (1.0 / 2.4) - 0.055
+        else:
+            code = part ** (1.0 / float(self.response))
+        return code * self.span_dn + self.black_dn
+
     def slope(self, dn: NDArray[np.generic] | Floats) -> Floats:
         """Linear DN per stored DN at the values `dn`: what one code step, and its rounding, is worth in light."""
         value = np.asarray(dn, dtype=np.float64)

@@ -1,0 +1,327 @@
+"""Frames x patches -> what each patch says at each stop, in one streaming pass.
+
+Frames are read stop by stop; of each only the patches are kept, on linear light per millisecond, so
+that frames of several exposures and gains are pooled. Nothing here knows a lens formula.
+"""
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from hashlib import sha256
+from itertools import groupby
+
+import numpy as np
+
+from sweep.errors import SourceError
+from sweep.frames import Pixels, Shot, Source
+from sweep.measure.edge import EdgeMeasure, read_edge
+from sweep.measure.linear import (
+    COLOUR_SITES,
+    Bools,
+    Floats,
+    Scale,
+    Sites,
+    channel_mask,
+    crop,
+    sharpness_sites,
+    sharpness_values,
+)
+from sweep.measure.noise import NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer
+from sweep.result import Note, PatchKind
+from sweep.station import Patch, Station
+
+MOST_SLOTS = 32
+CLIPPED_SHARE = 0.005
+CLIPPED_SHARE_FOR_LIGHT = 0.01
+LEAST_SIGNAL_DN = 4.0
+Progress = Callable[[int, int], None]
+
+
+@dataclass(frozen=True, slots=True)
+class PatchSite:
+    """One patch of the station: where it is listed, what it is, and its sharpness samples."""
+
+    target: int
+    patch: int
+    spec: Patch
+    sites: Sites
+
+
+@dataclass(frozen=True, slots=True)
+class Sighting:
+    """What one patch said at one stop.
+
+    `light_per_ms`: mean linear light of the patch (DN per ms at 0 dB); `frame_light`: the same frame by frame, with the
+    frames' place in time in `frame_order`; `tone_per_ms`: the light tone in the brightest channel, None where the kind
+    has none; `noise`: of its even areas; `saturated_fraction`: over the frames used; `frames`: how many were used.
+    """
+
+    stop: float
+    site: PatchSite
+    ok: bool
+    why_not: tuple[str, ...]
+    saturated_fraction: float
+    frames: int
+    light_per_ms: float
+    frame_light: Floats
+    frame_order: Floats
+    tone_per_ms: float | None
+    edge: EdgeMeasure | None = None
+    noise: tuple[NoisePoint, ...] = ()
+
+    @property
+    def kind(self) -> PatchKind:
+        """The kind of the patch."""
+        return self.site.spec.kind
+
+
+@dataclass(frozen=True, slots=True)
+class Black:
+    """The level without light: from dark frames, or as the station file says; and the dark frames' noise."""
+
+    level_dn: float
+    from_dark_frames: bool
+    noise: tuple[NoisePoint, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Sweep:
+    """All that the pixels say: the sightings, the camera's noise, and what was noticed on the way."""
+
+    stops: tuple[float, ...]
+    sightings: tuple[Sighting, ...]
+    black: Black
+    scale: Scale
+    photon_transfer: PhotonTransfer | None
+    frames: int
+    identical: tuple[tuple[str, ...], ...]
+    frame_shape: tuple[int, ...]
+
+    def at(self, stop: float) -> list[Sighting]:
+        """The sightings at one stop."""
+        return [s for s in self.sightings if s.stop == stop]
+
+
+def measure_sweep(source: Source, station: Station, progress: Progress | None = None) -> Sweep:
+    """Measure every patch at every stop of a source.
+
+    Frames are taken in an order that does not depend on the rows of the table; `progress` is told (frames done, all).
+    Raises SourceError where there is nothing to measure, FrameError from the reader.
+    """
+    shots = sorted(source.shots, key=_canonical)
+    targets = [s for s in shots if s.role == "target" and s.stop is not None]
+    if not targets:
+        raise SourceError("No target frames: shots.csv lists none with the role 'target'. Add frames of the targets.")
+    pass_ = _Pass(source, station, progress, len(shots))
+    black = pass_.black([s for s in shots if s.role == "dark"])
+    full_dn = float(2**source.bit_depth - 1)
+    scale = Scale(black.level_dn, full_dn, station.camera.response)
+    sites = [
+        PatchSite(i, j, patch, sharpness_sites(station.camera.layout, patch.region))
+        for i, target in enumerate(station.targets)
+        for j, patch in enumerate(target.patches)
+    ]
+    sightings: list[Sighting] = []
+    stops: list[float] = []
+    for stop, group in groupby(targets, key=lambda s: s.stop):
+        assert stop is not None
+        stops.append(stop)
+        sightings += pass_.stop(stop, list(group), sites, scale)
+    points = [p for s in sightings for p in s.noise if s.saturated_fraction < CLIPPED_SHARE] + list(black.noise)
+    return Sweep(
+        tuple(stops),
+        tuple(sightings),
+        black,
+        scale,
+        fit_photon_transfer(points),
+        len(shots),
+        pass_.identical(),
+        pass_.shape,
+    )
+
+
+def _canonical(shot: Shot) -> tuple[object, ...]:
+    stop = -1.0 if shot.stop is None else shot.stop
+    time = shot.time_s if shot.time_s is not None else 0.0
+    return (stop, shot.target or "", shot.exposure_ms, shot.gain_db, time, shot.file)
+
+
+@dataclass(slots=True)
+class _Slot:
+    """One frame, or the mean of several of one setting, cut to one patch: linear DN, and what is clipped."""
+
+    exposure_ms: float
+    gain_db: float
+    count: int
+    values: Floats
+    valid: Bools
+    clipped: float
+    full: Floats
+    order: float
+
+    @property
+    def light_unit(self) -> float:
+        """Milliseconds x gain: what turns DN into light."""
+        return self.exposure_ms * 10.0 ** (self.gain_db / 20.0)
+
+
+class _Pass:
+    """The walk over the frames of one source."""
+
+    def __init__(self, source: Source, station: Station, progress: Progress | None, total: int) -> None:
+        self.source, self.station, self.progress, self.total = source, station, progress, total
+        self.done = 0
+        self.shape: tuple[int, ...] = ()
+        self._hashes: dict[bytes, list[str]] = {}
+
+    def read(self, shot: Shot) -> Pixels:
+        pixels = self.source.read(shot)
+        self.shape = pixels.shape
+        self._hashes.setdefault(sha256(pixels.tobytes()).digest(), []).append(shot.file)
+        self.done += 1
+        if self.progress is not None:
+            self.progress(self.done, self.total)
+        return pixels
+
+    def identical(self) -> tuple[tuple[str, ...], ...]:
+        """Groups of files whose pixels are the same bit for bit."""
+        return tuple(sorted(tuple(sorted(files)) for files in self._hashes.values() if len(files) > 1))
+
+    def black(self, shots: Sequence[Shot]) -> Black:
+        """Black level and dark noise from the dark frames; by the station file where there are none, or they clip at zero."""
+        stated = Black(self.station.camera.black_level_dn, False, ())
+        if not shots:
+            return stated
+        levels: list[float] = []
+        points: list[NoisePoint] = []
+        clipped = False
+        for (_, gain), group in groupby(shots, key=lambda s: (s.exposure_ms, s.gain_db)):
+            frames = [np.asarray(self.read(s), dtype=np.float32) for s in list(group)[:MOST_SLOTS]]
+            clipped = clipped or float(np.mean(frames[0] <= 0)) > 0.01
+            levels += [float(np.mean(f, dtype=np.float64)) for f in frames]
+            stack = np.stack([f.reshape(-1) for f in frames]).astype(np.float64)
+            point = area_noise(stack - np.mean(levels), gain, 1.0 / 12.0)
+            if point is not None:
+                points.append(replace(point, mean_dn=0.0))
+        if clipped:
+            return stated
+        linear = self.station.camera.response == "linear"
+        return Black(float(np.mean(levels)), True, tuple(points) if linear else ())
+
+    def stop(self, stop: float, shots: list[Shot], sites: Sequence[PatchSite], scale: Scale) -> list[Sighting]:
+        """Read one stop's frames and measure all patches there."""
+        slots: list[list[_Slot]] = [[] for _ in sites]
+        per_slot = -(-len(shots) // MOST_SLOTS)
+        for shot in shots:
+            pixels = self.read(shot)
+            for site, mine in zip(sites, slots, strict=True):
+                if shot.target is None or shot.target == self.station.targets[site.target].name:
+                    _add(mine, _cut(pixels, site, shot, scale), per_slot)
+        return [measure_patch(stop, site, mine, self.station, scale) for site, mine in zip(sites, slots, strict=True) if mine]
+
+
+def _cut(pixels: Pixels, site: PatchSite, shot: Shot, scale: Scale) -> _Slot:
+    patch = crop(pixels, site.spec.region)
+    top = patch >= scale.full_dn
+    any_top = top.any(axis=2) if top.ndim == 3 else top
+    values = scale.linear(sharpness_values(patch, site.sites))
+    valid = ~any_top.reshape(-1)[site.sites.flat_index]
+    order = shot.time_s if shot.time_s is not None else float(shot.order)
+    return _Slot(shot.exposure_ms, shot.gain_db, 1, values, valid, float(any_top.mean()), scale.linear(patch), order)
+
+
+def _add(slots: list[_Slot], new: _Slot, per_slot: int) -> None:
+    """Append a frame, or pool it with the slot before where that is not full and of the same setting."""
+    last = slots[-1] if slots else None
+    same = last is not None and (last.exposure_ms, last.gain_db) == (new.exposure_ms, new.gain_db)
+    if last is None or not same or last.count >= per_slot:
+        slots.append(new)
+        return
+    n = last.count
+    last.values = (last.values * n + new.values) / (n + 1)
+    last.full = (last.full * n + new.full) / (n + 1)
+    last.valid &= new.valid
+    last.clipped = (last.clipped * n + new.clipped) / (n + 1)
+    last.order = (last.order * n + new.order) / (n + 1)
+    last.count = n + 1
+
+
+def measure_patch(stop: float, site: PatchSite, slots: Sequence[_Slot], station: Station, scale: Scale) -> Sighting:
+    """Measure one patch at one stop from its frames; clipped frames give way to unclipped ones."""
+    sound = [s for s in slots if s.clipped <= CLIPPED_SHARE]
+    used = sound or list(slots)
+    units = np.array([s.light_unit for s in used])
+    light = np.stack([s.values for s in used]) / units[:, None]
+    valid = np.stack([s.valid for s in used])
+    weights = np.array([s.count for s in used]) * units
+    frame_light = light.mean(axis=1)
+    clipped = float(np.average([s.clipped for s in used], weights=[s.count for s in used]))
+    why: list[str] = []
+    if not sound:
+        why.append("frames-saturated")
+    brightest = float(np.max(units * np.percentile(light, 95, axis=1)))
+    if brightest < LEAST_SIGNAL_DN:
+        why.append("low-signal")
+    edge = None
+    if site.spec.kind == "edge" and "low-signal" not in why:
+        edge = read_edge(site.sites.x, site.sites.y, light, valid if sound else None, weights)
+        why += edge.why_not
+    full = np.average(np.stack([s.full / s.light_unit for s in used]), axis=0, weights=weights)
+    base = Sighting(
+        stop, site, not why, tuple(why), clipped, sum(s.count for s in used),
+        float(np.average(frame_light, weights=weights)), frame_light, np.array([s.order for s in used]),
+        _tone(full, site, edge, station), edge,
+    )  # fmt: skip
+    return replace(base, noise=_noise(base, used, scale))
+
+
+def _tone(full: Floats, site: PatchSite, edge: EdgeMeasure | None, station: Station) -> float | None:
+    """The light tone in the brightest channel, per ms: a flat's mean, or the light side of an edge."""
+    height, width = full.shape[:2]
+    if site.spec.kind == "flat":
+        light = np.ones((height, width), bool)
+        scale = 1.0
+    elif edge is not None and edge.ok and edge.curve is not None:
+        rows, columns = np.mgrid[0:height, 0:width]
+        light = edge.curve.distance(columns.astype(float), rows.astype(float)) > 2.0 * edge.spread_px
+        own = sharpness_values(full, site.sites)  # type: ignore[arg-type]
+        own_light = light.reshape(-1)[site.sites.flat_index]
+        if not own_light.any():
+            return None
+        scale = edge.light / float(own[own_light].mean())
+    else:
+        return None
+    if full.ndim == 3:
+        means = [float(full[..., c][light].mean()) for c in range(3)]
+    elif station.camera.layout in COLOUR_SITES:
+        masks = [channel_mask(station.camera.layout, site.spec.region, c) & light for c in "rgb"]
+        means = [float(full[m].mean()) for m in masks if m.any()]
+    else:
+        means = [float(full[light].mean())]
+    return max(means) * scale
+
+
+def _noise(sighting: Sighting, slots: Sequence[_Slot], scale: Scale) -> tuple[NoisePoint, ...]:
+    """Noise of the even areas: a flat, or the two sides of an edge beyond its spread; per setting."""
+    site, edge = sighting.site, sighting.edge
+    if sighting.kind == "flat":
+        areas = [np.ones(len(site.sites.x), bool)]
+    elif edge is not None and edge.ok and edge.curve is not None:
+        d = edge.curve.distance(site.sites.x, site.sites.y)
+        away = max(3.0, 2.0 * edge.spread_px)
+        areas = [d < -away, d > away]
+    else:
+        return ()
+    points: list[NoisePoint] = []
+    for (_, gain), group in groupby(slots, key=lambda s: (s.exposure_ms, s.gain_db)):
+        stack = list(group)
+        frames = np.stack([s.values for s in stack])
+        for area in areas:
+            part = frames[:, area]
+            if part.shape[1] < 30:
+                continue
+            stored = scale.stored(float(part.mean()))
+            rounding = float(scale.slope(np.array(stored))) ** 2 / 12.0
+            point = area_noise(part, gain, rounding, (site.sites.x[area], site.sites.y[area]))
+            if point is not None:
+                points.append(replace(point, variance_dn2=point.variance_dn2 * stack[0].count))
+    return tuple(points)
