@@ -32,7 +32,7 @@ def reasons(
     between: Between | None,
 ) -> tuple[str, ...]:
     """Why this stop and this setting, in the order in which one would ask."""
-    found = [_why_this_stop(picked, station)]
+    found = _why_this_stop(picked, station)
     found += _ties(picked)
     found += _ruled_out(picked, candidates, station)
     found += _setting(picked.best, station)
@@ -67,7 +67,7 @@ def notes(
     return tuple(found)
 
 
-def _why_this_stop(picked: Pick, station: Station) -> str:
+def _why_this_stop(picked: Pick, station: Station) -> list[str]:
     best, need = picked.best, station.need
     place = best.worst_place.name if best.worst_place else "the worst target"
     if best.setting.fails:
@@ -76,32 +76,30 @@ def _why_this_stop(picked: Pick, station: Station) -> str:
         rank = "The only sound stop that keeps exposure and noise is"
     else:
         rank = "The sharpest stop that keeps exposure and noise is"
-    return (
-        f"{rank} {best.name}: a feature of {number(need.feature_um)} um keeps a contrast of "
-        f"{best.worst.contrast or 0:.3f} (u {best.worst.u or 0:.3f}) at {place}, the worst; {need.contrast:g} is "
-        f"needed. The chance that it meets the need is {chance(best.chance_meets)}; that no other usable stop is better, "
-        f"{chance(best.chance_best)}."
-    )
+    return [
+        f"{rank} {best.name}: at {place}, the worst, a feature of {number(need.feature_um)} um keeps a contrast of "
+        f"{best.worst.contrast or 0:.3f} (u {best.worst.u or 0:.3f}); {need.contrast:g} is needed.",
+        f"The chance that {best.name} meets the need is {chance(best.chance_meets)}, and that no other usable stop is "
+        f"better {chance(best.chance_best)}.",
+    ]
 
 
 def _ties(picked: Pick) -> list[str]:
-    if not picked.tied:
-        return []
     best = picked.best
+    if not picked.tied or best.contrast <= 0:
+        return []
     group = sorted((best, *picked.tied), key=lambda c: c.f_number)
-    values = listed([f"{c.worst.contrast or 0:.3f}" for c in group])
-    others = []
+    values = listed([f"{c.contrast:.3f}" for c in group])
+    names = listed([c.name for c in group])
+    differences = [f"{group[-1].name} gives {'the most' if len(group) > 2 else 'more'} depth"]
     for other in picked.tied:
         ratio = _exposure_ratio(other, best)
         if ratio is not None and ratio > 1.05:
-            others.append(f"{best.name} needs {number(1 / ratio)} of the exposure of {other.name}")
+            differences.append(f"{best.name} needs {number(1 / ratio)} of the exposure of {other.name}")
         elif ratio is not None and ratio < 0.95:
-            others.append(f"{other.name} needs {number(ratio)} of the exposure of {best.name}")
-        if other.f_number > best.f_number:
-            others.append(f"{other.name} gives more depth")
-    told = f": {'; '.join(others)}" if others else ""
-    names = listed([c.name for c in group])
-    return [f"{names} can't be told apart ({values}, within {100 * TIE:.0f} %); any of them is right{told}."]
+            differences.append(f"{other.name} needs {number(ratio)} of the exposure of {best.name}")
+    told = "; ".join(differences)
+    return [f"{names} can't be told apart ({values}, within {100 * TIE:.0f} %); any of them is right: {told}."]
 
 
 def _exposure_ratio(other: Candidate, best: Candidate) -> float | None:
@@ -226,7 +224,7 @@ def _short_of_ripple(candidates: Sequence[Candidate], station: Station) -> list[
         Note(
             "ripple-not-averaged",
             f"The exposure is shorter than one ripple period ({number(1000 / hz)} ms) at {told}: up to "
-            f"{100 * left:.0f} % of the lamp's ripple stays in the picture, as brightness that changes from frame to frame.",
+            f"{100 * left:.0f} % of the ripple stays in the picture, and brightness changes from frame to frame.",
         )
     ]
 
