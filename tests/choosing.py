@@ -66,8 +66,8 @@ class PlainLens:
 
     stops: tuple = STOPS
     focus_mm: float = 0.0
-    defocus: float = 0.35  # Gaussian exponent for one mm of defocus at f/1, at 0.1 cycles per pixel
-    error: float = 3.0  # the lens error's exponent at f/1
+    defocus: float = 0.1  # Gaussian exponent for one mm of defocus at f/1, at 0.1 cycles per pixel
+    error: float = 1.5  # the lens error's exponent at f/1
     pitch_um: float = 3.45
 
     def at(self, f_number, place, *, without=None, refocus_mm=0.0, pixel_scale=1.0):

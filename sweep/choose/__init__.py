@@ -59,7 +59,7 @@ def choose(
         limited_by=limited_by(picked, candidates, lens),
         chance_best=best.chance_best,
         optimum_f_number=optimum,
-        reasons=reasons(picked, candidates, station, losses, between_marks(best, candidates, station, outlook)),
+        reasons=reasons(picked, candidates, station, losses, between_marks(best, candidates, station, camera, outlook)),
         shortfalls=() if best.meets_need else shortfalls(picked, candidates, station, camera, outlook, lens),
     )
     return recommendation, stops, warned

@@ -6,7 +6,7 @@ source), so a place on the ring is given as a fraction of the way in log2 of lig
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,7 +14,8 @@ from numpy.typing import NDArray
 from sweep.choose.candidates import Candidate
 from sweep.choose.chances import TIE, motion_transfer
 from sweep.choose.evidence import Outlook
-from sweep.choose.settings import exposure_limit_ms
+from sweep.choose.settings import Setting, setting_for
+from sweep.result import CameraNoise
 from sweep.station import Station
 
 _FRACTIONS = {"a quarter": 1 / 4, "a third": 1 / 3, "half": 1 / 2, "two thirds": 2 / 3, "three quarters": 3 / 4}
@@ -72,27 +73,27 @@ def rises_outward(outlook: Outlook, f_number: float, narrower: bool) -> bool:
 
 
 def between_marks(
-    best: Candidate, candidates: Sequence[Candidate], station: Station, outlook: Outlook
+    best: Candidate, candidates: Sequence[Candidate], station: Station, camera: CameraNoise, outlook: Outlook
 ) -> Between | None:
     """A position between the best mark and a neighbour, within the limits, that beats the mark by more than a tie."""
     grid, curve = outlook.curve_f_numbers, outlook.curve
-    tone = best.evidence.tone_per_ms
-    if grid is None or curve is None or tone is None:
+    if grid is None or curve is None or best.evidence.tone_per_ms is None:
         return None
     marks = sorted(candidates, key=lambda c: c.f_number)
     place = next(k for k, c in enumerate(marks) if c.index == best.index)
     near = marks[max(place - 1, 0) : place + 2]
-    total_ms = station.need.level / tone * (grid / best.f_number) ** 2
-    limit_ms = exposure_limit_ms(station)
-    kept = total_ms <= limit_ms * 10 ** (station.need.max_gain_db / 20)
-    inside = (grid > near[0].f_number) & (grid < near[-1].f_number) & kept
-    if best.setting.fails or not inside.any():
+    inside = np.flatnonzero((grid > near[0].f_number) & (grid < near[-1].f_number))
+    settings = {int(k): _setting_at(float(grid[k]), best, station, camera) for k in inside}
+    kept = [k for k, setting in settings.items() if not setting.fails]
+    if best.setting.fails or not kept:
         return None
-    blur = np.array([motion_transfer(station.need, min(t, limit_ms), outlook.places) for t in total_ms])
+    blur = np.tile(best.blur, (len(grid), 1))
+    for k in kept:
+        blur[k] = motion_transfer(station.need, settings[k].exposure_ms, outlook.places)
     worst = np.maximum(curve * blur, 0.0).min(axis=1)
-    top = int(np.argmax(np.where(inside, worst, -np.inf)))
+    top = max(kept, key=lambda k: float(worst[k]))
     order = np.argsort(grid)
-    at_mark = float(np.interp(best.f_number, grid[order], worst[order]))
+    at_mark = float(np.interp(best.f_number, grid[order], np.maximum(curve * best.blur, 0.0).min(axis=1)[order]))
     if at_mark <= 0 or worst[top] <= (1 + TIE) * at_mark:
         return None
     f_number = float(grid[top])
@@ -105,17 +106,24 @@ def between_marks(
         light=(wider.f_number / f_number) ** 2,
         contrast=float(worst[top]),
         gain=float(worst[top]) / at_mark - 1,
-        chance=_chance_better(outlook, blur, top, best.f_number),
+        chance=_chance_better(outlook, blur[top], top, best),
     )
 
 
-def _chance_better(outlook: Outlook, blur: NDArray[np.float64], top: int, mark: float) -> float | None:
-    """The probability that the grid point `top` beats the mark by more than a tie."""
+def _setting_at(f_number: float, best: Candidate, station: Station, camera: CameraNoise) -> Setting:
+    """The setting at an f-number by light: the light goes as 1 / N^2 from the best mark's."""
+    tone = (best.evidence.tone_per_ms or 0.0) * (best.f_number / f_number) ** 2
+    return setting_for(replace(best.evidence, tone_per_ms=tone), station, camera)
+
+
+def _chance_better(outlook: Outlook, blur: NDArray[np.float64], top: int, best: Candidate) -> float | None:
+    """The probability that the grid point `top` beats the best mark by more than a tie."""
     if outlook.curve_draws is None or outlook.curve_f_numbers is None:
         return None
-    worst = np.maximum(outlook.curve_draws * blur, 0.0).min(axis=2)
-    nearest = int(np.argmin(np.abs(np.log(outlook.curve_f_numbers / mark))))
-    return float(np.mean(worst[:, top] > (1 + TIE) * worst[:, nearest]))
+    mark = int(np.argmin(np.abs(np.log(outlook.curve_f_numbers / best.f_number))))
+    there = np.maximum(outlook.curve_draws[:, top] * blur, 0.0).min(axis=1)
+    here = np.maximum(outlook.curve_draws[:, mark] * best.blur, 0.0).min(axis=1)
+    return float(np.mean(there > (1 + TIE) * here))
 
 
 def _peak(x: NDArray[np.float64], y: NDArray[np.float64]) -> float:

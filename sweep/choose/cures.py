@@ -5,7 +5,7 @@ A cure is computed by the same model with that one thing changed; by best estima
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.special import ndtri
@@ -25,6 +25,14 @@ _MOST_FRAMES = 100.0  # times the present number
 _MOST_LIGHT = 1000.0
 
 
+@dataclass(frozen=True, slots=True)
+class _Cure:
+    """One thing changed, and whether that alone meets the need."""
+
+    works: bool
+    text: str
+
+
 def shortfalls(
     picked: Pick,
     candidates: Sequence[Candidate],
@@ -38,6 +46,7 @@ def shortfalls(
     found: list[str] = []
     if best.setting.fails_exposure:
         found += _exposure(best, station)
+        found += _least_light(picked, station)
     if best.setting.fails_noise:
         found += _noise(best, station, camera)
     if "beyond-nyquist" in best.why_not:
@@ -73,6 +82,21 @@ def _exposure(best: Candidate, station: Station) -> list[str]:
     return [
         f"Exposure: {best.name} needs {number(total)} ms for a level of {100 * need.level:.0f} %; {number(limit)} ms"
         f"{spent} are allowed, too little by a factor of {at_least(short)}. " + _any_of(cures)
+    ]
+
+
+def _least_light(picked: Pick, station: Station) -> list[str]:
+    """Where no stop keeps the exposure: the one that would meet the contrast with the least light."""
+    need = station.need
+    able = [c for c in picked.pool if c.contrast >= need.contrast and c.setting.total_ms is not None]
+    if not able or picked.best.setting.total_ms is None:
+        return []
+    easiest = min(able, key=lambda c: c.setting.total_ms or math.inf)
+    if easiest is picked.best:
+        return []
+    times = (easiest.setting.total_ms or math.nan) / (exposure_limit_ms(station) * 10 ** (need.max_gain_db / 20))
+    return [
+        f"{easiest.name} reaches the contrast too ({easiest.contrast:.3f}), with {at_least(times)} times the light."
     ]
 
 
@@ -129,10 +153,15 @@ def _contrast(
     if need.speed_mm_s and best.worst.place is not None:
         found += _slower(best, station, outlook)
     if lens is not None:
-        found += _refocus(picked, station, outlook, lens)
-        found += _better_lens(picked, station, outlook, lens)
-        found += _smaller_pixels(best, station, outlook, lens)
+        cures = [
+            _refocus(picked, station, outlook, lens),
+            _better_lens(picked, station, outlook, lens),
+            _smaller_pixels(best, station, outlook, lens),
+        ]
+        found += [c.text for c in cures if c.works]
         found += _larger_feature(best, station, outlook, lens)
+        if failed := [c.text for c in cures if not c.works]:
+            found.append(f"Not enough alone: {'; '.join(failed)}.")
     return found
 
 
@@ -171,42 +200,49 @@ def _slower(best: Candidate, station: Station, outlook: Outlook) -> list[str]:
     ]
 
 
-def _refocus(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -> list[str]:
+def _refocus(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -> _Cure:
     tried = [best_refocus(lens, c.index, c.f_number, outlook.places, c.blur, station) for c in _near(picked)]
     names = {c.index: c.name for c in picked.pool}
     top = max(tried, key=lambda r: r.contrast)
-    way = f"{number(abs(top.shift_mm))} mm {'away from' if top.shift_mm > 0 else 'toward'} the camera"
+    name, way = names[top.stop_index], f"{number(abs(top.shift_mm))} mm {'away from' if top.shift_mm > 0 else 'toward'}"
     if top.contrast >= station.need.contrast:
-        return [
-            f"Move the plane of focus by {way}: {names[top.stop_index]} then reaches {top.contrast:.3f} at the worst "
-            "target and meets the need."
-        ]
+        return _Cure(
+            True,
+            f"Move the plane of focus by {way} the camera: {name} then reaches {top.contrast:.3f} at the worst target "
+            "and meets the need.",
+        )
     if top.contrast > (1 + TIE) * picked.best.contrast:
-        return [f"Refocusing alone is not enough: {way}, {names[top.stop_index]} reaches {top.contrast:.3f}."]
-    return ["Refocusing does not help: the focus is where it is best for these depths."]
+        return _Cure(False, f"refocusing ({top.contrast:.3f} at {name}, {way} the camera)")
+    return _Cure(False, "refocusing (the focus is where it is best for these depths)")
 
 
-def _better_lens(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -> list[str]:
-    values = [(_worst(lens, c, outlook.places, c.blur, without="aberration"), c) for c in _near(picked)]
+def _better_lens(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -> _Cure:
+    values = [(_worst(lens, c, outlook.places, c.blur, without="aberration"), c) for c in picked.pool]
     reached, at = max(values, key=lambda v: v[0])
-    verdict = "meets the need" if reached >= station.need.contrast else "still falls short"
-    return [
-        f"A lens of the same focal length at the diffraction limit reaches {reached:.3f} at {at.name}, and {verdict}."
-    ]
+    if reached < station.need.contrast:
+        return _Cure(False, f"a lens at the diffraction limit ({reached:.3f} at {at.name})")
+    return _Cure(
+        True,
+        f"A lens of the same focal length at the diffraction limit reaches {reached:.3f} at {at.name} and meets the "
+        "need.",
+    )
 
 
-def _smaller_pixels(best: Candidate, station: Station, outlook: Outlook, lens: LensView) -> list[str]:
+def _smaller_pixels(best: Candidate, station: Station, outlook: Outlook, lens: LensView) -> _Cure:
     pitch, need = station.camera.pixel_pitch_um, station.need
+    finest = max(p.feature_cy_px for p in outlook.places)
 
     def enough(division: float) -> bool:
-        return _worst(lens, best, outlook.places, best.blur, pixel_scale=1 / division) >= need.contrast
+        reached = _worst(lens, best, outlook.places, best.blur, pixel_scale=1 / division)
+        return reached >= need.contrast and finest / division <= NYQUIST_CY_PX
 
     division = _first(enough, 1.0, 1 / _SMALLEST_PIXEL)
     if division is None:
-        return ["Smaller pixels alone are not enough."]
-    return [
-        f"Pixels of {at_most(pitch / division)} um (now {number(pitch)}) behind the same lens meet it at {best.name}."
-    ]
+        return _Cure(False, "smaller pixels")
+    smaller = at_most(pitch / division)
+    return _Cure(
+        True, f"Pixels of {smaller} um (now {number(pitch)}) behind the same lens meet the need at {best.name}."
+    )
 
 
 def _larger_feature(best: Candidate, station: Station, outlook: Outlook, lens: LensView) -> list[str]:
@@ -215,7 +251,8 @@ def _larger_feature(best: Candidate, station: Station, outlook: Outlook, lens: L
     def enough(times: float) -> bool:
         places = tuple(replace(p, feature_cy_px=p.feature_cy_px / times) for p in outlook.places)
         blur = motion_transfer(need, best.setting.exposure_ms, places)
-        return _worst(lens, best, places, blur) >= need.contrast
+        sampled = all(p.feature_cy_px <= NYQUIST_CY_PX for p in places)
+        return sampled and _worst(lens, best, places, blur) >= need.contrast
 
     times = _first(enough, 1.0, _LARGEST_FEATURE)
     if times is None:

@@ -46,7 +46,7 @@ def reasons(
         found.append(
             f"A ring that can stand between marks does better {between.way} from {between.wider} to {between.narrower} "
             f"(f/{between.f_number:.3g}, {between.light:.2f} of the light at {between.wider}): "
-            f"{100 * between.gain:.0f} % more contrast{sure}."
+            f"{number(100 * between.gain)} % more contrast{sure}."
         )
     return tuple(found)
 
@@ -79,8 +79,8 @@ def _why_this_stop(picked: Pick, station: Station) -> list[str]:
     return [
         f"{rank} {best.name}: at {place}, the worst, a feature of {number(need.feature_um)} um keeps a contrast of "
         f"{best.worst.contrast or 0:.3f} (u {best.worst.u or 0:.3f}); {need.contrast:g} is needed.",
-        f"The chance that {best.name} meets the need is {chance(best.chance_meets)}, and that no other usable stop is "
-        f"better {chance(best.chance_best)}.",
+        f"Chance that {best.name} meets the need: {chance(best.chance_meets)}; that no other usable stop is better: "
+        f"{chance(best.chance_best)}.",
     ]
 
 
@@ -132,7 +132,9 @@ def _setting(best: Candidate, station: Station) -> list[str]:
     if setting.exposure_ms is None or setting.gain_db is None or setting.level is None or setting.total_ms is None:
         return []
     gain = f" with {setting.gain_db:.1f} dB of gain" if setting.gain_db > 0.05 else " without gain"
-    text = f"{number(setting.exposure_ms)} ms{gain} brings the light tone to {100 * setting.level:.0f} % of full scale"
+    text = (
+        f"{number(setting.exposure_ms)} ms{gain} brings the light tone to {number(100 * setting.level)} % of full scale"
+    )
     if setting.by_ripple:
         periods = round(setting.exposure_ms * need.flicker_hz / 1000)
         whole = "one whole period" if periods == 1 else f"{periods} whole periods"
