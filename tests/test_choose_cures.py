@@ -92,6 +92,17 @@ def test_refocusing_as_told_meets_the_need():
     assert again.meets_need
 
 
+def test_a_better_focus_is_named_though_the_need_is_met():
+    lens, station = PlainLens(focus_mm=-9.0), a_station(contrast=0.2, max_exposure_ms=0.3)
+    found, stops, _ = a_choice(lens, station)
+    assert found.meets_need
+    shift = the_number(found.reasons, r"would serve these depths best ([\d.]+) mm farther from the camera")
+    again, better, _ = a_choice(replace(lens, focus_mm=lens.focus_mm + shift), station, stops=(found.stop,))
+    before = next(s for s in stops if s.stop == found.stop)
+    assert better[0].worst_contrast > 1.05 * before.worst_contrast
+    assert not any("would serve these depths" in r for r in again.reasons)
+
+
 def test_refocusing_that_is_not_enough_is_told_as_such():
     found, _, _ = a_choice(PlainLens(), a_station(contrast=0.9))
     assert any("Not enough alone: refocusing" in s for s in found.shortfalls)

@@ -5,6 +5,7 @@
     chances   the worst place, with draws   cures    what falls short and what would cure it
     candidates  the stops, and the order    focus    where to set the focus
     reasons   the answer in sentences       wording  numbers as people read them
+    depths    the map over depth and stop, and the smallest detectable feature
 
 See docs/choice.md for how each number is made. Pure and deterministic: the only randomness is in the draws given.
 """
@@ -15,7 +16,9 @@ from sweep.choose.between import between_marks, optimum_f_number
 from sweep.choose.candidates import as_stop, candidates_of, pick
 from sweep.choose.causes import limited_by, losses_at_worst
 from sweep.choose.cures import shortfalls
+from sweep.choose.depths import DepthMap, depth_map
 from sweep.choose.evidence import Cause, LensView, Outlook, Place, StopEvidence
+from sweep.choose.focus import best_refocus
 from sweep.choose.reasons import notes, reasons
 from sweep.result import CameraNoise, Note, Recommendation, Stop
 from sweep.station import Station
@@ -24,7 +27,7 @@ NOTHING_SOUND = (
     "No stop has a sound reading at every target, so none can be recommended; the warnings say what to take again."
 )
 
-__all__ = ["Cause", "LensView", "Outlook", "Place", "StopEvidence", "choose"]
+__all__ = ["Cause", "DepthMap", "LensView", "Outlook", "Place", "StopEvidence", "choose", "depth_map"]
 
 
 def choose(
@@ -51,6 +54,10 @@ def choose(
         return Recommendation(None, None, None, False, None, None, optimum, (), (NOTHING_SOUND,)), stops, warned
     best = picked.best
     losses = losses_at_worst(best, lens)
+    between = between_marks(best, candidates, station, camera, outlook)
+    refocus = None
+    if lens is not None and best.meets_need:
+        refocus = best_refocus(lens, best.index, best.f_number, outlook.places, best.blur, station)
     recommendation = Recommendation(
         stop=best.evidence.stop,
         exposure_ms=best.setting.exposure_ms,
@@ -59,7 +66,7 @@ def choose(
         limited_by=limited_by(picked, candidates, lens),
         chance_best=best.chance_best,
         optimum_f_number=optimum,
-        reasons=reasons(picked, candidates, station, losses, between_marks(best, candidates, station, camera, outlook)),
+        reasons=reasons(picked, candidates, station, losses, between, refocus),
         shortfalls=() if best.meets_need else shortfalls(picked, candidates, station, camera, outlook, lens),
     )
     return recommendation, stops, warned

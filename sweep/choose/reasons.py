@@ -9,12 +9,14 @@ from sweep.choose.candidates import Candidate, Pick
 from sweep.choose.causes import ruled_out
 from sweep.choose.chances import TIE
 from sweep.choose.evidence import Cause, Outlook
+from sweep.choose.focus import Refocus
 from sweep.choose.settings import exposure_limit_ms, motion_limit_ms, ripple_left, setting_for
 from sweep.choose.wording import at_least, chance, listed, number
 from sweep.result import CameraNoise, Note
 from sweep.station import Station
 
 _RETAKE_LEVEL = 0.7  # of full scale: bright without clipping (common practice, no source)
+_WORTH_REFOCUSING = 0.05  # gain in worst contrast from which a better focus is named
 _GIVEN_WAY = 0.99  # of the wanted level: what is said
 _COST = {
     "depth": "defocus, since the targets lie at different depths or off the plane of focus",
@@ -30,6 +32,7 @@ def reasons(
     station: Station,
     losses: dict[Cause, float],
     between: Between | None,
+    refocus: Refocus | None,
 ) -> tuple[str, ...]:
     """Why this stop and this setting, in the order in which one would ask."""
     found = _why_this_stop(picked, station)
@@ -47,6 +50,11 @@ def reasons(
             f"A ring that can stand between marks does better {between.way} from {between.wider} to {between.narrower} "
             f"(f/{between.f_number:.3g}, {between.light:.2f} of the light at {between.wider}): "
             f"{number(100 * between.gain)} % more contrast{sure}."
+        )
+    if refocus is not None and refocus.contrast > (1 + _WORTH_REFOCUSING) * picked.best.contrast:
+        way = f"{number(abs(refocus.shift_mm))} mm {'farther from' if refocus.shift_mm > 0 else 'nearer to'} the camera"
+        found.append(
+            f"The focus would serve these depths best {way}: {picked.best.name} would then reach {refocus.contrast:.3f}."
         )
     return tuple(found)
 
