@@ -371,3 +371,29 @@ def test_a_longer_exposure_allowed_never_lowers_the_contrast(contrast, limit_ms,
 @given(CONTRASTS)
 def test_the_same_input_gives_the_same_answer(contrast):
     assert a_choice(contrast) == a_choice(contrast)
+
+
+def test_chances_mean_what_they_say():
+    # Repeated sampling: of many sweeps with known truth and known errors, a share equal to the mean chance must be
+    # right (frequency interpretation of probability; tolerance 3 binomial standard deviations), and no more than
+    # 1 - confidence of the passes may be false.
+    rng = np.random.default_rng(11)
+    station = a_station(max_exposure_ms=500.0, contrast=0.5)
+    stops = (2.8, 4.0, 5.6)
+    u, n = 0.01, 500
+    chances, right, passes, false_passes = [], 0, 0, 0
+    for _ in range(n):
+        truth = np.repeat(rng.uniform(0.45, 0.55, (3, 1)), 3, axis=1) + rng.uniform(0, 0.2, (3, 3))
+        truth[:, 0] = rng.uniform(0.47, 0.53, 3)
+        measured = truth + u * rng.standard_normal((3, 3))
+        draws = measured + u * rng.standard_normal((400, 3, 3))
+        found, _, _ = choose(station, some_evidence(stops), CAMERA, Outlook(places_of(station), measured, draws), None)
+        worst = truth.min(axis=1)
+        picked = worst[stops.index(found.stop)]
+        chances.append(found.chance_best)
+        right += picked >= 0.99 * worst.max()
+        passes += found.meets_need
+        false_passes += found.meets_need and picked < 0.5
+    assert abs(right / n - np.mean(chances)) < 3 * math.sqrt(0.25 / n)
+    assert passes > 50
+    assert false_passes <= 0.05 * passes

@@ -211,7 +211,7 @@ def _refocus(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -
             f"Move the plane of focus by {way} the camera: {name} then reaches {top.contrast:.3f} at the worst target "
             "and meets the need.",
         )
-    if top.contrast > (1 + TIE) * picked.best.contrast:
+    if top.contrast > (1 + TIE) * top.unmoved:
         return _Cure(False, f"refocusing ({top.contrast:.3f} at {name}, {way} the camera)")
     return _Cure(False, "refocusing (the focus is where it is best for these depths)")
 

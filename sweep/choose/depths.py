@@ -3,8 +3,8 @@
 A feature is detected where its contrast-to-noise ratio over its own area reaches 5: the criterion of Rose (The
 sensitivity performance of the human eye on an absolute scale, J. Opt. Soc. Am. 38, 196-208, 1948; the value 5 is from
 memory). A bar of width w and of the part's own contrast c (Michelson) differs from its gap by 2 c T / (1 + c) of the
-light tone, T the transfer at 1 / (2 w); the noise of its w x w area is that of one pixel at the light tone over its width
-in pixels.
+light tone, T the transfer at 1 / (2 w); the noise of its w x w area is that of one pixel at the light tone over its
+width in pixels.
 """
 
 import math

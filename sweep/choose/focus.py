@@ -16,11 +16,15 @@ _WAVES = 4.0  # of defocus, looked at beyond the span of the depths
 
 @dataclass(frozen=True, slots=True)
 class Refocus:
-    """A shift of the plane of focus at the object, positive = away from the camera, and the worst contrast there."""
+    """A shift of the plane of focus at the object, positive = away from the camera, and what it gives.
+
+    `contrast` is the model's worst contrast there, `unmoved` the model's worst contrast with the focus as it is.
+    """
 
     stop_index: int
     shift_mm: float
     contrast: float
+    unmoved: float
 
 
 def best_refocus(
@@ -49,8 +53,9 @@ def best_refocus(
     fine = minimize_scalar(
         lambda s: -worst(float(s)), bounds=(low, high), method="bounded", options={"xatol": reach / 2000}
     )
-    best = max(((-float(fine.fun), float(fine.x)), (coarse[top], float(shifts[top])), (worst(0.0), 0.0)))
-    return Refocus(stop_index, best[1], best[0])
+    unmoved = worst(0.0)
+    contrast, shift = max((-float(fine.fun), float(fine.x)), (coarse[top], float(shifts[top])), (unmoved, 0.0))
+    return Refocus(stop_index, shift, contrast, unmoved)
 
 
 def _reach_mm(f_number: float, places: Sequence[Place], station: Station) -> float:

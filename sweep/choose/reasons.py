@@ -51,11 +51,9 @@ def reasons(
             f"(f/{between.f_number:.3g}, {between.light:.2f} of the light at {between.wider}): "
             f"{number(100 * between.gain)} % more contrast{sure}."
         )
-    if refocus is not None and refocus.contrast > (1 + _WORTH_REFOCUSING) * picked.best.contrast:
+    if refocus is not None and refocus.contrast > (1 + _WORTH_REFOCUSING) * refocus.unmoved:
         way = f"{number(abs(refocus.shift_mm))} mm {'farther from' if refocus.shift_mm > 0 else 'nearer to'} the camera"
-        found.append(
-            f"The focus would serve these depths best {way}: {picked.best.name} would then reach {refocus.contrast:.3f}."
-        )
+        found.append(f"The focus would serve these depths best {way}: {refocus.contrast:.3f} at {picked.best.name}.")
     return tuple(found)
 
 
