@@ -1,0 +1,468 @@
+"""Readings -> lens model: one least-squares fit over the profiles of all stops, targets and patches.
+
+Edges enter with their spread functions, stars and bars with their amplitudes, the light with each ring position's
+f-number. Levels, position and light gradient of an edge are linear and are projected out (variable projection, Golub and
+Pereyra, SIAM J. Numer. Anal. 10, 413-432, 1973); the scale of a star or bar print is a parameter of its own. Weak priors
+keep small what is small in a sound lens. The solver is scipy's trust-region least squares with the derivatives given.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import least_squares
+
+from sweep.lens import Bench, Pupil, lens_transfer, lens_transfer_derivatives, pixel_box
+from sweep.measure.linear import Floats
+from sweep.measure.mtf import Transfer
+
+NODES = 44
+HIGHEST_CY_PX = 2.0
+MARK_TOLERANCE = 0.03
+"""Relative standard deviation of an engraved f-number (ISO 517 tolerances are of this order; value from memory)."""
+
+
+@dataclass(frozen=True, slots=True)
+class View:
+    """One stop seen through one patch: which stop and target, and the direction of the frequencies (None: all)."""
+
+    stop: int
+    target: int
+    direction_deg: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class EdgeData:
+    """A spread function to be met: distances (px), values, u, all (m,), and the light-gradient column.
+
+    `width_px`: (m,) of the bins; `ratio` with `ratio_u`: dark over light level of the print, common to the patch's
+    stops; `transfer`: the reading's own, for a first look.
+    """
+
+    view: View
+    distance_px: Floats
+    width_px: Floats
+    value: Floats
+    u: Floats
+    gradient: Floats
+    ratio: float
+    ratio_u: float
+    transfer: Transfer
+
+
+@dataclass(frozen=True, slots=True)
+class AmplitudeData:
+    """Modulation at frequencies (m,) cycles per pixel, up to a scale that belongs to print `scale` (an index)."""
+
+    view: View
+    v_cy_px: Floats
+    value: Floats
+    u: Floats
+    scale: int
+
+
+@dataclass(frozen=True, slots=True)
+class StopLight:
+    """What the light says of the stops, (k,): f-numbers on the scale where the reference stop is as engraved, and u of ln N."""
+
+    f_number: Floats
+    ln_u: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class LensFit:
+    """The fitted lens.
+
+    `theta`: parameters by `names`, `covariance` of them (already widened where the model does not describe the data),
+    `reduced_chi2` of the data, `misfit`: reduced chi-square of each data block, in their order.
+    """
+
+    bench: Bench
+    depths_mm: Floats
+    light: StopLight
+    names: tuple[str, ...]
+    theta: Floats
+    covariance: Floats
+    reduced_chi2: float
+    misfit: Floats
+    rivals: tuple[tuple[float, Floats], ...] = ()
+
+    def value(self, name: str) -> tuple[float, float]:
+        """A parameter and its u."""
+        i = self.names.index(name)
+        return float(self.theta[i]), float(np.sqrt(self.covariance[i, i]))
+
+
+FIRST_NAMES = ("focus", "w040", "w060", "blur2", "mark", "colour")
+
+
+@dataclass(frozen=True, slots=True)
+class Problem:
+    """All data of one sweep. `names` and `prior` (mean, standard deviation) give the parameters in their order.
+
+    focus: depth (mm) of paraxial focus; w040, w060: waves at the widest stop; blur2: sensor blur squared (px^2); mark:
+    ln of the true over the engraved f-number of the reference stop; colour: waves of defocus at the widest stop for each
+    standard deviation of the spectrum; ring K: what remains of ln N at stop K beside the light; shift T, astigmatism T:
+    of target T's focus (mm); scale S: ln of a print's scale.
+    """
+
+    bench: Bench
+    depths_mm: Floats
+    light: StopLight
+    edges: tuple[EdgeData, ...]
+    amplitudes: tuple[AmplitudeData, ...]
+    names: tuple[str, ...]
+    prior: tuple[tuple[float, float], ...]
+
+    @classmethod
+    def of(
+        cls,
+        bench: Bench,
+        depths_mm: Floats,
+        light: StopLight,
+        edges: Sequence[EdgeData],
+        amplitudes: Sequence[AmplitudeData],
+    ) -> "Problem":
+        """The problem with its parameters and priors; a target's own focus may wander by a part of a wave, wide open."""
+        widest = float(light.f_number.min())
+        step = 1e-3 * bench.focal_length_mm / bench.magnification
+        at = float(np.mean(depths_mm))
+        per_mm = abs(float(bench.w020_waves(np.array(widest), np.array(at + step), at)) / step)
+        wander = OWN_FOCUS_WAVES / per_mm
+        names = [*FIRST_NAMES]
+        prior = [(at, 1e3 * wander), (0.0, 3.0), (0.0, 0.5), (0.09, 0.15), (0.0, MARK_TOLERANCE), (0.0, 0.3)]
+        for k, u in enumerate(light.ln_u):
+            names.append(f"ring {k}")
+            prior.append((0.0, float(u)))
+        for t in range(len(depths_mm)):
+            names += [f"shift {t}", f"astigmatism {t}"]
+            prior += [(0.0, wander), (0.0, wander)]
+        for k in sorted({a.scale for a in amplitudes}):
+            names.append(f"scale {k}")
+            prior.append((0.0, 3.0))
+        return cls(bench, depths_mm, light, tuple(edges), tuple(amplitudes), tuple(names), tuple(prior))
+
+    @property
+    def views(self) -> tuple[View, ...]:
+        """The views of all data blocks: edges first, then amplitudes."""
+        return (*(e.view for e in self.edges), *(a.view for a in self.amplitudes))
+
+
+OWN_FOCUS_WAVES = 0.3
+
+
+class Optics:
+    """The pupil as the parameters say, for a list of views, with the pupil's derivatives."""
+
+    def __init__(self, problem_or_fit: "Problem | LensFit", views: Sequence[View], extra_depth_mm: Floats | None = None) -> None:
+        self.bench = problem_or_fit.bench
+        self.names = problem_or_fit.names
+        self.stop = np.array([v.stop for v in views], dtype=int)
+        self.target = np.array([v.target for v in views], dtype=int)
+        direction = np.array([0.0 if v.direction_deg is None else np.cos(2.0 * np.radians(v.direction_deg)) for v in views])
+        self.twist = direction
+        self.ln_light = np.log(problem_or_fit.light.f_number)[self.stop]
+        self.widest = float(problem_or_fit.light.f_number.min())
+        depths = problem_or_fit.depths_mm
+        self.depth = np.where(self.target >= 0, depths[np.maximum(self.target, 0)], 0.0) if extra_depth_mm is None else extra_depth_mm
+        self.index = {name: i for i, name in enumerate(self.names)}
+
+    def pupil(self, theta: Floats) -> Pupil:
+        """The pupil of each view at parameters theta."""
+        n = np.exp(self.ln_f_number(theta))
+        ratio = self.widest / n
+        return Pupil(
+            n,
+            self.bench.w020_waves(n, self.depth + self._own_focus(theta), theta[0]),
+            theta[1] * ratio**4,
+            theta[2] * ratio**6,
+            theta[5] * ratio**2,
+        )
+
+    def ln_f_number(self, theta: Floats) -> Floats:
+        """ln of each view's true f-number."""
+        ring = np.array([theta[self.index[f"ring {k}"]] if k >= 0 else 0.0 for k in self.stop])
+        return np.asarray(self.ln_light + theta[4] + ring)
+
+    def _own_focus(self, theta: Floats) -> Floats:
+        shift = np.array([theta[self.index[f"shift {t}"]] if t >= 0 else 0.0 for t in self.target])
+        twist = np.array([theta[self.index[f"astigmatism {t}"]] if t >= 0 else 0.0 for t in self.target])
+        return np.asarray(shift + self.twist * twist)
+
+    def slopes(self, theta: Floats, pupil: Pupil) -> dict[int, tuple[Floats, ...]]:
+        """By parameter index: derivatives of (w020, w040, w060, colour, ln N) of every view, each (views,)."""
+        ratio = self.widest / pupil.f_number
+        none = np.zeros(len(self.stop))
+        h = 1e-4 * (self.bench.focal_length_mm / self.bench.magnification)
+        own = self.depth + self._own_focus(theta)
+        by_depth = (self.bench.w020_waves(pupil.f_number, own + h, theta[0]) - pupil.w020) / h
+        by_focus = (self.bench.w020_waves(pupil.f_number, own, theta[0] + h) - pupil.w020) / h
+        by_ln = (-2.0 * pupil.w020, -4.0 * pupil.w040, -6.0 * pupil.w060, -2.0 * pupil.colour, none + 1.0)
+        out: dict[int, tuple[Floats, ...]] = {
+            0: (by_focus, none, none, none, none),
+            1: (none, ratio**4, none, none, none),
+            2: (none, none, ratio**6, none, none),
+            4: by_ln,
+            5: (none, none, none, ratio**2, none),
+        }
+        for name, i in self.index.items():
+            word, _, number = name.partition(" ")
+            if word == "ring":
+                out[i] = tuple(np.where(self.stop == int(number), c, 0.0) for c in by_ln)
+            elif word in ("shift", "astigmatism"):
+                mine = np.where(self.target == int(number), by_depth, 0.0)
+                out[i] = (mine if word == "shift" else mine * self.twist, none, none, none, none)
+        return out
+
+
+class Nodes:
+    """Chebyshev nodes in frequency for each view, and what the camera does there."""
+
+    def __init__(self, bench: Bench, views: Sequence[View], f_number: Floats, count: int = NODES) -> None:
+        grid = 0.5 * (1.0 - np.cos(np.pi * np.arange(count) / (count - 1)))
+        top = np.minimum(HIGHEST_CY_PX, 1.03 * bench.cutoff_cy_px(f_number))
+        self.top = top
+        self.v = top[:, None] * grid
+        self.box = np.stack([pixel_box(v, view.direction_deg) for v, view in zip(self.v, views, strict=True)])
+        basis = np.polynomial.chebyshev.chebvander(2.0 * grid - 1.0, count - 1)
+        self.to_coefficients = np.linalg.inv(basis)
+
+    def interpolation(self, row: int, v: Floats) -> Floats:
+        """Matrix (m, nodes) that gives values at frequencies v from those at view `row`'s nodes; nothing beyond the last."""
+        inside = np.clip(2.0 * v / self.top[row] - 1.0, -1.0, 1.0)
+        matrix = np.polynomial.chebyshev.chebvander(inside, self.v.shape[1] - 1) @ self.to_coefficients
+        return np.asarray(np.where((v <= self.top[row])[:, None], matrix, 0.0))
+
+
+def transfer(optics: Optics, nodes: Nodes, theta: Floats) -> Floats:
+    """Signed transfer of lens and camera (views, nodes)."""
+    blur = np.exp(-2.0 * np.pi**2 * theta[3] * nodes.v**2)
+    return np.asarray(lens_transfer(optics.bench, optics.pupil(theta), nodes.v) * nodes.box * blur)
+
+
+def transfer_slopes(optics: Optics, nodes: Nodes, theta: Floats) -> tuple[Floats, Floats]:
+    """The transfer (views, nodes) and its derivatives (parameters, views, nodes)."""
+    pupil = optics.pupil(theta)
+    value, *by = lens_transfer_derivatives(optics.bench, pupil, nodes.v)
+    camera = nodes.box * np.exp(-2.0 * np.pi**2 * theta[3] * nodes.v**2)
+    slopes = np.zeros((len(theta), *value.shape))
+    for i, factors in optics.slopes(theta, pupil).items():
+        for slope, factor in zip(by, factors, strict=True):
+            if factor.any():
+                slopes[i] += slope * factor[:, None]
+    slopes *= camera
+    slopes[3] = -2.0 * np.pi**2 * nodes.v**2 * value * camera
+    return value * camera, slopes
+
+
+class _Residuals:
+    """Residuals and Jacobian of the whole problem, evaluated once for each parameter vector."""
+
+    def __init__(self, problem: Problem, theta: Floats) -> None:
+        self.problem = problem
+        views = problem.views
+        self.optics = Optics(problem, views)
+        self.nodes = Nodes(problem.bench, views, np.exp(self.optics.ln_f_number(theta)))
+        self.edge_matrices = [self._edge_matrix(i, e) for i, e in enumerate(problem.edges)]
+        first = len(problem.edges)
+        self.amplitude_matrices = [self.nodes.interpolation(first + i, a.v_cy_px) for i, a in enumerate(problem.amplitudes)]
+        self.widen = np.ones(len(views))
+        self._at: Floats | None = None
+        self._kept: tuple[Floats, Floats, list[slice]] = (np.zeros(0), np.zeros((0, 0)), [])
+
+    def _edge_matrix(self, row: int, edge: EdgeData) -> Floats:
+        """Matrix (m, nodes) from the transfer to the spread function less one half: the integral of M sin(2 pi v d) / (pi v)."""
+        reach = float(np.abs(edge.distance_px).max())
+        count = int(64 + 5.0 * self.nodes.top[row] * reach)
+        x, w = np.polynomial.legendre.leggauss(count)
+        v = 0.5 * (x + 1.0) * self.nodes.top[row]
+        weight = 0.5 * w * self.nodes.top[row] / (np.pi * v)
+        wave = np.sin(2.0 * np.pi * np.outer(edge.distance_px, v)) * np.sinc(np.outer(edge.width_px, v)) * weight
+        return np.asarray(wave @ self.nodes.interpolation(row, v))
+
+    def __call__(self, theta: Floats) -> Floats:
+        return self._evaluate(theta)[0]
+
+    def jacobian(self, theta: Floats) -> Floats:
+        return self._evaluate(theta)[1]
+
+    def blocks(self, theta: Floats) -> list[slice]:
+        """Which rows belong to each view."""
+        return self._evaluate(theta)[2]
+
+    def forget(self) -> None:
+        """To be called after `widen` has changed."""
+        self._at = None
+
+    def _evaluate(self, theta: Floats) -> tuple[Floats, Floats, list[slice]]:
+        if self._at is not None and np.array_equal(self._at, theta):
+            return self._kept
+        value, slopes = transfer_slopes(self.optics, self.nodes, theta)
+        rows: list[Floats] = []
+        jacobians: list[Floats] = []
+        blocks: list[slice] = []
+        start = 0
+        for i, edge in enumerate(self.problem.edges):
+            r, j = _edge_rows(edge, self.edge_matrices[i], value[i], slopes[:, i].T, self.widen[i])
+            rows.append(r)
+            jacobians.append(j)
+            blocks.append(slice(start, start + len(r)))
+            start += len(r)
+        first = len(self.problem.edges)
+        for i, block in enumerate(self.problem.amplitudes):
+            matrix = self.amplitude_matrices[i]
+            at = self.optics.index[f"scale {block.scale}"]
+            scale, u = np.exp(theta[at]), block.u * self.widen[first + i]
+            model = scale * (matrix @ value[first + i])
+            j = scale * (matrix @ slopes[:, first + i].T)
+            j[:, at] += model
+            rows.append((model - block.value) / u)
+            jacobians.append(j / u[:, None])
+            blocks.append(slice(start, start + len(u)))
+            start += len(u)
+        mean, deviation = np.array(self.problem.prior).T
+        rows.append((theta - mean) / deviation)
+        jacobians.append(np.diag(1.0 / deviation))
+        self._at = theta.copy()
+        self._kept = (np.concatenate(rows), np.vstack(jacobians), blocks)
+        return self._kept
+
+
+def _edge_rows(edge: EdgeData, matrix: Floats, value: Floats, slopes: Floats, widen: float) -> tuple[Floats, Floats]:
+    """Residuals (m + 1,) and Jacobian (m + 1, parameters) of one edge, levels, position and gradient projected out.
+
+    The last row holds the print's dark over light ratio. The Jacobian is Kaufman's (BIT 15, 49-57, 1975).
+    """
+    u = edge.u * widen
+    rise = matrix @ value
+    columns = np.column_stack([np.ones_like(rise), rise, np.gradient(rise, edge.distance_px), edge.gradient]) / u[:, None]
+    light = float(edge.value.max())
+    tie = np.array([1.0 - edge.ratio, -0.5 * (1.0 + edge.ratio), 0.0, 0.0]) / (edge.ratio_u * light)
+    stacked = np.vstack([columns, tie])
+    norm = np.linalg.norm(stacked, axis=0)
+    q, r = np.linalg.qr(stacked / norm)
+    data = np.append(edge.value / u, 0.0)
+    part = q.T @ data
+    solved = np.linalg.solve(r, part) / norm
+    change = np.vstack([solved[1] * (matrix @ slopes) / u[:, None], np.zeros(slopes.shape[1])])
+    change[-1] = 0.0
+    return q @ part - data, change - q @ (q.T @ change)
+
+
+def fit_lens(problem: Problem) -> LensFit:
+    """Fit the lens to all data at once, from the best of several starts.
+
+    Raises ValueError with no data. The covariance is widened by the reduced chi-square where that exceeds 1.
+    """
+    if not problem.views:
+        raise ValueError("nothing to fit: no edge and no amplitude")
+    best: LensFit | None = None
+    rivals: list[tuple[float, LensFit]] = []
+    for start in _starts(problem):
+        fitted, cost = _solve(problem, start)
+        rivals.append((cost, fitted))
+    rivals.sort(key=lambda pair: pair[0])
+    best_cost, best = rivals[0]
+    others = tuple((cost - best_cost, f.theta) for cost, f in rivals[1:] if cost - best_cost < 6.0 and _differs(best, f))
+    return LensFit(
+        best.bench, best.depths_mm, best.light, best.names, best.theta, best.covariance, best.reduced_chi2, best.misfit, others
+    )
+
+
+def _differs(one: LensFit, other: LensFit) -> bool:
+    return bool(abs(one.theta[0] - other.theta[0]) > 2.0 * np.sqrt(one.covariance[0, 0]))
+
+
+def _solve(problem: Problem, start: Floats) -> tuple[LensFit, float]:
+    """Fit from one start; blocks that fit far worse than the rest lose weight, once. Returns the fit and its chi-square."""
+    residuals = _Residuals(problem, start)
+    deviation = np.array(problem.prior)[:, 1]
+    scale = np.minimum(deviation, 1.0)
+    theta = start
+    for turn in range(2):
+        found = least_squares(residuals, theta, jac=residuals.jacobian, method="trf", x_scale=scale, ftol=1e-9, xtol=1e-9, gtol=1e-9, max_nfev=60)
+        theta = found.x
+        r, _, blocks = residuals._evaluate(theta)
+        misfit = np.array([float(np.sum(r[b] ** 2)) / max(b.stop - b.start - 4, 1) for b in blocks])
+        if turn == 0:
+            usual = max(1.0, float(np.median(misfit)))
+            residuals.widen = np.sqrt(np.maximum(1.0, misfit / (2.5 * usual)))
+            if (residuals.widen == 1.0).all():
+                break
+            residuals.forget()
+    r, jacobian, blocks = residuals._evaluate(theta)
+    rows = blocks[-1].stop
+    free = rows - 4 * len(problem.edges) - 6
+    chi2 = float(np.sum(r[:rows] ** 2)) / max(free, 1)
+    data, prior = jacobian[:rows], jacobian[rows:]
+    covariance = np.linalg.inv(data.T @ data / max(1.0, chi2) + prior.T @ prior)
+    fitted = LensFit(problem.bench, problem.depths_mm, problem.light, problem.names, theta, covariance, chi2, misfit)
+    return fitted, float(np.sum(r**2)) / max(1.0, chi2)
+
+
+def _starts(problem: Problem) -> list[Floats]:
+    """Starting points: the best minima of a grid over focus and spherical aberration, by a coarse look at the readings."""
+    theta = np.array([mean for mean, _ in problem.prior])
+    views, v, value, weight, scale = _coarse_look(problem)
+    optics = Optics(problem, views)
+    bench = problem.bench.of_one_wavelength()
+    camera = np.exp(-2.0 * np.pi**2 * theta[3] * v**2) * np.sinc(v)
+    low, high = float(problem.depths_mm.min()), float(problem.depths_mm.max())
+    deep = problem.prior[problem.names.index("shift 0")][1] / OWN_FOCUS_WAVES
+    reach = max(high - low, 6.0 * deep)
+    focus_grid = np.linspace(low - 0.6 * reach, high + 0.6 * reach, 61)
+    cost = np.zeros((len(focus_grid), len(START_W040)))
+    for i, focus in enumerate(focus_grid):
+        for j, w040 in enumerate(START_W040):
+            theta[0], theta[1] = focus, w040
+            pupil = optics.pupil(theta)
+            clipped = replace(pupil, w020=np.clip(pupil.w020, -8.0, 8.0))
+            cost[i, j] = _coarse_cost(lens_transfer(bench, clipped, v) * camera, value, weight, scale)
+    order = np.argsort(cost, axis=None)
+    starts: list[Floats] = []
+    for flat in order:
+        i, j = np.unravel_index(flat, cost.shape)
+        lower = cost[max(i - 1, 0) : i + 2, max(j - 1, 0) : j + 2].min() >= cost[i, j]
+        if lower:
+            start = theta.copy()
+            start[0], start[1], start[5] = focus_grid[i], START_W040[j], START_COLOUR
+            starts.append(start)
+        if len(starts) == MOST_STARTS:
+            break
+    return starts
+
+
+START_W040 = (-1.5, -0.5, 0.0, 0.5, 1.0, 2.0)
+MOST_STARTS = 3
+START_COLOUR = 0.1
+"""Not zero: there the transfer has no slope in it."""
+
+
+def _coarse_look(problem: Problem) -> tuple[list[View], Floats, Floats, Floats, NDArray[np.intp]]:
+    """A few frequencies of every reading: views, frequencies, values, weights (views, 6), and the print's scale or -1."""
+    part = np.array([0.06, 0.12, 0.2, 0.3, 0.42, 0.6])
+    views: list[View] = []
+    rows: list[tuple[Floats, Floats, Floats, int]] = []
+    for edge in problem.edges:
+        v = part * min(0.5, float(problem.bench.cutoff_cy_px(problem.light.f_number[edge.view.stop])))
+        at = edge.transfer
+        u = np.hypot(np.interp(v, at.v_cy_px, at.u), 0.03)
+        views.append(edge.view)
+        rows.append((v, np.interp(v, at.v_cy_px, at.value), 1.0 / u**2, -1))
+    for block in problem.amplitudes:
+        pick = np.linspace(0, len(block.v_cy_px) - 1, len(part)).round().astype(int)
+        views.append(block.view)
+        rows.append((block.v_cy_px[pick], block.value[pick], 1.0 / np.hypot(block.u[pick], 0.03) ** 2, block.scale))
+    stacked = [np.stack(c) for c in zip(*[(v, m, w) for v, m, w, _ in rows], strict=True)]
+    return views, stacked[0], stacked[1], stacked[2], np.array([scale for *_, scale in rows])
+
+
+def _coarse_cost(model: Floats, value: Floats, weight: Floats, scale: NDArray[np.intp]) -> float:
+    """Weighted squares of readings less model, each print's scale at its best."""
+    total = float(np.sum((weight * (model - value) ** 2)[scale < 0]))
+    for k in np.unique(scale[scale >= 0]):
+        m, y, w = model[scale == k], value[scale == k], weight[scale == k]
+        factor = max(float(np.sum(w * m * y)) / max(float(np.sum(w * m * m)), 1e-12), 0.0)
+        total += float(np.sum(w * (factor * m - y) ** 2))
+    return total
