@@ -213,7 +213,7 @@ def _refocus(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -
         )
     if top.contrast > (1 + TIE) * top.unmoved:
         return _Cure(False, f"refocusing ({top.contrast:.3f} at {name}, {way} the camera)")
-    return _Cure(False, "refocusing (the focus is where it is best for these depths)")
+    return _Cure(False, "refocusing (the focus is best where it is)" if top.contrast > 0 else "refocusing")
 
 
 def _better_lens(picked: Pick, station: Station, outlook: Outlook, lens: LensView) -> _Cure:
