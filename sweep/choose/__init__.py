@@ -47,6 +47,8 @@ def choose(
         raise ValueError(f"{len(evidence)} stops of evidence, {outlook.contrast.shape[0]} rows of contrast")
     candidates = candidates_of(station, evidence, camera, outlook)
     stops = tuple(as_stop(c) for c in candidates)
+    # From here on widest first, so that nothing hangs on the order of the input.
+    candidates = tuple(sorted(candidates, key=lambda c: (c.f_number, c.evidence.stop)))
     optimum = optimum_f_number(outlook)
     picked = pick(candidates)
     warned = notes(picked, candidates, station, camera, outlook)

@@ -75,13 +75,15 @@ def rises_outward(outlook: Outlook, f_number: float, narrower: bool) -> bool:
 def between_marks(
     best: Candidate, candidates: Sequence[Candidate], station: Station, camera: CameraNoise, outlook: Outlook
 ) -> Between | None:
-    """A position between the best mark and a neighbour, within the limits, that beats the mark by more than a tie."""
+    """A position between the best mark and a neighbour, within the limits, that beats the mark by more than a tie.
+
+    `candidates` come widest first.
+    """
     grid, curve = outlook.curve_f_numbers, outlook.curve
     if grid is None or curve is None or best.evidence.tone_per_ms is None:
         return None
-    marks = sorted(candidates, key=lambda c: c.f_number)
-    place = next(k for k, c in enumerate(marks) if c.index == best.index)
-    near = marks[max(place - 1, 0) : place + 2]
+    place = next(k for k, c in enumerate(candidates) if c.index == best.index)
+    near = candidates[max(place - 1, 0) : place + 2]
     inside = np.flatnonzero((grid > near[0].f_number) & (grid < near[-1].f_number))
     settings = {int(k): _setting_at(float(grid[k]), best, station, camera) for k in inside}
     kept = [k for k, setting in settings.items() if not setting.fails]

@@ -80,8 +80,8 @@ def candidates_of(
 
 
 def pool_of(candidates: Sequence[Candidate]) -> tuple[Candidate, ...]:
-    """The readable stops that keep exposure, gain and noise, widest first; where there are none, all readable ones."""
-    readable = tuple(sorted((c for c in candidates if c.readable), key=lambda c: c.f_number))
+    """The readable stops that keep exposure, gain and noise; where there are none, all readable ones."""
+    readable = tuple(c for c in candidates if c.readable)
     return tuple(c for c in readable if not c.setting.fails) or readable
 
 
@@ -101,7 +101,6 @@ def pick(candidates: Sequence[Candidate]) -> Pick | None:
     likely = max(c.chance_meets or 0.0 for c in held)
     likeliest = [c for c in held if (c.chance_meets or 0.0) >= likely - CHANCE_ALIKE]
     best = min(likeliest, key=_by_exposure)
-    tied.sort(key=lambda c: c.f_number)
     return Pick(best, pool, tuple(c for c in tied if c is not best))
 
 

@@ -303,9 +303,8 @@ def _proof(best: Candidate, station: Station) -> str:
 
 def _near(picked: Pick) -> list[Candidate]:
     """The chosen stop and its neighbours in the pool, two to each side."""
-    marks = sorted(picked.pool, key=lambda c: c.f_number)
-    place = next(k for k, c in enumerate(marks) if c.index == picked.best.index)
-    return marks[max(place - 2, 0) : place + 3]
+    place = next(k for k, c in enumerate(picked.pool) if c.index == picked.best.index)
+    return list(picked.pool[max(place - 2, 0) : place + 3])
 
 
 def _worst(

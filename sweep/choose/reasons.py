@@ -64,7 +64,7 @@ def notes(
     camera: CameraNoise,
     outlook: Outlook,
 ) -> tuple[Note, ...]:
-    """The warnings of the choice."""
+    """The warnings of the choice; `candidates` come widest first."""
     found = _retakes(picked, candidates, station, camera)
     found += _short_of_ripple(candidates, station)
     if picked is not None:
@@ -224,9 +224,7 @@ def _short_of_ripple(candidates: Sequence[Candidate], station: Station) -> list[
     short = [c for c in candidates if c.setting.exposure_ms is not None and not c.setting.by_ripple]
     if not short:
         return []
-    told = listed(
-        [f"{c.name} ({number(c.setting.exposure_ms or 0)} ms)" for c in sorted(short, key=lambda c: c.f_number)]
-    )
+    told = listed([f"{c.name} ({number(c.setting.exposure_ms or 0)} ms)" for c in short])
     left = max(ripple_left(hz, c.setting.exposure_ms or 0) for c in short)
     return [
         Note(
@@ -256,11 +254,10 @@ def _level_given_way(best: Candidate, station: Station) -> list[Note]:
 
 def _outside(picked: Pick, candidates: Sequence[Candidate], station: Station, outlook: Outlook) -> list[Note]:
     """The best stop is the first or last of the sweep, and the model still rises beyond it."""
-    marks = sorted(candidates, key=lambda c: c.f_number)
     best = picked.best
     found = []
-    for end, narrower in ((marks[0], False), (marks[-1], True)):
-        if end.index != best.index or len(marks) < 2 or not rises_outward(outlook, best.f_number, narrower):
+    for end, narrower in ((candidates[0], False), (candidates[-1], True)):
+        if end.index != best.index or len(candidates) < 2 or not rises_outward(outlook, best.f_number, narrower):
             continue
         ring = station.lens.stops
         further = [s for s in ring if (s > best.evidence.stop) == narrower and s != best.evidence.stop]
