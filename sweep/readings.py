@@ -265,6 +265,8 @@ def measure_patch(stop: float, site: PatchSite, slots: Sequence[_Slot], station:
     if site.spec.kind == "edge" and "low-signal" not in why:
         edge = read_edge(site.sites.x, site.sites.y, light, valid if sound else None, weights)
         why += edge.why_not
+        if edge.frame_level is not None:
+            frame_light = edge.frame_level * float(np.average(frame_light, weights=weights))
     full = np.average(np.stack([s.full / s.light_unit for s in used]), axis=0, weights=weights)
     base = Sighting(
         stop, site, not why, tuple(why), clipped, sum(s.count for s in used),

@@ -87,7 +87,7 @@ class EdgeMeasure:
     `dark`, `light`: levels far from the edge, unit of the samples; `angle_deg`: tilt from the nearest axis;
     `spread_px`: 10 to 90 % width; `shift_px`: (n,) of each frame along the normal, each with `shift_u_px`;
     `ragged_px`: rms wander of the print's edge beyond the curve; `bend_px`: how far the curve bows from end to end;
-    `overshoot`: by which the spread function leaves its levels near the edge, part of the step, dark and light.
+    `frame_level`: (n,) of each frame against the mean level of its samples; `overshoot`: by which the spread function leaves its levels near the edge, part of the step, dark and light.
     """
 
     ok: bool
@@ -104,6 +104,7 @@ class EdgeMeasure:
     bend_px: float = 0.0
     overshoot: tuple[float, float] = (0.0, 0.0)
     curve: EdgeCurve | None = None
+    frame_level: Floats | None = None
 
 
 def read_edge(x: Floats, y: Floats, values: Floats, valid: Bools | None = None, weights: Floats | None = None) -> EdgeMeasure:
@@ -127,7 +128,8 @@ def read_edge(x: Floats, y: Floats, values: Floats, valid: Bools | None = None, 
     line = _find_edge(x, y, mean)
     if line is None:
         return EdgeMeasure(False, ("edge-not-found",))
-    return _fit_edge(x, y, frames, good, mean, line)
+    found = _fit_edge(x, y, frames, good, mean, line)
+    return found if found.frame_level is None else replace(found, frame_level=found.frame_level * level)
 
 
 def _frame_levels(values: Floats, good: Bools) -> Floats | None:
@@ -341,11 +343,21 @@ def _fit_edge(x: Floats, y: Floats, frames: Floats, good: Bools, mean: Floats, c
     angle = float(np.degrees(np.arccos(state.curve.tilt)))
     if not ANGLE_RANGE_DEG[0] <= angle <= ANGLE_RANGE_DEG[1]:
         return EdgeMeasure(False, ("edge-angle",), angle_deg=angle, curve=state.curve)
+    levels = _side_levels(state, d, t, frames, good)
+    frames = frames / levels[:, None]
     shift, shift_u = _frame_shifts(state, d, t, frames, good)
     if np.abs(shift).max() > _SHIFT_MATTERS_PX:
         d, t, light, state = _align_frames(state, d, t, frames, good, shift)
         _refit(state, d, t, light, state.keep)
-    return _finish(state, d, t, light, (shift, shift_u))
+    return replace(_finish(state, d, t, light, (shift, shift_u)), frame_level=levels)
+
+
+def _side_levels(state: _State, d: Floats, t: Floats, frames: Floats, good: Bools) -> Floats:
+    """Each frame's level, (n,), from the even sides alone: there an edge that has moved changes nothing."""
+    assert state.fitted is not None
+    model = state.model(d, t)
+    weight = (good & state.keep & (np.abs(d) > min(2.0 * state.spread_px, 0.6 * state.room_px))) * (model / state.deviation**2)
+    return np.asarray((weight * np.where(good, frames, 0.0)).sum(axis=1) / np.maximum((weight * model).sum(axis=1), 1e-300))
 
 
 def _refit(state: _State, d: Floats, t: Floats, light: Floats, there: Bools) -> bool:
