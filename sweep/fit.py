@@ -153,19 +153,29 @@ OWN_FOCUS_WAVES = 0.3
 
 
 class Optics:
-    """The pupil as the parameters say, for a list of views, with the pupil's derivatives."""
+    """The pupil as the parameters say, for a list of views, with the pupil's derivatives.
 
-    def __init__(self, problem_or_fit: "Problem | LensFit", views: Sequence[View], extra_depth_mm: Floats | None = None) -> None:
+    A view's target -1 stands for a depth between targets, its stop -1 for an f-number between stops; these are then
+    given by `depth_mm` and `ln_f_number` (on the scale of the light), one for each view.
+    """
+
+    def __init__(
+        self,
+        problem_or_fit: "Problem | LensFit",
+        views: Sequence[View],
+        depth_mm: Floats | None = None,
+        ln_f_number: Floats | None = None,
+    ) -> None:
         self.bench = problem_or_fit.bench
         self.names = problem_or_fit.names
         self.stop = np.array([v.stop for v in views], dtype=int)
         self.target = np.array([v.target for v in views], dtype=int)
         direction = np.array([0.0 if v.direction_deg is None else np.cos(2.0 * np.radians(v.direction_deg)) for v in views])
         self.twist = direction
-        self.ln_light = np.log(problem_or_fit.light.f_number)[self.stop]
+        self.ln_light = np.log(problem_or_fit.light.f_number)[self.stop] if ln_f_number is None else ln_f_number
         self.widest = float(problem_or_fit.light.f_number.min())
         depths = problem_or_fit.depths_mm
-        self.depth = np.where(self.target >= 0, depths[np.maximum(self.target, 0)], 0.0) if extra_depth_mm is None else extra_depth_mm
+        self.depth = depths[self.target] if depth_mm is None else depth_mm
         self.index = {name: i for i, name in enumerate(self.names)}
 
     def pupil(self, theta: Floats) -> Pupil:
@@ -216,15 +226,22 @@ class Optics:
         return out
 
 
-class Nodes:
+class Frequencies:
+    """Frequencies (views, n) in cycles per pixel, and the pixel box there."""
+
+    def __init__(self, views: Sequence[View], v_cy_px: Floats) -> None:
+        self.v = v_cy_px
+        self.box = np.stack([pixel_box(v, view.direction_deg) for v, view in zip(v_cy_px, views, strict=True)])
+
+
+class Nodes(Frequencies):
     """Chebyshev nodes in frequency for each view, and what the camera does there."""
 
     def __init__(self, bench: Bench, views: Sequence[View], f_number: Floats, count: int = NODES) -> None:
         grid = 0.5 * (1.0 - np.cos(np.pi * np.arange(count) / (count - 1)))
         top = np.minimum(HIGHEST_CY_PX, 1.03 * bench.cutoff_cy_px(f_number))
         self.top = top
-        self.v = top[:, None] * grid
-        self.box = np.stack([pixel_box(v, view.direction_deg) for v, view in zip(self.v, views, strict=True)])
+        super().__init__(views, top[:, None] * grid)
         basis = np.polynomial.chebyshev.chebvander(2.0 * grid - 1.0, count - 1)
         self.to_coefficients = np.linalg.inv(basis)
 
@@ -235,13 +252,13 @@ class Nodes:
         return np.asarray(np.where((v <= self.top[row])[:, None], matrix, 0.0))
 
 
-def transfer(optics: Optics, nodes: Nodes, theta: Floats) -> Floats:
+def transfer(optics: Optics, nodes: Frequencies, theta: Floats) -> Floats:
     """Signed transfer of lens and camera (views, nodes)."""
     blur = np.exp(-2.0 * np.pi**2 * theta[3] * nodes.v**2)
     return np.asarray(lens_transfer(optics.bench, optics.pupil(theta), nodes.v) * nodes.box * blur)
 
 
-def transfer_slopes(optics: Optics, nodes: Nodes, theta: Floats) -> tuple[Floats, Floats]:
+def transfer_slopes(optics: Optics, nodes: Frequencies, theta: Floats) -> tuple[Floats, Floats]:
     """The transfer (views, nodes) and its derivatives (parameters, views, nodes)."""
     pupil = optics.pupil(theta)
     value, *by = lens_transfer_derivatives(optics.bench, pupil, nodes.v)

@@ -25,6 +25,7 @@ from sweep.measure.linear import (
     sharpness_sites,
     sharpness_values,
 )
+from sweep.measure.mtf import Transfer
 from sweep.measure.noise import NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer
 from sweep.result import Note, PatchKind
 from sweep.station import Patch, Station
@@ -67,6 +68,11 @@ class Sighting:
     tone_per_ms: float | None
     edge: EdgeMeasure | None = None
     noise: tuple[NoisePoint, ...] = ()
+
+    @property
+    def transfer(self) -> Transfer | None:
+        """The signed transfer of lens and camera that the patch shows by itself."""
+        return self.edge.transfer if self.edge is not None else None
 
     @property
     def kind(self) -> PatchKind:

@@ -32,12 +32,18 @@ class StopEvidence:
 
 @dataclass(frozen=True, slots=True)
 class Place:
-    """A depth that the choice must serve: a target, or a depth within `need.depth_range_mm`."""
+    """What the choice must serve: a patch of a target, or a depth within `need.depth_range_mm`.
+
+    `target`: its index, -1 for a depth between targets; `direction_deg`: of the frequencies that are judged, None for
+    the mean over all.
+    """
 
     name: str
     depth_mm: float
     feature_cy_px: float
     object_um_per_px: float
+    target: int = -1
+    direction_deg: float | None = 0.0
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,0 +1,291 @@
+"""The one path: frames in, a Result out. It cannot tell where the frames came from."""
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from sweep.choose import Place, StopEvidence, choose
+from sweep.figures import NYQUIST_CY_PX, reading_of
+from sweep.fit import AmplitudeData, EdgeData, LensFit, Problem, StopLight, View, fit_lens
+from sweep.frames import Source
+from sweep.lens import Bench
+from sweep.light import Light, light_of
+from sweep.measure.edge import EdgeProfile
+from sweep.measure.linear import Floats
+from sweep.outlook import Estimate, FittedLens, estimate, model_transfer
+from sweep.readings import Progress, Sighting, Sweep, measure_sweep
+from sweep.result import CameraNoise, CurvePoint, LensModel, Reading, Result, SourceFacts
+from sweep.station import Station
+
+SEED = 20230117
+"""Of the generator behind the chances; fixed, so that the same source gives the same bytes."""
+UNKNOWN_STOP_LN_U = 0.04
+RATIO_U = 0.001
+DEPTH_STEPS = 9
+
+
+def analyse(source: Source, station: Station, progress: Progress | None = None) -> Result:
+    """Analyse a sweep: measure, fit, choose.
+
+    `progress` is told (frames done, frames in all). Raises the reader's and the station's errors.
+    """
+    sweep = measure_sweep(source, station, progress)
+    light = light_of(sweep)
+    readings = [reading_of(s, station) for s in sweep.sightings]
+    fit = _fit(sweep, light, station)
+    places = _places(sweep, station)
+    rng = np.random.default_rng(SEED)
+    contrast, contrast_u = _contrasts(sweep, readings, places)
+    found = estimate(places, contrast, contrast_u, fit, rng)
+    evidence = _evidence(sweep, readings, light, station)
+    camera = _camera(sweep)
+    lens = FittedLens(fit) if fit is not None else None
+    recommendation, stops, notes = choose(station, evidence, camera, found.outlook, lens)
+    return Result(
+        recommendation,
+        stops,
+        tuple(_with_model(sweep, readings, found, fit, station)),
+        _public_camera(camera, station),
+        _model(fit, lens, recommendation.stop, sweep, places),
+        tuple([*source.notes, *notes]),
+        SourceFacts(sweep.frames, source.sha256),
+        _curve(found, places),
+    )
+
+
+def _sharp(sweep: Sweep) -> list[Sighting]:
+    """Sound sightings that carry a transfer or an amplitude."""
+    return [s for s in sweep.sightings if s.ok and s.kind in ("edge", "star", "bars")]
+
+
+def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
+    """The lens fit, or None where there is too little to fit."""
+    edges: list[EdgeData] = []
+    amplitudes: list[AmplitudeData] = []
+    for sighting in _sharp(sweep):
+        stop = sweep.stops.index(sighting.stop)
+        if sighting.edge is not None and sighting.edge.profile is not None and sighting.edge.transfer is not None:
+            edge = sighting.edge
+            assert edge.curve is not None and edge.profile is not None and edge.transfer is not None
+            d, width, value, u, gradient = rebinned(edge.profile, edge.spread_px)
+            view = View(stop, sighting.site.target, edge.curve.direction_deg)
+            edges.append(EdgeData(view, d, width, value, u, gradient, _ratio(sweep, sighting), RATIO_U, edge.transfer))
+    if not edges and not amplitudes:
+        return None
+    known = np.isfinite(light.f_number)
+    f_number = np.where(known, light.f_number, np.array(sweep.stops))
+    ln_u = np.where(known, np.hypot(np.where(known, light.ln_u, 0.0), 1e-3), UNKNOWN_STOP_LN_U)
+    depths = np.array([t.depth_mm for t in station.targets])
+    return fit_lens(Problem.of(Bench.of(station), depths, StopLight(f_number, ln_u), edges, amplitudes))
+
+
+def _ratio(sweep: Sweep, sighting: Sighting) -> float:
+    """Dark over light level of a patch's print, from all its stops, the sharp ones first."""
+    same = [s.edge for s in sweep.sightings if s.site is sighting.site and s.ok and s.edge is not None]
+    weights = np.array([1.0 / e.spread_px for e in same])
+    return float(np.average([e.dark / e.light for e in same], weights=weights))
+
+
+def rebinned(profile: EdgeProfile, spread_px: float) -> tuple[Floats, Floats, Floats, Floats, Floats]:
+    """A spread function in wider bins away from the edge: distance, bin width, value, u, gradient column."""
+    d = profile.distance_px
+    near, far = max(2.0 * spread_px, 4.0), max(4.0 * spread_px, 8.0)
+    zone = np.where(np.abs(d) < near, 0, np.where(np.abs(d) < far, 1, 2))
+    width = np.array([0.125, 0.5, 1.0])[zone]
+    key = np.floor(d / width) * width + np.sign(d) * zone * 1e4
+    _, index = np.unique(key, return_inverse=True)
+    weight = 1.0 / profile.u**2
+    total = np.bincount(index, weight)
+    columns = [np.bincount(index, weight * c) / total for c in (d, width, profile.value, profile.gradient)]
+    order = np.argsort(columns[0])
+    d, width, value, gradient = (c[order] for c in columns)
+    return d, width, value, 1.0 / np.sqrt(total[order]), gradient
+
+
+def _places(sweep: Sweep, station: Station) -> list[Place]:
+    """The places that the choice must serve: every sharpness patch, and the depths between where a range is stated."""
+    places: list[Place] = []
+    for i, target in enumerate(station.targets):
+        for j, patch in enumerate(target.patches):
+            if patch.kind not in ("edge", "star", "bars"):
+                continue
+            direction = _direction(sweep, i, j, patch.kind)
+            places.append(_place(station, target.name, target.depth_mm, i, direction))
+    if station.need.depth_range_mm is not None:
+        for depth in np.linspace(*station.need.depth_range_mm, DEPTH_STEPS):
+            places.append(_place(station, f"{depth:+.3g} mm", float(depth), -1, 0.0))
+    return places
+
+
+def _place(station: Station, name: str, depth_mm: float, target: int, direction: float | None) -> Place:
+    return Place(
+        name, depth_mm, station.feature_cy_px_at(depth_mm), station.object_um_per_px_at(depth_mm), target, direction
+    )
+
+
+def _direction(sweep: Sweep, target: int, patch: int, kind: str) -> float | None:
+    """Direction of the frequencies that a patch speaks for, from its sound sightings; None for a star."""
+    if kind == "star":
+        return None
+    for s in sweep.sightings:
+        if (s.site.target, s.site.patch) == (target, patch) and s.ok and s.edge is not None and s.edge.curve is not None:
+            return s.edge.curve.direction_deg
+    return 0.0
+
+
+def _contrasts(sweep: Sweep, readings: Sequence[Reading], places: Sequence[Place]) -> tuple[Floats, Floats]:
+    """The readings' signed contrasts and their u, (stops, places), NaN where there is none."""
+    shape = (len(sweep.stops), len(places))
+    value, u = np.full(shape, np.nan), np.full(shape, np.nan)
+    column = _columns(sweep)
+    for sighting, reading in zip(sweep.sightings, readings, strict=True):
+        key = (sighting.site.target, sighting.site.patch)
+        if reading.contrast_at_feature is None or reading.contrast_at_feature_u is None or key not in column:
+            continue
+        k = sweep.stops.index(sighting.stop)
+        value[k, column[key]] = reading.contrast_at_feature * (-1.0 if reading.reversed else 1.0)
+        u[k, column[key]] = reading.contrast_at_feature_u
+    return value, u
+
+
+def _columns(sweep: Sweep) -> dict[tuple[int, int], int]:
+    """Column of each sharpness patch among the places."""
+    keys = sorted({(s.site.target, s.site.patch) for s in sweep.sightings if s.kind in ("edge", "star", "bars")})
+    return {key: i for i, key in enumerate(keys)}
+
+
+def _evidence(sweep: Sweep, readings: Sequence[Reading], light: Light, station: Station) -> list[StopEvidence]:
+    """What light and readings say of each stop."""
+    tones = _tones(sweep, light)
+    out = []
+    for k, stop in enumerate(sweep.stops):
+        here = [(s, r) for s, r in zip(sweep.sightings, readings, strict=True) if s.stop == stop]
+        sharp = [(s, r) for s, r in here if s.kind != "flat"]
+        told = {s.site.target for s, r in sharp if r.ok}
+        f = float(light.f_number[k])
+        known = bool(np.isfinite(f))
+        tone = tones[k]
+        out.append(
+            StopEvidence(
+                stop=stop,
+                f_number_by_light=f if known else None,
+                f_number_by_light_u=float(light.u[k]) if known else None,
+                tone_per_ms=tone / sweep.scale.span_dn if tone is not None else None,
+                sound=told == set(range(len(station.targets))),
+                frames=max((s.frames for s, _ in here), default=0),
+            )
+        )
+    return out
+
+
+def _tones(sweep: Sweep, light: Light) -> list[float | None]:
+    """The light tone per ms (linear DN) at each stop: the brightest of its unclipped patches, else by the light's ratio."""
+    direct: list[float | None] = []
+    for stop in sweep.stops:
+        tones = [s.tone_per_ms for s in sweep.at(stop) if s.tone_per_ms is not None and s.ok]
+        complete = all(s.ok or s.tone_per_ms is None for s in sweep.at(stop))
+        direct.append(max(tones) if tones and complete else None)
+    known = [(k, t) for k, t in enumerate(direct) if t is not None]
+    out = list(direct)
+    for k, tone in enumerate(direct):
+        if tone is None and known:
+            near, near_tone = min(known, key=lambda pair: abs(pair[0] - k))
+            f, g = (
+                float(light.f_number[i]) if np.isfinite(light.f_number[i]) else sweep.stops[i] for i in (near, k)
+            )
+            out[k] = near_tone * (f / g) ** 2
+    return out
+
+
+def _camera(sweep: Sweep) -> CameraNoise:
+    """The camera's figures for the choice; per linear DN whatever the response."""
+    transfer = sweep.photon_transfer
+    full = int(sweep.scale.full_dn)
+    if transfer is None:
+        return CameraNoise(None, None, sweep.black.level_dn, full)
+    gain = 1.0 / transfer.dn_per_electron
+    gain_u = gain * transfer.dn_per_electron_u / transfer.dn_per_electron
+    dark = transfer.dark_noise_dn
+    if dark is None:
+        return CameraNoise(gain, None, sweep.black.level_dn, full, gain_u, None)
+    dark_u = transfer.dark_variance_dn2_u / (2.0 * dark)
+    read_u = float(np.hypot(gain * dark_u, dark * gain_u))
+    return CameraNoise(gain, gain * dark, sweep.black.level_dn, full, gain_u, read_u)
+
+
+def _public_camera(camera: CameraNoise, station: Station) -> CameraNoise:
+    """The same for the result: no electrons where the response is not linear."""
+    if station.camera.response == "linear":
+        return camera
+    return replace(camera, electrons_per_dn=None, read_noise_e=None, electrons_per_dn_u=None, read_noise_e_u=None)
+
+
+V_MODEL = np.linspace(0.0, 1.0, 201)
+
+
+def _with_model(
+    sweep: Sweep, readings: Sequence[Reading], found: Estimate, fit: LensFit | None, station: Station
+) -> list[Reading]:
+    """The readings with the model's figures beside them."""
+    if fit is None or found.model is None or found.model_u is None:
+        return list(readings)
+    column = _columns(sweep)
+    keyed = [
+        (i, sweep.stops.index(s.stop), column[(s.site.target, s.site.patch)])
+        for i, s in enumerate(sweep.sightings)
+        if (s.site.target, s.site.patch) in column
+    ]
+    places = [found.outlook.places[c] for _, _, c in keyed]
+    views = [View(k, p.target, p.direction_deg) for (_, k, _), p in zip(keyed, places, strict=True)]
+    curves = model_transfer(fit, views, np.array([p.depth_mm for p in places]), V_MODEL)
+    out = list(readings)
+    for (i, k, c), curve in zip(keyed, curves, strict=True):
+        best, u = found.outlook.contrast[k, c], found.outlook.draws[:, k, c].std()
+        half = _half(curve)
+        out[i] = replace(
+            out[i],
+            model_contrast=float(abs(best)),
+            model_contrast_u=float(u),
+            model_mtf50_cy_px=half,
+            model_mtf50_cy_px_u=None,
+        )
+    return out
+
+
+def _half(curve: Floats) -> float | None:
+    below = np.flatnonzero(curve <= 0.5)
+    if below.size == 0:
+        return None
+    i = int(below[0])
+    step = V_MODEL[1] - V_MODEL[0]
+    return float(V_MODEL[i] - step * (0.5 - curve[i]) / (curve[i - 1] - curve[i]))
+
+
+def _model(
+    fit: LensFit | None, lens: FittedLens | None, stop: float | None, sweep: Sweep, places: Sequence[Place]
+) -> LensModel:
+    if fit is None:
+        return LensModel(None, None, None, None)
+    focus, focus_u = fit.value("focus")
+    w040, w040_u = fit.value("w040")
+    blur2, blur2_u = fit.value("blur2")
+    blur = float(np.sqrt(max(blur2, 0.0)))
+    return LensModel(
+        focus, -w040, blur, fit.reduced_chi2, focus_u, w040_u, blur2_u / (2.0 * blur) if blur > 0 else None
+    )
+
+
+def _curve(found: Estimate, places: Sequence[Place]) -> tuple[CurvePoint, ...]:
+    """The worst patch of each target along the model's curve, for the plot."""
+    outlook = found.outlook
+    if outlook.curve is None or outlook.curve_f_numbers is None or outlook.curve_draws is None:
+        return ()
+    points = []
+    for name in dict.fromkeys(p.name for p in places):
+        mine = [i for i, p in enumerate(places) if p.name == name]
+        worst = np.array(mine)[np.argmin(outlook.curve[:, mine], axis=1)]
+        for g, (f, c) in enumerate(zip(outlook.curve_f_numbers, worst, strict=True)):
+            u = float(outlook.curve_draws[:, g, c].std())
+            points.append(CurvePoint(name, float(f), float(max(outlook.curve[g, c], 0.0)), u))
+    return tuple(points)
