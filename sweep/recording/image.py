@@ -1,0 +1,154 @@
+"""One image file's bytes -> its pixels as stored: nothing rescaled, turned, or blended.
+
+PNG, BMP, PGM and JPEG are decoded by OpenCV, TIFF by tifffile, which alone leaves orientation and packed samples as
+they are. Damage is looked for in the bytes first: a codec would only print a line, and a JPEG's lost rows would come
+out grey.
+"""
+
+import io
+import logging
+import struct
+import zlib
+
+import cv2
+import numpy as np
+import tifffile
+from numpy.typing import NDArray
+
+from sweep.errors import FrameError
+from sweep.frames import Pixels
+from sweep.station import Layout
+
+_SIGNATURES = {
+    b"\x89PNG\r\n\x1a\n": "PNG",
+    b"\xff\xd8\xff": "JPEG",
+    b"BM": "BMP",
+    b"P2": "PGM",
+    b"P5": "PGM",
+    b"II*\0": "TIFF",
+    b"MM\0*": "TIFF",
+    b"II+\0": "TIFF",
+    b"MM\0+": "TIFF",
+}
+_TIFF_FAULTS = (
+    tifffile.TiffFileError, ArithmeticError, AssertionError, AttributeError, ImportError, LookupError, MemoryError,
+    OSError, RuntimeError, TypeError, ValueError, struct.error, zlib.error,
+)  # fmt: skip
+
+logging.getLogger("tifffile").addHandler(logging.NullHandler())
+cv2.utils.logging.setLogLevel(cv2.utils.logging.LOG_LEVEL_SILENT)
+
+
+def format_of(data: bytes) -> str | None:
+    """The image format by the file's first bytes, whatever its name says; None where it is none that is read."""
+    return next((name for start, name in _SIGNATURES.items() if data.startswith(start)), None)
+
+
+def decode(data: bytes, file: str) -> Pixels:
+    """Decode one image file.
+
+    Returns (rows, columns) or (rows, columns, 3) as blue, green, red, of 8 or 16 bit; an alpha channel is dropped.
+    Raises FrameError that names the file.
+    """
+    kind = format_of(data)
+    if kind is None:
+        what = "is empty" if not data else "is not a PNG, BMP, PGM, JPEG or TIFF image"
+        raise FrameError(f"{file} {what}. {_REMEDY}")
+    if (kind == "PNG" and not _png_is_whole(data)) or (kind == "JPEG" and not _jpeg_is_whole(data)):
+        raise FrameError(f"{file} is damaged or cut short. {_REMEDY}")
+    pixels = _decode_tiff(data, file) if kind == "TIFF" else _decode_by_opencv(data)
+    if pixels is None:
+        raise FrameError(f"{file} is damaged or cut short. {_REMEDY}")
+    if pixels.dtype not in (np.uint8, np.uint16) or pixels.ndim not in (2, 3) or not pixels.size:
+        raise FrameError(f"{file} holds {pixels.dtype} samples: save 8 or 16 bit whole numbers, one or three channels.")
+    if pixels.ndim == 3 and pixels.shape[2] == 1:
+        pixels = pixels[:, :, 0]
+    if pixels.ndim == 3 and pixels.shape[2] not in (3, 4):
+        raise FrameError(f"{file} holds {pixels.shape[2]} channels: save one, or blue, green and red.")
+    if pixels.ndim == 3 and pixels.shape[2] == 4:
+        pixels = pixels[:, :, :3]
+    return np.ascontiguousarray(pixels)
+
+
+def as_layout(pixels: Pixels, layout: Layout, file: str) -> Pixels:
+    """The pixels as the station's layout has them: one channel, or blue, green, red; three equal channels are one.
+
+    Raises FrameError that names the file where its channels are not those of the layout.
+    """
+    if layout == "bgr" and pixels.ndim == 2:
+        raise FrameError(f'{file} has one channel, but camera.layout is "bgr". State the layout that the camera has.')
+    if layout == "bgr" or pixels.ndim == 2:
+        return pixels
+    first = pixels[..., 0].copy()
+    if not (np.array_equal(first, pixels[..., 1]) and np.array_equal(first, pixels[..., 2])):
+        raise FrameError(
+            f'{file} has three channels that differ, but camera.layout is "{layout}". State "bgr", or save one channel.'
+        )
+    return first
+
+
+_REMEDY = "Copy the file again, take the frame again, or leave it out."
+
+
+def _decode_by_opencv(data: bytes) -> NDArray[np.generic] | None:
+    try:
+        return cv2.imdecode(np.frombuffer(data, np.uint8), cv2.IMREAD_UNCHANGED)
+    except cv2.error:  # more pixels than it allows, or a header that makes no sense
+        return None
+
+
+def _png_is_whole(data: bytes) -> bool:
+    """Whether every chunk up to IEND is there and carries its right checksum (ISO/IEC 15948, 5.3)."""
+    view, at = memoryview(data), 8
+    while at + 12 <= len(data):
+        (length,) = struct.unpack_from(">I", data, at)
+        end = at + 8 + length
+        if end + 4 > len(data) or zlib.crc32(view[at + 4 : end]) != struct.unpack_from(">I", data, end)[0]:
+            return False
+        if data[at + 4 : at + 8] == b"IEND":
+            return True
+        at = end + 4
+    return False
+
+
+def _jpeg_is_whole(data: bytes) -> bool:
+    """Whether the end-of-image marker follows the scan (ISO/IEC 10918-1, B.1.1); those of thumbnails don't count."""
+    at = 2
+    while at + 4 <= len(data) and data[at] == 0xFF:
+        marker = data[at + 1]
+        if marker == 0xFF:  # a fill byte
+            at += 1
+        elif marker == 0xDA:  # start of scan
+            return data.find(b"\xff\xd9", at) >= 0
+        else:
+            at += 2 + int(struct.unpack_from(">H", data, at + 2)[0])
+    return False
+
+
+def _decode_tiff(data: bytes, file: str) -> NDArray[np.generic] | None:
+    """The one page of a TIFF file as stored, None where it is damaged. Raises FrameError for other kinds."""
+    try:
+        with tifffile.TiffFile(io.BytesIO(data)) as tiff:
+            pages = [page for each in tiff.pages if not (page := each.aspage()).is_reduced]
+            if len(pages) != 1:
+                raise FrameError(f"{file} holds {len(pages)} images: save one frame a file.")
+            page = pages[0]
+            if page.photometric not in (
+                tifffile.PHOTOMETRIC.MINISBLACK,
+                tifffile.PHOTOMETRIC.RGB,
+                tifffile.PHOTOMETRIC.CFA,
+            ):
+                name = getattr(page.photometric, "name", page.photometric)
+                raise FrameError(f"{file} is a TIFF file of the kind {name}: save grey or RGB without a palette.")
+            ends = [at + n for at, n in zip(page.dataoffsets, page.databytecounts, strict=True)]
+            if not ends or max(ends) > len(data) or min(page.databytecounts) <= 0:
+                return None
+            pixels = page.asarray()
+            if page.samplesperpixel > 1:
+                pixels = np.moveaxis(pixels, 0, -1) if page.planarconfig == tifffile.PLANARCONFIG.SEPARATE else pixels
+                pixels = pixels[..., [2, 1, 0]] if page.samplesperpixel >= 3 else pixels
+            return pixels
+    except _TIFF_FAULTS as error:
+        if "imagecodecs" in str(error):
+            raise FrameError(f"{file} is compressed in a way that is not read: save TIFF plain or deflated.") from None
+        return None
