@@ -11,7 +11,7 @@ Source of the star as a test pattern and of the harmonic fit per ring: ISO 12233
 (clause not read); the sign of the transfer follows from the phase (spurious resolution).
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,6 +22,7 @@ Complex = NDArray[np.complex128]
 
 NYQUIST_CY_PX = 0.5
 SATURATED_LIMIT = 0.01
+RING_BIN_PX = 0.5
 _RING_PX = 1.5
 _RING_SAMPLES = 90
 _ORDERS = (0, -1, 1, -2, 2)
@@ -76,15 +77,17 @@ class StarMeasure:
 
 @dataclass(frozen=True, slots=True)
 class RadialProfile:
-    """Mean level over radius, across the rim into the plain surround: bins of pixels, wedges taken out.
+    """Mean level over radius, across the rim into the plain surround: bins of pixels, wedges and gradient taken out.
 
-    `radius_px`, `value`, `u`: (b,); `border_px`: (b,) distance from the region's nearest border, inf inside the rim.
+    `radius_px`, `value`, `u`: (b,); `ring`: (b,) True for whole rings of `RING_BIN_PX`, False for parts of the
+    region's corners; `border`: (b, d) how many of the region's four borders lie at 0, 1, ... pixels, mean over the bin.
     """
 
     radius_px: Floats
     value: Floats
     u: Floats
-    border_px: Floats
+    ring: Bools
+    border: Floats
 
 
 def read_star(
@@ -358,7 +361,8 @@ def _read(
     edges = _ring_edges(inner, outer, len(stack.x) / (region_size[0] * region_size[1]))
     fits, rest = _fit_rings(stack, stack.weight, cycles, centres, edges)
     if fits is not None and (wild := _wild(rest)).any():
-        fits, rest = _fit_rings(stack, stack.weight * ~wild, cycles, centres, edges)
+        stack = replace(stack, weight=stack.weight * ~wild)
+        fits, rest = _fit_rings(stack, stack.weight, cycles, centres, edges)
     if fits is None or not rest.any():
         return StarMeasure(False, ("pattern-not-found",))
     noise, temporal = _noise(rest, fits.coefficients.size)
@@ -373,7 +377,7 @@ def _read(
         rim_px=rim,
         noise=noise,
         temporal_noise=temporal,
-        profile=None,
+        profile=None if rim is None else _profile(stack, cycles, centres, region_size, inner + 5, rim, fits, noise),
     )
 
 
@@ -484,11 +488,10 @@ def _rings(fits: _RingFits, cycles: int, n: int, noise: float, temporal: float |
         phase += np.pi
         turned = {j: -a for j, a in turned.items()}
     signed = turned[0].real
-    shrunk = {j: a * _shrink(np.abs(a) ** 2, 2 * variance) for j, a in turned.items() if j != 0}
     theta = np.arange(48) * (2 * np.pi / 48)
-    local = signed[:, None] + 1j * (turned[0].imag * _shrink(turned[0].imag ** 2, variance))[:, None]
-    for j, a in shrunk.items():
-        local = local + a[:, None] * np.exp(-1j * j * theta)
+    local = signed[:, None] + 1j * _significant(turned[0].imag, variance)[:, None]
+    for j in _ORDERS[1:]:
+        local = local + _significant(turned[j], 2 * variance)[:, None] * np.exp(-1j * j * theta)
     sign = np.where(signed < 0, -1.0, 1.0)
     # direction of the frequency lies across the radius
     even = -(turned[2] + turned[-2]).real * sign
@@ -513,6 +516,107 @@ def _common_phase(harmonic: Complex, variance: Floats) -> float:
     return float(np.angle(np.sum(harmonic**2 / np.maximum(variance, 1e-300)))) / 2
 
 
-def _shrink(power: Floats, expected: Floats) -> Floats:
-    """By how much to shrink an amplitude of that power where noise alone gives the expected one."""
-    return np.asarray(np.sqrt(np.clip(1 - expected / np.maximum(power, 1e-300), 0, 1)))
+def _significant(part: Complex | Floats, variance: Floats) -> Complex:
+    """A part of the wave as five neighbouring rings have it, shrunk to nothing where their noise explains it.
+
+    A modulus taken of noise would read too high everywhere.
+    """
+    kernel = np.ones(5) / 5
+    if len(part) < 5:
+        return np.zeros(len(part), complex)
+    smooth = np.convolve(np.pad(part, 2, "edge"), kernel, "valid")
+    expected = np.convolve(np.pad(variance, 2, "edge"), kernel, "valid") / 5
+    power = np.abs(smooth) ** 2
+    return np.asarray(smooth * np.sqrt(np.clip(1 - 4 * expected / np.maximum(power, 1e-300), 0, 1)), complex)
+
+
+def _profile(
+    stack: _Stack,
+    cycles: int,
+    centres: Floats,
+    region_size: tuple[int, int],
+    begin: float,
+    rim: float,
+    fits: _RingFits,
+    noise: float,
+) -> RadialProfile | None:
+    """The level in whole rings as far as they fit into the region, then in blocks of the corners."""
+    width, height = region_size
+    n = len(stack.values)
+    reach = _room((float(centres[:, 0].mean()), float(centres[:, 1].mean())), region_size) - 2.5
+    gradient = _gradient(fits)
+    borders = np.stack([stack.x, width - 1 - stack.x, stack.y, height - 1 - stack.y])
+    inner_part = borders.min(axis=0) >= 2.0
+    rings = int(max(reach - begin, 0) / RING_BIN_PX)
+    block = (np.minimum(borders[0], borders[1]) // 3) * 1000 + np.minimum(borders[2], borders[3]) // 3
+    blocks, block_of = np.unique(block, return_inverse=True)
+    b = rings + len(blocks)
+    sums = np.zeros((b, 3, 3))
+    right = np.zeros((b, 3))
+    far = np.zeros(b)
+    for v, w, centre in zip(stack.values, stack.weight, centres, strict=True):
+        radius, direction = _polar(stack, (centre[0], centre[1]))
+        whole = (radius >= begin) & (radius < begin + rings * RING_BIN_PX)
+        corner = (radius >= max(reach, rim + 1.5)) & inner_part
+        use = np.flatnonzero((whole | corner) & (w > 0))
+        slot = np.where(whole, (radius - begin) / RING_BIN_PX, rings + block_of)[use].astype(np.intp)
+        turn = np.where(whole, direction**cycles, 0.0)[use]
+        z = radius[use] * direction[use]
+        value = v[use] * (1 - (gradient[0] * z.real + gradient[1] * z.imag))
+        columns = (np.ones(len(use)), turn.real, turn.imag)
+        for i in range(3):
+            right[:, i] += np.bincount(slot, columns[i] * value, b)
+            for j in range(i, 3):
+                sums[:, i, j] += np.bincount(slot, columns[i] * columns[j], b)
+        far += np.bincount(slot, radius[use], b)
+    lower = np.tril_indices(3, -1)
+    sums[:, lower[0], lower[1]] = sums[:, lower[1], lower[0]]
+    count = sums[:, 0, 0]
+    keep = count >= 6 * n
+    keep[:rings] &= count[:rings] >= 20 * n
+    if keep[rings:].sum() < 3:
+        return None
+    inverse = np.linalg.pinv(sums[keep], hermitian=True)
+    value = np.einsum("ij,ij->i", inverse[:, 0], right[keep])
+    ring = np.flatnonzero(keep) < rings
+    u = noise * np.sqrt(n * inverse[:, 0, 0])
+    sound = ring | _near_most(value, u, ~ring)
+    histogram = _borders(
+        stack, borders, (float(centres[:, 0].mean()), float(centres[:, 1].mean())), begin, rings, block_of, b
+    )
+    return RadialProfile((far[keep] / count[keep])[sound], value[sound], u[sound], ring[sound], histogram[keep][sound])
+
+
+def _gradient(fits: _RingFits) -> tuple[float, float]:
+    """Relative change of the light per pixel along x and y, from the level's first order in the rings."""
+    c, r = fits.coefficients, fits.radius
+    scale = float(np.sum(r * r * c[:, 0]))
+    return float(np.sum(r * c[:, 2])) / scale, float(np.sum(r * c[:, 3])) / scale
+
+
+def _near_most(value: Floats, u: Floats, where: Bools) -> Bools:
+    """Which of the marked bins agree with their median, within ten times their scatter or a third of the level."""
+    middle = float(np.median(value[where]))
+    spread = 1.4826 * float(np.median(np.abs(value[where] - middle))) + float(np.median(u[where]))
+    return np.asarray(where & (np.abs(value - middle) < min(10 * spread, abs(middle) / 3)))
+
+
+def _borders(
+    stack: _Stack,
+    borders: Floats,
+    centre: tuple[float, float],
+    begin: float,
+    rings: int,
+    block_of: NDArray[np.intp],
+    b: int,
+) -> Floats:
+    """For each bin of the profile, how many of the four borders lie at 0, 1, ... pixels."""
+    radius, _ = _polar(stack, centre)
+    whole = (radius >= begin) & (radius < begin + rings * RING_BIN_PX)
+    slot = np.where(whole, (radius - begin) / RING_BIN_PX, rings + block_of).astype(np.intp)
+    count = np.maximum(np.bincount(slot, minlength=b), 1)
+    d = int(borders.max()) + 1
+    flat = np.zeros(b * d)
+    for border in borders:
+        flat += np.bincount(slot * d + border.astype(np.intp), minlength=b * d)
+    return np.asarray(flat.reshape(b, d) / count[:, None])
