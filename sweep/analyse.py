@@ -13,6 +13,7 @@ from sweep.lens import Bench
 from sweep.light import Light, light_of
 from sweep.measure.edge import EdgeProfile
 from sweep.measure.linear import Floats
+from sweep.notices import notices
 from sweep.outlook import Estimate, FittedLens, estimate, model_transfer
 from sweep.readings import Progress, Sighting, Sweep, measure_sweep
 from sweep.result import CameraNoise, CurvePoint, LensModel, Reading, Result, SourceFacts
@@ -41,6 +42,10 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
     evidence = _evidence(sweep, readings, light, station)
     camera = _camera(sweep)
     lens = FittedLens(fit) if fit is not None else None
+    compressed = any(note.code == "compressed-source" for note in source.notes)
+    noticed = notices(
+        sweep, readings, light, fit, fit.focus_steps if fit is not None else (), found.discrepancy, station, compressed
+    )
     recommendation, stops, notes = choose(station, evidence, camera, found.outlook, lens)
     return Result(
         recommendation,
@@ -48,7 +53,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
         tuple(_with_model(sweep, readings, found, fit, station)),
         _public_camera(camera, station),
         _model(fit, lens, recommendation.stop, sweep, places),
-        tuple([*source.notes, *notes]),
+        (*source.notes, *noticed, *notes),
         SourceFacts(sweep.frames, source.sha256),
         _curve(found, places),
     )

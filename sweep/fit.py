@@ -71,11 +71,22 @@ class StopLight:
 
 
 @dataclass(frozen=True, slots=True)
+class FocusStep:
+    """What the data say of a focus that changes from one stop on: its size, in waves at that stop, and in its own u."""
+
+    stop: int
+    shift_mm: float
+    waves: float
+    z: float
+
+
+@dataclass(frozen=True, slots=True)
 class LensFit:
     """The fitted lens.
 
     `theta`: parameters by `names`, `covariance` of them (already widened where the model does not describe the data),
-    `reduced_chi2` of the data, `misfit`: reduced chi-square of each data block, in their order.
+    `reduced_chi2` of the data, `misfit`: reduced chi-square of each data block, in the order of `views`; `rivals`: other
+    solutions that fit nearly as well, each with how much its chi-square is higher.
     """
 
     bench: Bench
@@ -86,6 +97,8 @@ class LensFit:
     covariance: Floats
     reduced_chi2: float
     misfit: Floats
+    views: tuple[View, ...]
+    focus_steps: tuple["FocusStep", ...] = ()
     rivals: tuple[tuple[float, Floats], ...] = ()
 
     def value(self, name: str) -> tuple[float, float]:
@@ -382,9 +395,7 @@ def fit_lens(problem: Problem) -> LensFit:
     rivals.sort(key=lambda pair: pair[0])
     best_cost, best = rivals[0]
     others = tuple((cost - best_cost, f.theta) for cost, f in rivals[1:] if cost - best_cost < 6.0 and _differs(best, f))
-    return LensFit(
-        best.bench, best.depths_mm, best.light, best.names, best.theta, best.covariance, best.reduced_chi2, best.misfit, others
-    )
+    return replace(best, rivals=others)
 
 
 def _differs(one: LensFit, other: LensFit) -> bool:
@@ -414,8 +425,36 @@ def _solve(problem: Problem, start: Floats) -> tuple[LensFit, float]:
     chi2 = float(np.sum(r[:rows] ** 2)) / max(free, 1)
     data, prior = jacobian[:rows], jacobian[rows:]
     covariance = np.linalg.inv(data.T @ data / max(1.0, chi2) + prior.T @ prior)
-    fitted = LensFit(problem.bench, problem.depths_mm, problem.light, problem.names, theta, covariance, chi2, misfit)
+    steps = _focus_steps(residuals, theta, r, jacobian, chi2)
+    fitted = LensFit(
+        problem.bench, problem.depths_mm, problem.light, problem.names, theta, covariance, chi2, misfit, problem.views, steps
+    )
     return fitted, float(np.sum(r**2)) / max(1.0, chi2)
+
+
+def _focus_steps(residuals: _Residuals, theta: Floats, r: Floats, jacobian: Floats, chi2: float) -> tuple[FocusStep, ...]:
+    """Score test (Rao) of one more parameter: a focus that is another from stop k on, for each k."""
+    problem = residuals.problem
+    stops = np.array([v.stop for v in problem.views])
+    blocks = residuals.blocks(theta)
+    q, _ = np.linalg.qr(jacobian)
+    pupil = residuals.optics.pupil(theta)
+    by_focus = residuals.optics.slopes(theta, pupil)[0][0]
+    out = []
+    for k in np.unique(stops)[1:]:
+        column = jacobian[:, 0].copy()
+        for block, stop in zip(blocks, stops, strict=True):
+            if stop < k:
+                column[block] = 0.0
+        column[blocks[-1].stop :] = 0.0
+        free = column - q @ (q.T @ column)
+        strength = float(free @ free)
+        if strength <= 1e-9 * float(column @ column):
+            continue
+        shift = -float(free @ r) / strength
+        z = shift * np.sqrt(strength / max(1.0, chi2))
+        out.append(FocusStep(int(k), shift, shift * float(np.abs(by_focus[stops == k]).max()), float(z)))
+    return tuple(out)
 
 
 def _starts(problem: Problem) -> list[Floats]:

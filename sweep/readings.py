@@ -6,7 +6,7 @@ that frames of several exposures and gains are pooled. Nothing here knows a lens
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
-from hashlib import sha256
+from hashlib import blake2b
 from itertools import groupby
 
 import numpy as np
@@ -53,7 +53,7 @@ class Sighting:
 
     `light_per_ms`: mean linear light of the patch (DN per ms at 0 dB); `frame_light`: the same frame by frame, with the
     frames' place in time in `frame_order`; `tone_per_ms`: the light tone in the brightest channel, None where the kind
-    has none; `noise`: of its even areas; `saturated_fraction`: over the frames used; `frames`: how many were used.
+    has none; `exposures`: of the frames, ms at 0 dB; `noise`: of its even areas; `saturated_fraction`: over the frames used; `frames`: how many were used.
     """
 
     stop: float
@@ -66,8 +66,23 @@ class Sighting:
     frame_light: Floats
     frame_order: Floats
     tone_per_ms: float | None
+    exposures: Floats
     edge: EdgeMeasure | None = None
     noise: tuple[NoisePoint, ...] = ()
+
+    @property
+    def shifts_px(self) -> tuple[Floats, float] | None:
+        """How far each frame's pattern lies from their mean, (n, axes) px, and the u of one figure; None: not told."""
+        if self.edge is not None and self.edge.ok and self.edge.shift_px is not None:
+            return self.edge.shift_px[:, None], self.edge.shift_u_px
+        return None
+
+    @property
+    def position_px(self) -> tuple[float, ...] | None:
+        """Where the pattern lies in the region, px: an edge across itself, a star's centre."""
+        if self.edge is not None and self.edge.ok and self.edge.curve is not None:
+            return (self.edge.curve.coefficients[0],)
+        return None
 
     @property
     def transfer(self) -> Transfer | None:
@@ -91,7 +106,11 @@ class Black:
 
 @dataclass(frozen=True, slots=True)
 class Sweep:
-    """All that the pixels say: the sightings, the camera's noise, and what was noticed on the way."""
+    """All that the pixels say: the sightings, the camera's noise, and what was noticed on the way.
+
+    `identical`: groups of target frames that are the same bit for bit; `row_light`: for each stop (n, rows), each
+    frame's mean light of every row against the stop's mean frame; `idle_bits`: low bits that are 0 in every pixel.
+    """
 
     stops: tuple[float, ...]
     sightings: tuple[Sighting, ...]
@@ -101,6 +120,8 @@ class Sweep:
     frames: int
     identical: tuple[tuple[str, ...], ...]
     frame_shape: tuple[int, ...]
+    row_light: tuple[Floats, ...]
+    idle_bits: int
 
     def at(self, stop: float) -> list[Sighting]:
         """The sightings at one stop."""
@@ -142,6 +163,8 @@ def measure_sweep(source: Source, station: Station, progress: Progress | None = 
         len(shots),
         pass_.identical(),
         pass_.shape,
+        tuple(pass_.row_light),
+        pass_.idle_bits(),
     )
 
 
@@ -177,12 +200,16 @@ class _Pass:
         self.source, self.station, self.progress, self.total = source, station, progress, total
         self.done = 0
         self.shape: tuple[int, ...] = ()
+        self.row_light: list[Floats] = []
         self._hashes: dict[bytes, list[str]] = {}
+        self._bits = 0
 
     def read(self, shot: Shot) -> Pixels:
         pixels = self.source.read(shot)
         self.shape = pixels.shape
-        self._hashes.setdefault(sha256(pixels.tobytes()).digest(), []).append(shot.file)
+        if shot.role == "target":
+            self._hashes.setdefault(blake2b(np.ascontiguousarray(pixels)).digest(), []).append(shot.file)
+            self._bits |= int(np.bitwise_or.reduce(pixels, axis=None))
         self.done += 1
         if self.progress is not None:
             self.progress(self.done, self.total)
@@ -191,6 +218,10 @@ class _Pass:
     def identical(self) -> tuple[tuple[str, ...], ...]:
         """Groups of files whose pixels are the same bit for bit."""
         return tuple(sorted(tuple(sorted(files)) for files in self._hashes.values() if len(files) > 1))
+
+    def idle_bits(self) -> int:
+        """Low bits that are 0 in every pixel of every target frame."""
+        return (self._bits & -self._bits).bit_length() - 1 if self._bits else 0
 
     def black(self, shots: Sequence[Shot]) -> Black:
         """Black level and dark noise from the dark frames; by the station file where there are none, or they clip at zero."""
@@ -217,12 +248,31 @@ class _Pass:
         """Read one stop's frames and measure all patches there."""
         slots: list[list[_Slot]] = [[] for _ in sites]
         per_slot = -(-len(shots) // MOST_SLOTS)
+        rows: list[Floats] = []
         for shot in shots:
             pixels = self.read(shot)
+            rows.append(_row_means(pixels) - scale.black_dn)
             for site, mine in zip(sites, slots, strict=True):
                 if shot.target is None or shot.target == self.station.targets[site.target].name:
                     _add(mine, _cut(pixels, site, shot, scale), per_slot)
+        self.row_light.append(_row_ratios(np.stack(rows)))
         return [measure_patch(stop, site, mine, self.station, scale) for site, mine in zip(sites, slots, strict=True) if mine]
+
+
+def _row_means(pixels: Pixels) -> Floats:
+    """Mean value of each row, (rows,)."""
+    return np.asarray(pixels.reshape(pixels.shape[0], -1).mean(axis=1, dtype=np.float64))
+
+
+def _row_ratios(rows: Floats) -> Floats:
+    """Each frame's rows against the stop's mean frame, level and small shifts apart, (n, rows); 1 where nothing ripples."""
+    level = rows.mean(axis=1, keepdims=True)
+    even = rows / np.where(level > 0, level, 1.0)
+    middle = even.mean(axis=0)
+    ratio = even / np.where(middle > 0.05, middle, 1.0)
+    slope = np.gradient(middle) / np.where(middle > 0.05, middle, 1.0)
+    shift = ratio @ slope / max(float(slope @ slope), 1e-12)
+    return np.asarray(ratio - np.outer(shift, slope))
 
 
 def _cut(pixels: Pixels, site: PatchSite, shot: Shot, scale: Scale) -> _Slot:
@@ -277,7 +327,7 @@ def measure_patch(stop: float, site: PatchSite, slots: Sequence[_Slot], station:
     base = Sighting(
         stop, site, not why, tuple(why), clipped, sum(s.count for s in used),
         float(np.average(frame_light, weights=weights)), frame_light, np.array([s.order for s in used]),
-        _tone(full, site, edge, station), edge,
+        _tone(full, site, edge, station), units, edge,
     )  # fmt: skip
     return replace(base, noise=_noise(base, used, scale))
 

@@ -42,7 +42,8 @@ class PhotonTransfer:
     """variance = g K mean + g^2 r^2 + rounding, with g = 10^(gain_db / 20).
 
     `dn_per_electron` (K) at 0 dB with its u; `dark_noise_dn` (r) at 0 dB, None where rounding hides it; `scatter`:
-    rms of the points about the line in units of their expected scatter.
+    rms of the points about the line in units of their expected scatter; `bend`: what a square term would change at the
+    brightest point, relative, with its u.
     """
 
     dn_per_electron: float
@@ -51,6 +52,7 @@ class PhotonTransfer:
     dark_variance_dn2_u: float
     scatter: float
     points: int
+    bend: tuple[float, float] | None = None
 
     @property
     def dark_noise_dn(self) -> float | None:
@@ -156,4 +158,18 @@ def _line(points: Sequence[NoisePoint], with_dark: bool) -> PhotonTransfer | Non
         float(np.sqrt(covariance[1, 1] * inflate)) if with_dark else 0.0,
         scatter,
         len(points),
+        _bend(gain, mean, target, trust * dof / (2.0 * expected**2) / inflate, float(solved[0])),
     )
+
+
+def _bend(gain: Floats, mean: Floats, target: Floats, weight: Floats, slope: float) -> tuple[float, float] | None:
+    """Relative change at the brightest level that a square term makes, and its u; None where four points can't tell."""
+    top = float(mean.max())
+    design = np.column_stack([gain * mean / top, gain**2, gain * (mean / top) ** 2])
+    normal = design.T @ (design * weight[:, None])
+    scale = np.sqrt(np.diag(normal)) + 1e-300
+    if len(mean) < 6 or np.linalg.cond(normal / np.outer(scale, scale)) > 1e8:
+        return None
+    covariance = np.linalg.inv(normal)
+    solved = covariance @ (design.T @ (weight * target))
+    return float(solved[2] / (slope * top)), float(np.sqrt(covariance[2, 2]) / (slope * top))
