@@ -178,6 +178,10 @@ NOTE_CODES: dict[str, NoteCode] = {
         "A file named in shots.csv is not there and was left out.",
         "Put the file back, or take its row out of shots.csv.",
     ),
+    "recording-changed": NoteCode(
+        "The table of shots or the station file of a recording is not the one that was recorded.",
+        "Put the recorded file back, if the change was not meant; a station file of your own goes beside the recording.",
+    ),
     "light-unchanged": NoteCode(
         "Two different stops let the same light through.",
         "Turn the ring to each mark and take those stops again; check that no files were mixed up.",

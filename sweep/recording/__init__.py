@@ -5,6 +5,7 @@ A recording is a loose folder (images and `shots.csv`) plus `station.toml` and, 
 """
 
 from sweep.recording.folder import FolderSource, open_source
+from sweep.recording.recorder import Recorder, record_into
 from sweep.recording.shots import load_station
 
-__all__ = ["FolderSource", "load_station", "open_source"]
+__all__ = ["FolderSource", "Recorder", "load_station", "open_source", "record_into"]

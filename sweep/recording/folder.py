@@ -50,7 +50,7 @@ class FolderSource:
     def __init__(self, folder: Path, rows: Sequence[Row], station: Station | None) -> None:
         self.folder = folder
         self.station_path = folder / STATION if (folder / STATION).is_file() else None
-        self.recording = _recording(folder)
+        self.recording = recording_facts(folder)
         self._station = station
         self._rows = {row.shot.file: row for row in rows}
         self._bits = Bits(station.camera.bit_depth if station else None)
@@ -60,6 +60,7 @@ class FolderSource:
         self._digests: dict[str, bytes] = {}
         self._compressed: set[str] = set()
         self._left_out: list[Note] = []
+        self._changed = _changed(folder, self.recording)
 
     @property
     def shots(self) -> Sequence[Shot]:
@@ -91,7 +92,7 @@ class FolderSource:
     @property
     def notes(self) -> Sequence[Note]:
         """What the reader noticed so far."""
-        notes = list(self._left_out)
+        notes = [*self._left_out, *self._changed]
         if self._compressed:
             count = f"{len(self._compressed)} of {len(self._rows)} frames"
             example = min(self._compressed)
@@ -201,7 +202,7 @@ class FolderSource:
         if data is None:
             raise FrameError(f"{self.folder / file} cannot be found. Put the file back, or take its row out.")
         digest = hashlib.sha256(data)
-        wanted = self.recording["files"].get(file) if self.recording else None
+        wanted = self.recording["files"].get(file) if self.recording else row.sha256
         if wanted is not None and wanted != digest.hexdigest():
             raise FrameError(f"{self.folder / file} has changed since it was recorded. Put the recorded file back.")
         self._digests[file] = digest.digest()
@@ -233,7 +234,22 @@ def _shot_line(shot: Shot) -> str:
     return json.dumps(values, ensure_ascii=True)
 
 
-def _recording(folder: Path) -> dict[str, Any] | None:
+def _changed(folder: Path, recording: dict[str, Any] | None) -> list[Note]:
+    """Which of a recording's own texts are no longer those that were recorded."""
+    notes = []
+    for name in (SHOTS, STATION) if recording else ():
+        path, wanted = folder / name, recording["files"].get(name) if recording else None
+        if wanted is not None and not (path.is_file() and hashlib.sha256(path.read_bytes()).hexdigest() == wanted):
+            notes.append(
+                Note(
+                    "recording-changed",
+                    f"{path} is not as it was recorded. Put the recorded file back, if that is not meant.",
+                )
+            )
+    return notes
+
+
+def recording_facts(folder: Path) -> dict[str, Any] | None:
     """What `recording.json` says, None where there is none (a loose folder, or a run that was torn off)."""
     path = folder / RECORDING
     if not path.exists():

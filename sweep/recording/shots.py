@@ -8,7 +8,7 @@ import io
 import math
 import re
 import unicodedata
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from difflib import get_close_matches
 from pathlib import Path, PureWindowsPath
@@ -21,17 +21,17 @@ SHOTS = "shots.csv"
 STATION = "station.toml"
 REQUIRED = ("file", "stop", "exposure_ms", "gain_db")
 OPTIONAL = ("role", "target", "time_s")
+RECORDED = (*REQUIRED, *OPTIONAL, "sha256")  # the header of a recording's table, in this order
 LARGEST_STATION_BYTES = 1_000_000
 
 
 @dataclass(frozen=True, slots=True)
 class Row:
-    """One row of the table: the shot, where its file is, its number, and its further columns."""
+    """One row of the table: the shot, where its file is, and the hash that a recording's row carries."""
 
     shot: Shot
     path: Path
-    number: int
-    extra: Mapping[str, str]
+    sha256: str | None
 
 
 def load_station(path: Path | str) -> Station:
@@ -65,6 +65,8 @@ def read_table(folder: Path, station: Station | None) -> list[Row]:
     """
     where = folder / SHOTS
     text = read_text(where, SourceError, "table of shots")
+    if text.startswith(",".join(RECORDED)) and not text.endswith("\n"):
+        text = text[: text.rfind("\n") + 1]  # a recording that was torn off in its last row
     try:
         lines = list(csv.reader(io.StringIO(text, newline=""), strict=True))
     except csv.Error as error:
@@ -144,8 +146,7 @@ class _Table:
         if len(self.mistakes) > before or path is None or exposure_ms is None or gain_db is None:
             return None
         shot = Shot(values["file"], stop, exposure_ms, gain_db, role, number - 2, target, time_s)
-        extra = {k: v for k, v in values.items() if k not in (*REQUIRED, *OPTIONAL)}
-        return Row(shot, path, number, extra)
+        return Row(shot, path, values["sha256"] if tuple(self.header) == RECORDED else None)
 
     def _wrong(self, number: int, column: str | None, what: str) -> None:
         place = f"{self.folder / SHOTS}, row {number}" + (f", column {column}" if column else "")
