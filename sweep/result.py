@@ -180,7 +180,7 @@ NOTE_CODES: dict[str, NoteCode] = {
     ),
     "recording-changed": NoteCode(
         "The table of shots or the station file of a recording is not the one that was recorded.",
-        "Put the recorded file back, if the change was not meant; a station file of your own goes beside the recording.",
+        "Put the recorded file back if the change was not meant; state another station file by --station.",
     ),
     "light-unchanged": NoteCode(
         "Two different stops let the same light through.",
