@@ -1,8 +1,9 @@
 """Stops, imaging at a finite distance, and depth of field, by Gaussian optics.
 
-f-number N = focal length / entrance-pupil diameter. Magnification m > 0 = image size / object size at the plane of focus.
-Pupil magnification P = exit-pupil / entrance-pupil diameter. Depth is counted from the plane of focus, positive away from
-the camera.
+f-number N = focal length / entrance-pupil diameter. Magnification m > 0 = image size / object size at the plane of
+focus.
+Pupil magnification P = exit-pupil / entrance-pupil diameter. Depth is counted from the plane of focus, positive
+away from the camera.
 """
 
 import numpy as np
