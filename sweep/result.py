@@ -58,7 +58,10 @@ class Reading:
 
 @dataclass(frozen=True, slots=True)
 class Stop:
-    """One engraved stop: what it would be used at, and how the worst target fares there."""
+    """One engraved stop: what it would be used at, and how the worst target fares there.
+
+    `exposure_needed_ms`: what the level needs at 0 dB, whatever the limits say.
+    """
 
     stop: float
     f_number_by_light: float | None
@@ -73,6 +76,7 @@ class Stop:
     why_not: tuple[str, ...] = ()
     chance_meets: float | None = None
     chance_best: float | None = None
+    exposure_needed_ms: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -121,6 +121,7 @@ def as_stop(candidate: Candidate) -> Stop:
         why_not=candidate.why_not,
         chance_meets=candidate.chance_meets,
         chance_best=candidate.chance_best,
+        exposure_needed_ms=setting.total_ms,
     )
 
 
