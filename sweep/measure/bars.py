@@ -1,13 +1,16 @@
-"""Sets of parallel bars of known period: the amplitude of their fundamental, its frequency and direction.
+"""Sets of parallel bars of known period: their contrast at their own frequency.
 
 The light is fitted, at the pixels where they lie, by a level with gradients and by the harmonics of a
-square wave whose frequency vector is fitted too; the first and last bars, which see the surround, and a
-strip along the region's borders stay out. Each frame has its own phase, so that a shift between frames
-blurs nothing. A sine fitted to a square wave of contrast C reads (4/pi) C times the transfer at the
-bars' frequency (J. W. Coltman, The specification of imaging properties by response to a sine wave
-input, J. Opt. Soc. Am. 44(6), 468-471, 1954).
+square wave whose frequency vector is fitted too; bars next to the surround and a strip along the
+region's borders stay out. Each frame has its own phase, so that a shift between frames blurs nothing.
+A sine fitted to a square wave of contrast C reads (4/pi) C times the transfer at the bars' frequency
+(J. W. Coltman, The specification of imaging properties by response to a sine wave input, J. Opt. Soc.
+Am. 44(6), 468-471, 1954). The print's own contrast C is not in the bars: it is the stated modulation, or
+it is had from the third and fifth harmonics by continuing the transfer's logarithm to zero frequency,
+pooled over the stops, with an uncertainty to match.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -15,25 +18,29 @@ from numpy.typing import NDArray
 
 from sweep.measure.linear import Bools, Floats
 
-Complex = NDArray[np.complex128]
-
+SQUARE_WAVE = 4 / np.pi
 SATURATED_LIMIT = 0.01
 PERIOD_TOLERANCE = 0.12
+NYQUIST_CY_PX = 0.5
+_HIGHEST_CY_PX = 1.1
 _BORDER_PX = 3.0
-_HARMONICS = (1, 2, 3, 5)
 _LEVEL_TERMS = 6
+_FIRM = 6.0
+_MODULATION_U = 0.01
+_RATIO_U_LIMIT = 0.12
+_CONTINUED_U = 0.005
 
 
 @dataclass(frozen=True, slots=True)
 class BarsMeasure:
     """What one set of bars says at one stop. Without `ok`, `why_not` holds codes and the figures are 0.
 
-    `v_cy_px`: frequency found, with `v_u`; `direction_deg`: of the frequency vector, from the x axis, -90 to 90;
-    `amplitude`, `amplitude_u`: of the fundamental, in the unit of the samples, of which `pattern_u` comes back at
-    every stop; `third`, `third_u`: of the third harmonic, positive where it has the sense that a square wave seen
-    without reversal has; `level`: mean level; `phase_rad`: of the fundamental at the region's first pixel;
-    `shift_px`: (n,) of each frame along the frequency vector, with `shift_u_px`; `noise`: rms of a pixel of the
-    mean frame about the fit, of which `temporal_noise` differs from frame to frame.
+    `v_cy_px`: frequency found, with `v_u`; `direction_deg`: of the frequency vector, from the x axis; `harmonics`:
+    amplitude and u of the fundamental, third and fifth, unit of the samples, the last two positive where they have
+    the sense that a square wave seen without reversal has, u infinite where they were not seen; `pattern_u`: that part
+    of the fundamental's u that comes back at every stop; `level`: mean level; `phase_rad`: of the fundamental at the
+    region's first pixel; `shift_px`: (n,) of each frame along the frequency vector, with `shift_u_px`; `noise`: rms
+    of a pixel of the mean frame about the fit, and `temporal_noise` of one frame about the mean frame.
     """
 
     ok: bool
@@ -41,11 +48,8 @@ class BarsMeasure:
     v_cy_px: float = 0.0
     v_u: float = 0.0
     direction_deg: float = 0.0
-    amplitude: float = 0.0
-    amplitude_u: float = 0.0
+    harmonics: tuple[tuple[float, float], ...] = ((0.0, 0.0), (0.0, np.inf), (0.0, np.inf))
     pattern_u: float = 0.0
-    third: float = 0.0
-    third_u: float = 0.0
     level: float = 0.0
     phase_rad: float = 0.0
     shift_px: Floats = field(default_factory=lambda: np.empty(0))
@@ -54,14 +58,24 @@ class BarsMeasure:
     temporal_noise: float | None = None
 
     @property
-    def relative(self) -> float:
-        """Amplitude of the fundamental as a part of the mean level."""
-        return self.amplitude / self.level if self.level > 0 else 0.0
+    def relative(self) -> tuple[float, float]:
+        """Amplitude of the fundamental as a part of the mean level, and its u."""
+        amplitude, u = self.harmonics[0]
+        return (amplitude / self.level, u / self.level) if self.level > 0 else (0.0, 0.0)
 
-    @property
-    def relative_u(self) -> float:
-        """Standard uncertainty of `relative`."""
-        return self.amplitude_u / self.level if self.level > 0 else 0.0
+
+@dataclass(frozen=True, slots=True)
+class BarsContrast:
+    """Transfer at the bars' frequency, negative where reversed.
+
+    `ratio`: light-dark half difference of the print over its mean level, with `ratio_u`, whose error all stops share.
+    """
+
+    contrast: float
+    contrast_u: float
+    bars_cy_px: float
+    ratio: float
+    ratio_u: float
 
 
 def read_bars(
@@ -70,94 +84,212 @@ def read_bars(
     values: Floats,
     valid: Bools | None,
     period_px: float,
-    near_cy_px: tuple[float, float] | None = None,
+    near: BarsMeasure | None = None,
 ) -> BarsMeasure:
     """Read one set of bars from n frames of one stop.
 
     x, y: (k,) sample positions in pixels from the region's first; values: (n, k) linear light; valid: (n, k), False
-    where a sample must not count; period_px: as it should be; near_cy_px: frequency vector found at other stops, for
-    bars that are too soft to be found by themselves. Returns levels in the unit of `values`, frequencies in cycles
-    per pixel. Valid for three periods and more of two pixels and more.
+    where a sample must not count; period_px: as it should be; near: the same bars as seen at another stop, which
+    tells frequency and phase of bars that are too soft to be found by themselves.
+    Returns levels in the unit of `values`, frequencies in cycles per pixel. Valid for three periods and more, of two
+    pixels and more.
     """
     good = np.isfinite(values) if valid is None else valid & np.isfinite(values)
-    if values.size < 64 or not period_px >= 2.0 or np.ptp(x) < 8 or np.ptp(y) < 8:
-        return BarsMeasure(False, ("pattern-not-found",))
+    not_found = BarsMeasure(False, ("pattern-not-found",))
+    if good.size < 64 or not 1 / NYQUIST_CY_PX <= period_px < 1e6 or np.ptp(x) < 8 or np.ptp(y) < 8:
+        return not_found
     if np.mean(~good) > SATURATED_LIMIT:
         return BarsMeasure(False, ("frames-saturated",))
     shared = good.all(axis=0)
     levels = np.where(good, values, 0.0)[:, shared].mean(axis=1) if shared.any() else np.zeros(1)
-    if not (levels > 0).all() or levels.min() < 0.2 * levels.max():
+    if not np.isfinite(levels).all() or levels.min() <= 0 or levels.min() < 0.2 * levels.max():
         return BarsMeasure(False, ("low-signal",))
-    scaled = values[:, shared] * (levels.mean() / levels)[:, None]
-    x, y = x[shared], y[shared]
-    mean = scaled.mean(axis=0)
-    wave = near_cy_px if near_cy_px is not None else _strongest_wave(x, y, mean, period_px)
-    if wave is None:
-        return BarsMeasure(False, ("pattern-not-found",))
-    core = _core(x, y, mean, wave)
-    if core is None:
-        return BarsMeasure(False, ("pattern-not-found",))
-    return _fit(x[core], y[core], scaled[:, core], wave, period_px, near_cy_px is not None)
+    bars = _Samples(x[shared], y[shared], values[:, shared] / levels[:, None], float(levels.mean()))
+    wave = _strongest_wave(bars, period_px)
+    measure = None if wave is None else _read(bars, wave, period_px)
+    if measure is None and near is not None and near.ok:
+        measure = _read_like(bars, near)
+    return measure if measure is not None else not_found
 
 
-def _strongest_wave(x: Floats, y: Floats, mean: Floats, period_px: float) -> tuple[float, float] | None:
+def bars_contrasts(bars: Sequence[BarsMeasure | None], modulation: float = 1.0) -> list[BarsContrast | None]:
+    """The contrast of one set of bars at every stop of a sweep.
+
+    bars: one measure a stop, None or not `ok` where there is none; modulation: the print's own, 1 where it is not
+    stated. Returns a list of the same length, with None where the print's contrast can't be known.
+    """
+    sound = [b for b in bars if b is not None and b.ok]
+    ratio, ratio_u = _print_ratio(sound, modulation)
+    if not sound or ratio_u > _RATIO_U_LIMIT * ratio:
+        return [None] * len(bars)
+    upright = max(sound, key=lambda b: b.relative[0])
+    out: list[BarsContrast | None] = []
+    for b in bars:
+        if b is None or not b.ok:
+            out.append(None)
+            continue
+        amplitude, u = b.relative
+        contrast = amplitude / (SQUARE_WAVE * ratio) * (-1.0 if _opposed(b, upright) else 1.0)
+        contrast_u = float(np.hypot(u / (SQUARE_WAVE * ratio), contrast * ratio_u / ratio))
+        out.append(BarsContrast(float(contrast), contrast_u, b.v_cy_px, ratio, ratio_u))
+    return out
+
+
+def _opposed(b: BarsMeasure, upright: BarsMeasure) -> bool:
+    """Whether light bars stand where dark ones stand in the other measure."""
+    along = np.cos(np.radians(b.direction_deg - upright.direction_deg)) >= 0
+    return bool(np.cos((b.phase_rad if along else -b.phase_rad) - upright.phase_rad) < 0)
+
+
+def _print_ratio(sound: Sequence[BarsMeasure], modulation: float) -> tuple[float, float]:
+    """Half difference over mean level of the print, and its u."""
+    if modulation < 1:
+        return modulation, _MODULATION_U * modulation
+    logs, variances = [], []
+    for b in sound:
+        parts = [
+            (k * a / (b.level * SQUARE_WAVE), k * u / (b.level * SQUARE_WAVE))
+            for k, (a, u) in zip((1, 3, 5), b.harmonics, strict=True)
+        ]
+        if not all(a > 4 * u for a, u in parts):
+            continue
+        # the parabola through 1, 3, 5 times the frequency, at zero frequency
+        weights = (15 / 8, -5 / 4, 3 / 8)
+        logs.append(sum(w * np.log(a) for w, (a, _) in zip(weights, parts, strict=True)))
+        noise = sum((w * u / a) ** 2 for w, (a, u) in zip(weights, parts, strict=True))
+        variances.append(noise + (_CONTINUED_U / min(parts[2][0], 1.0)) ** 2)
+    if not logs:
+        return 1.0, 1.0
+    w = 1 / np.array(variances)
+    mean = float(np.sum(w * np.array(logs)) / np.sum(w))
+    # neighbouring stops err alike, so that the best of them says how well it is known
+    u = float(np.sqrt(min(variances)))
+    return float(min(np.exp(mean), 1.0)), float(min(np.exp(mean), 1.0)) * u
+
+
+@dataclass(frozen=True, slots=True)
+class _Samples:
+    """Samples, (k,), and frames at one level, (n, k), as parts of their mean level `unit`."""
+
+    x: Floats
+    y: Floats
+    values: Floats
+    unit: float
+
+    def part(self, use: Bools) -> "_Samples":
+        return _Samples(self.x[use], self.y[use], self.values[:, use], self.unit)
+
+
+def _strongest_wave(bars: _Samples, period_px: float) -> tuple[float, float] | None:
     """The frequency vector of the strongest wave of that period in any direction; None where another is stronger."""
-    left, top = x.min(), y.min()
+    x, y, mean = bars.x - bars.x.min(), bars.y - bars.y.min(), bars.values.mean(axis=0)
     width, height = int(np.ptp(x)) + 1, int(np.ptp(y)) + 1
+    if max(width, height) > 4096:
+        return None
+    u, w = x / width, y / height
+    terms = np.stack([np.ones_like(u), u, w, u * u, u * w, w * w], axis=1)
     image = np.zeros((height, width))
-    rows, columns = np.rint(y - top).astype(int), np.rint(x - left).astype(int)
-    taper = np.sin(np.pi * (x - left + 0.5) / width) * np.sin(np.pi * (y - top + 0.5) / height)
-    terms = np.stack([np.ones_like(x), x, y, x * x, x * y, y * y], axis=1)
-    image[rows, columns] = (mean - terms @ np.linalg.lstsq(terms, mean, rcond=None)[0]) * taper
+    taper = np.sin(np.pi * (x + 0.5) / width) * np.sin(np.pi * (y + 0.5) / height)
+    rest = mean - terms @ np.linalg.lstsq(terms, mean, rcond=None)[0]
+    image[np.rint(y).astype(int), np.rint(x).astype(int)] = rest * taper
     size = 1 << int(np.ceil(np.log2(2 * max(width, height))))
     power = np.abs(np.fft.rfft2(image, (size, size))) ** 2
-    fy, fx = np.fft.fftfreq(size)[:, None], np.fft.rfftfreq(size)[None, :]
-    v = np.hypot(fx, fy) * period_px
+    fx, fy = np.fft.rfftfreq(size)[None, :], np.fft.fftfreq(size)[:, None]
+    v = np.hypot(fx, fy)
     wide = PERIOD_TOLERANCE + period_px / max(width, height)
-    band = (v > 1 - wide) & (v < 1 + wide)
-    others = (v > 0.45) & (v < 2.2) & ~((v > 1 - 2 * wide) & (v < 1 + 2 * wide)) & (np.hypot(fx, fy) < 0.5)
+    off = np.abs(v * period_px - 1)
+    band = (off < wide) & (v <= NYQUIST_CY_PX)
+    others = (off > 2 * wide) & (v * period_px > 0.45) & (v * period_px < 2.2) & (v <= NYQUIST_CY_PX)
     if not band.any():
         return None
-    at = np.unravel_index(int(np.argmax(np.where(band, power, -1.0))), power.shape)
-    if others.any() and power[at] < 1.5 * power[others].max():
+    row, column = np.unravel_index(int(np.argmax(np.where(band, power, -1.0))), power.shape)
+    if power[row, column] <= 0 or (others.any() and power[row, column] < 1.5 * power[others].max()):
         return None
-    return float(fx[0, at[1]]), float(fy[at[0], 0])
+    return float(fx[0, column]), float(fy[row, 0])
 
 
-def _core(x: Floats, y: Floats, mean: Floats, wave: tuple[float, float]) -> Bools | None:
+def _read(bars: _Samples, wave: tuple[float, float], period_px: float) -> BarsMeasure | None:
+    """Frequency vector by Gauss-Newton on the mean frame, then each frame's wave with its own phase."""
+    core = _core(bars, wave)
+    if core is None:
+        return None
+    inner = bars.part(core)
+    f = np.array(wave)
+    mean = inner.values.mean(axis=0)
+    scale = max(float(np.ptp(inner.x)), float(np.ptp(inner.y)))
+    for _ in range(4):
+        design = _design(inner, f)
+        if len(mean) < 3 * design.shape[1]:
+            return None
+        coefficients = np.linalg.lstsq(design, mean, rcond=None)[0]
+        c, s = coefficients[_LEVEL_TERMS : _LEVEL_TERMS + 2]
+        cx, sx, cy, sy = coefficients[_LEVEL_TERMS + 2 : _LEVEL_TERMS + 6]
+        if c * c + s * s <= 0:
+            return None
+        # a turn of the phase along x or y is a change of the frequency
+        step = np.array([s * cx - c * sx, s * cy - c * sy]) / ((c * c + s * s) * 2 * np.pi * scale)
+        f = f + step * min(1.0, 0.5 / scale / max(float(np.hypot(*step)), 1e-12))
+    v = float(np.hypot(*f))
+    if abs(v * period_px - 1) > PERIOD_TOLERANCE or not 0 < v <= NYQUIST_CY_PX:
+        return None
+    fit = _Fit.of(inner, f)
+    firm = fit is not None and abs(fit.together) > _FIRM * fit.u(0) and not fit.something_else()
+    return fit.measure(float(np.angle(fit.together))) if fit is not None and firm else None
+
+
+def _read_like(bars: _Samples, near: BarsMeasure) -> BarsMeasure | None:
+    """The wave of another stop's frequency and phase, however weak it is."""
+    angle = np.radians(near.direction_deg)
+    f = near.v_cy_px * np.array([np.cos(angle), np.sin(angle)])
+    border = np.minimum.reduce(
+        [
+            bars.x - bars.x.min(),
+            np.ptp(bars.x) + bars.x.min() - bars.x,
+            bars.y - bars.y.min(),
+            np.ptp(bars.y) + bars.y.min() - bars.y,
+        ]
+    )
+    inner = bars.part(np.asarray(border >= _BORDER_PX))
+    if len(inner.x) < 64:
+        return None
+    fit = _Fit.of(inner, f)
+    return None if fit is None else fit.measure(near.phase_rad + 2 * np.pi * float(f @ fit.middle))
+
+
+def _core(bars: _Samples, wave: tuple[float, float]) -> Bools | None:
     """The samples inside the set: where the wave is strong along and across, its ends and borders left out."""
     v = float(np.hypot(*wave))
+    x, y = bars.x, bars.y
     across, along = (x * wave[0] + y * wave[1]) / v, (-x * wave[1] + y * wave[0]) / v
     border = np.minimum.reduce([x - x.min(), x.max() - x, y - y.min(), y.max() - y])
     inside = border >= _BORDER_PX
     for coordinate, step in ((across, 1 / v), (along, max(4.0, 0.5 / v))):
-        strength, slot = _strength(mean, x * wave[0] + y * wave[1], coordinate, step, inside)
-        if strength.size < 3:
-            return None
-        strong = strength > 0.6 * np.percentile(strength, 75)
-        best = _longest_run(strong)
-        first, last = best[0] + (best[0] > 0), best[1] - (best[1] < len(strong) - 1)
-        inside = inside & (slot >= first) & (slot <= last)
         if inside.sum() < 64:
             return None
-    return np.asarray(inside)
+        strength, slot = _strength(bars.values.mean(axis=0), across * v, coordinate, step, inside)
+        first, last = _longest_run(strength > 0.6 * np.percentile(strength, 75))
+        if last - first < 2:
+            return None
+        # next to the surround the first and last are of another contrast
+        first, last = first + (first > 0), last - (last < len(strength) - 1)
+        inside = inside & (slot >= first) & (slot <= last)
+    return np.asarray(inside) if inside.sum() >= 64 else None
 
 
 def _strength(
     mean: Floats, cycles: Floats, coordinate: Floats, step: float, inside: Bools
 ) -> tuple[Floats, NDArray[np.intp]]:
     """Amplitude of the wave in slices of `step` pixels along a coordinate, and the slice of each sample."""
-    begin = float(coordinate[inside].min()) if inside.any() else 0.0
-    slot = np.floor((coordinate - begin) / step).astype(np.intp)
-    last = int(slot[inside].max()) if inside.any() else 0
-    ok = inside & (slot >= 0)
-    count = np.maximum(np.bincount(slot[ok], minlength=last + 1), 1)
-    level = np.bincount(slot[ok], mean[ok], last + 1) / count
-    rest = mean[ok] - level[slot[ok]]
-    angle = 2 * np.pi * cycles[ok]
-    c = np.bincount(slot[ok], rest * np.cos(angle), last + 1) / count
-    s = np.bincount(slot[ok], rest * np.sin(angle), last + 1) / count
-    return np.asarray(2 * np.hypot(c, s)), slot
+    slot = np.floor((coordinate - float(coordinate[inside].min())) / step).astype(np.intp)
+    slot[~inside] = -1
+    s, value = slot[inside], mean[inside]
+    slices = int(s.max()) + 1
+    count = np.maximum(np.bincount(s, minlength=slices), 1)
+    turn = np.exp(2j * np.pi * cycles[inside])
+    rest = value - (np.bincount(s, value, slices) / count)[s]
+    return 2 * np.hypot(
+        np.bincount(s, rest * turn.real, slices), np.bincount(s, rest * turn.imag, slices)
+    ) / count, slot
 
 
 def _longest_run(strong: Bools) -> tuple[int, int]:
@@ -171,105 +303,126 @@ def _longest_run(strong: Bools) -> tuple[int, int]:
     return best
 
 
-def _fit(x: Floats, y: Floats, values: Floats, wave: tuple[float, float], period_px: float, given: bool) -> BarsMeasure:
-    """Frequency vector by Gauss-Newton on the mean frame, then each frame's wave with its own phase."""
-    not_found = BarsMeasure(False, ("pattern-not-found",))
-    middle = (float(x.mean()), float(y.mean()))
-    dx, dy = x - middle[0], y - middle[1]
-    mean = values.mean(axis=0)
-    f = np.array(wave)
-    design = _design(dx, dy, f)
-    if len(x) < 3 * design.shape[1]:
-        return not_found
-    for _ in range(4):
-        coefficients = np.linalg.lstsq(design, mean, rcond=None)[0]
-        c, s = coefficients[_LEVEL_TERMS : _LEVEL_TERMS + 2]
-        power = c * c + s * s
-        if power <= 0:
-            return not_found
-        if given:
-            break
-        # a turn of the phase along x or y is a change of the frequency
-        cx, sx, cy, sy = coefficients[-4:]
-        scale = max(float(np.ptp(x)), float(np.ptp(y)))
-        step = np.array([s * cx - c * sx, s * cy - c * sy]) / (power * 2 * np.pi * scale)
-        step *= min(1.0, 0.5 / scale / max(float(np.hypot(*step)), 1e-12))
-        f = f + step
-        design = _design(dx, dy, f)
-    v = float(np.hypot(*f))
-    if not 1 - PERIOD_TOLERANCE < v * period_px < 1 + PERIOD_TOLERANCE or not 0 < v <= 0.5:
-        return not_found
-    return _measure(design, values, f, middle, given)
-
-
-def _design(dx: Floats, dy: Floats, f: Floats) -> Floats:
-    """Columns: level with its gradients, the harmonics, and the change of the fundamental along x and y."""
+def _design(bars: _Samples, f: Floats, orders: Sequence[int] = (2, 3, 5)) -> Floats:
+    """Columns: level with its gradients, the fundamental, its change along x and y, and the harmonics."""
+    dx, dy = bars.x - bars.x.mean(), bars.y - bars.y.mean()
     angle = 2 * np.pi * (dx * f[0] + dy * f[1])
-    scale = max(float(np.ptp(dx)), float(np.ptp(dy)), 1.0)
+    scale = max(float(np.ptp(dx)), float(np.ptp(dy)))
     u, w = dx / scale, dy / scale
-    waves = [part for h in _HARMONICS for part in (np.cos(h * angle), np.sin(h * angle))]
-    return np.stack(
-        [np.ones_like(u), u, w, u * u, u * w, w * w, *waves, u * waves[0], u * waves[1], w * waves[0], w * waves[1]], 1
-    )
+    c, s = np.cos(angle), np.sin(angle)
+    seen = [h for h in orders if h * np.hypot(*f) < _HIGHEST_CY_PX]
+    harmonics = [part for h in seen for part in (np.cos(h * angle), np.sin(h * angle))]
+    return np.stack([np.ones_like(u), u, w, u * u, u * w, w * w, c, s, u * c, u * s, w * c, w * s, *harmonics], axis=1)
 
 
-def _measure(design: Floats, values: Floats, f: Floats, middle: tuple[float, float], given: bool) -> BarsMeasure:
-    """Amplitude, phases and noise from the fit of each frame."""
-    n, k = values.shape
-    square = design.T @ design
-    inverse = np.linalg.pinv(square, hermitian=True)
-    coefficients = inverse @ (design.T @ values.T)
-    rest = values - (design @ coefficients).T
-    used = _tame(rest)
-    if not used.all():
-        design, values = design[used], values[:, used]
-        inverse = np.linalg.pinv(design.T @ design, hermitian=True)
-        coefficients = inverse @ (design.T @ values.T)
-        rest = values - (design @ coefficients).T
-        k = len(design)
-    mean_rest = rest.mean(axis=0)
-    freedom = max(k - design.shape[1], 1)
-    noise = float(np.sqrt(np.sum(mean_rest**2) / freedom))
-    temporal = float(np.sqrt(np.sum((rest - mean_rest) ** 2) / (freedom * (n - 1)))) if n > 1 else None
-    first, third = _LEVEL_TERMS, _LEVEL_TERMS + 4
-    unit = float(np.sqrt((inverse[first, first] + inverse[first + 1, first + 1]) / 2))
-    unit3 = float(np.sqrt((inverse[third, third] + inverse[third + 1, third + 1]) / 2))
-    wave = coefficients[first] - 1j * coefficients[first + 1]
-    total = complex(wave.mean())
-    turn = np.exp(1j * np.angle(wave * np.conj(total))) if n > 1 and abs(total) > 5 * noise * unit else np.ones(n)
-    together = complex(np.mean(wave * np.conj(turn)))
-    amplitude = float(np.sqrt(max(abs(together) ** 2 - (noise * unit) ** 2, 0.0)))
-    level = float(coefficients[0].mean())
-    if level <= 0 or noise <= 0 or (not given and abs(together) < 6 * noise * unit):
-        return BarsMeasure(False, ("pattern-not-found",))
-    harmonic = complex(np.mean((coefficients[third] - 1j * coefficients[third + 1]) * np.conj(turn) ** 3))
-    # a square wave about a bar's middle is cos a - cos 3a / 3 + ...: the third runs against three times the phase
-    against = -(harmonic * np.conj(together / abs(together)) ** 3).real if abs(together) > 0 else 0.0
-    v = float(np.hypot(*f))
-    frame = temporal if temporal is not None else noise
-    pattern = float(np.sqrt(max(noise**2 - frame**2 / n, 0.0))) if n > 1 else 0.0
-    phase = np.angle(together) - 2 * np.pi * (f[0] * middle[0] + f[1] * middle[1])
-    angle = np.degrees(np.arctan2(f[1], f[0]))
-    return BarsMeasure(
-        True,
-        v_cy_px=v,
-        v_u=noise * unit * 3.5 / (2 * np.pi * max(amplitude, noise * unit) * np.sqrt(k)),
-        direction_deg=float((angle + 90) % 180 - 90),
-        amplitude=amplitude,
-        amplitude_u=noise * unit,
-        pattern_u=pattern * unit,
-        third=float(against),
-        third_u=noise * unit3,
-        level=level,
-        phase_rad=float(phase % (2 * np.pi)),
-        shift_px=np.angle(turn / turn.mean()) / (2 * np.pi * v) if n > 1 else np.zeros(1),
-        shift_u_px=frame * unit / (max(amplitude, noise * unit) * 2 * np.pi * v),
-        noise=noise,
-        temporal_noise=temporal,
-    )
+@dataclass(frozen=True, slots=True)
+class _Fit:
+    """Each frame's complex harmonics 1, 3, 5, their unscaled u, and the noise, as parts of the level.
 
+    `folded`: what a harmonic that the sampling makes one with the fundamental may add to it.
+    """
 
-def _tame(rest: Floats) -> Bools:
-    """Samples whose mean residual noise can explain: within six times the robust scatter."""
-    mean = rest.mean(axis=0)
-    return np.asarray(np.abs(mean) <= 6 * 1.4826 * max(float(np.median(np.abs(mean))), 1e-300))
+    f: Floats
+    middle: Floats
+    waves: NDArray[np.complex128]
+    units: Floats
+    level: float
+    samples: int
+    noise: float
+    temporal: float | None
+    folded: float
+    unit: float
+
+    @classmethod
+    def of(cls, bars: _Samples, f: Floats) -> "_Fit | None":
+        """The fit with wild samples left out, and with no more harmonics than the sampling keeps apart."""
+        middle = np.array([bars.x.mean(), bars.y.mean()])
+        left_out: tuple[int, ...] = ()
+        for orders in ((2, 3, 5), (2, 3), (2,), ()):
+            design = _design(bars, f, orders)
+            inverse = np.linalg.pinv(design.T @ design, rcond=1e-10, hermitian=True)
+            apart = inverse[_LEVEL_TERMS, _LEVEL_TERMS] + inverse[_LEVEL_TERMS + 1, _LEVEL_TERMS + 1] < 16 / len(design)
+            if (
+                apart
+                and np.linalg.matrix_rank(design.T @ design, tol=1e-8 * len(design), hermitian=True) == design.shape[1]
+            ):
+                break
+            left_out = tuple(h for h in (3, 5) if h not in orders[:-1])
+        for _ in range(2):
+            coefficients = inverse @ (design.T @ bars.values.T)
+            rest = bars.values - (design @ coefficients).T
+            mean = rest.mean(axis=0)
+            use = np.abs(mean) <= 6 * 1.4826 * float(np.median(np.abs(mean)))
+            if use.all() or use.sum() < 2 * design.shape[1]:
+                break
+            bars, design = bars.part(use), design[use]
+            inverse = np.linalg.pinv(design.T @ design, rcond=1e-10, hermitian=True)
+        n, k = bars.values.shape
+        freedom = max(k - design.shape[1], 1)
+        noise = float(np.sqrt(np.sum(mean**2) / freedom))
+        temporal = float(np.sqrt(np.sum((rest - mean) ** 2) / (freedom * (n - 1)))) if n > 1 else None
+        if noise <= 0 or not np.isfinite(noise):
+            return None
+        seen = [h for h in orders if h * np.hypot(*f) < _HIGHEST_CY_PX]
+        waves, units = np.zeros((3, n), complex), np.full(3, np.inf)
+        for i, h in enumerate((1, 3, 5)):
+            if h == 1 or h in seen:
+                at = _LEVEL_TERMS if h == 1 else _LEVEL_TERMS + 6 + 2 * seen.index(h)
+                waves[i] = coefficients[at] - 1j * coefficients[at + 1]
+                units[i] = np.sqrt((inverse[at, at] + inverse[at + 1, at + 1]) / 2)
+        # seen through a transfer that falls like exp(-a v), the third is the cube of the first
+        transfer = min(1.0, abs(waves[0].mean()) / SQUARE_WAVE)
+        folded = SQUARE_WAVE * sum(transfer**h / h for h in left_out) / np.sqrt(3)
+        return cls(f, middle, waves, units, float(coefficients[0].mean()), k, noise, temporal, float(folded), bars.unit)
+
+    @property
+    def together(self) -> complex:
+        """The fundamental of all frames."""
+        return complex(self.waves[0].mean())
+
+    def u(self, i: int) -> float:
+        """Standard uncertainty of the i-th harmonic of the mean frame."""
+        return self.noise * float(self.units[i])
+
+    def something_else(self) -> bool:
+        """Whether the fit leaves more than the frames' noise and a fifth of the bars: they are no bars."""
+        if self.temporal is None:
+            return False
+        limit = 4 * self.temporal**2 / self.waves.shape[1] + (0.25 * abs(self.together)) ** 2
+        return bool(self.noise**2 > limit)
+
+    def measure(self, phase: float) -> BarsMeasure | None:
+        """The record; `phase` (rad) at the region's middle is that of the fundamental, to half a turn."""
+        n = self.waves.shape[1]
+        if self.level <= 0:
+            return None
+        strong = n > 1 and abs(self.together) > _FIRM * self.u(0)
+        turn = np.exp(1j * np.angle(self.waves[0] * np.conj(self.together))) if strong else np.ones(n)
+        first, third, fifth = (
+            complex(np.mean(wave * np.conj(turn) ** h)) * np.exp(-1j * h * phase)
+            for wave, h in zip(self.waves, (1, 3, 5), strict=True)
+        )
+        # about a light bar's middle a square wave is cos a - cos 3a / 3 + cos 5a / 5
+        parts = (
+            (first.real, float(np.hypot(self.u(0), self.folded))),
+            (-third.real, self.u(1)),
+            (fifth.real, self.u(2)),
+        )
+        v = float(np.hypot(*self.f))
+        frame = self.temporal if self.temporal is not None else self.noise
+        pattern = float(np.sqrt(max(self.noise**2 - frame**2 / n, 0.0)))
+        least = max(abs(first), self.u(0))
+        return BarsMeasure(
+            True,
+            v_cy_px=v,
+            v_u=self.u(0) / least * np.sqrt(12 / self.samples) / (2 * np.pi),
+            direction_deg=float(np.degrees(np.arctan2(self.f[1], self.f[0]))),
+            harmonics=tuple((float(a) * self.unit, u * self.unit) for a, u in parts),
+            pattern_u=pattern * float(self.units[0]) * self.unit,
+            level=self.level * self.unit,
+            phase_rad=float((phase - 2 * np.pi * float(self.f @ self.middle)) % (2 * np.pi)),
+            shift_px=np.asarray(np.angle(turn / turn.mean()) / (2 * np.pi * v)),
+            shift_u_px=frame * float(self.units[0]) / (least * 2 * np.pi * v),
+            noise=self.noise * self.unit,
+            temporal_noise=None if self.temporal is None else self.temporal * self.unit,
+        )

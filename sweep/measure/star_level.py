@@ -20,7 +20,9 @@ from scipy.special import j0, j1
 
 from sweep.measure.linear import Floats
 from sweep.measure.mtf import Transfer
-from sweep.measure.star import NYQUIST_CY_PX, RING_BIN_PX, RadialProfile, StarMeasure, StarRings
+from sweep.measure.star import StarMeasure, StarRings
+from sweep.measure.star_find import NYQUIST_CY_PX
+from sweep.measure.star_rim import RING_BIN_PX, RadialProfile
 
 SQUARE_WAVE = 4 / np.pi
 CURVE_CY_PX = np.linspace(0.0, NYQUIST_CY_PX, 101)
