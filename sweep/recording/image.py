@@ -7,8 +7,15 @@ out grey.
 
 import io
 import logging
+import math
+import os
+import re
 import struct
+import tempfile
+import threading
 import zlib
+from collections.abc import Iterator
+from contextlib import contextmanager
 
 import cv2
 import numpy as np
@@ -19,6 +26,8 @@ from sweep.errors import FrameError
 from sweep.frames import Pixels
 from sweep.station import Layout
 
+MOST_STRAY_BYTES = 64  # many USB cameras pad their JPEG data by a few bytes (common practice, no source)
+MOST_EXPANSION = 1500  # deflate and LZW cannot expand by more: 1032 and some 1400 times
 _SIGNATURES = {
     b"\x89PNG\r\n\x1a\n": "PNG",
     b"\xff\xd8\xff": "JPEG",
@@ -34,6 +43,8 @@ _TIFF_FAULTS = (
     tifffile.TiffFileError, ArithmeticError, AssertionError, AttributeError, ImportError, LookupError, MemoryError,
     OSError, RuntimeError, TypeError, ValueError, struct.error, zlib.error,
 )  # fmt: skip
+
+_ONE_AT_A_TIME = threading.Lock()
 
 logging.getLogger("tifffile").addHandler(logging.NullHandler())
 cv2.utils.logging.setLogLevel(cv2.utils.logging.LOG_LEVEL_SILENT)
@@ -56,7 +67,10 @@ def decode(data: bytes, file: str) -> Pixels:
         raise FrameError(f"{file} {what}. {_REMEDY}")
     if (kind == "PNG" and not _png_is_whole(data)) or (kind == "JPEG" and not _jpeg_is_whole(data)):
         raise FrameError(f"{file} is damaged or cut short. {_REMEDY}")
-    pixels = _decode_tiff(data, file) if kind == "TIFF" else _decode_by_opencv(data)
+    if kind == "TIFF":
+        pixels = _decode_tiff(data, file)
+    else:
+        pixels = _decode_jpeg(data) if kind == "JPEG" else _decode_by_opencv(data)
     if pixels is None:
         raise FrameError(f"{file} is damaged or cut short. {_REMEDY}")
     if pixels.dtype not in (np.uint8, np.uint16) or pixels.ndim not in (2, 3) or not pixels.size:
@@ -125,6 +139,44 @@ def _jpeg_is_whole(data: bytes) -> bool:
     return False
 
 
+def _decode_jpeg(data: bytes) -> NDArray[np.generic] | None:
+    """A JPEG file's pixels; None where the codec says that data were lost, though it makes up some in their place."""
+    with _ONE_AT_A_TIME, _codec_messages() as said:
+        pixels = _decode_by_opencv(data)
+    return None if any(map(_tells_of_damage, said)) else pixels
+
+
+def _tells_of_damage(line: str) -> bool:
+    stray = re.search(r"Corrupt JPEG data: (\d+) extraneous bytes", line)
+    if stray:
+        return int(stray[1]) > MOST_STRAY_BYTES
+    return "Corrupt JPEG data" in line or "Premature end of JPEG" in line
+
+
+@contextmanager
+def _codec_messages() -> Iterator[list[str]]:
+    """What a codec prints on the stderr of the process; what others print there meanwhile is passed on."""
+    said: list[str] = []
+    try:
+        stderr = os.dup(2)
+    except OSError:  # there is none
+        yield said
+        return
+    with tempfile.TemporaryFile() as caught:
+        os.dup2(caught.fileno(), 2)
+        try:
+            yield said
+        finally:
+            os.dup2(stderr, 2)
+            os.close(stderr)
+            caught.seek(0)
+            for line in caught.read().splitlines(keepends=True):
+                if b"JPEG" in line or b"JFIF" in line:
+                    said.append(line.decode(errors="replace"))
+                else:
+                    os.write(2, line)
+
+
 def _decode_tiff(data: bytes, file: str) -> NDArray[np.generic] | None:
     """The one page of a TIFF file as stored, None where it is damaged. Raises FrameError for other kinds."""
     try:
@@ -140,9 +192,10 @@ def _decode_tiff(data: bytes, file: str) -> NDArray[np.generic] | None:
             ):
                 name = getattr(page.photometric, "name", page.photometric)
                 raise FrameError(f"{file} is a TIFF file of the kind {name}: save grey or RGB without a palette.")
-            ends = [at + n for at, n in zip(page.dataoffsets, page.databytecounts, strict=True)]
-            if not ends or max(ends) > len(data) or min(page.databytecounts) <= 0:
+            if not _tiff_is_whole(page, len(data)):
                 return None
+            if page.compression == tifffile.COMPRESSION.LZW or page.bitspersample in (10, 12, 14):
+                return _decode_tiff_by_opencv(data, page)
             pixels = page.asarray()
             if page.samplesperpixel > 1:
                 pixels = np.moveaxis(pixels, 0, -1) if page.planarconfig == tifffile.PLANARCONFIG.SEPARATE else pixels
@@ -152,3 +205,25 @@ def _decode_tiff(data: bytes, file: str) -> NDArray[np.generic] | None:
         if "imagecodecs" in str(error):
             raise FrameError(f"{file} is compressed in a way that is not read: save TIFF plain or deflated.") from None
         return None
+
+
+def _tiff_is_whole(page: tifffile.TiffPage, size: int) -> bool:
+    """Whether all strips or tiles that the page's size calls for lie inside the file, and can hold its pixels."""
+    ends = [at + n for at, n in zip(page.dataoffsets, page.databytecounts, strict=True)]
+    whole = len(ends) == math.prod(page.chunked) and min(page.databytecounts, default=0) > 0 and max(ends) <= size
+    return whole and page.nbytes <= MOST_EXPANSION * size
+
+
+def _decode_tiff_by_opencv(data: bytes, page: tifffile.TiffPage) -> NDArray[np.generic] | None:
+    """LZW, and samples packed without gaps, which tifffile alone cannot take apart.
+
+    OpenCV would turn the picture by its orientation tag, so that is set to 1 first; it moves packed samples to the high
+    bits, which is undone.
+    """
+    plain = bytearray(data)
+    tag = page.tags.get("Orientation")
+    if tag is not None:
+        struct.pack_into(f"{page.parent.byteorder}H", plain, tag.valueoffset, 1)
+    pixels = _decode_by_opencv(bytes(plain))
+    unused = 16 - page.bitspersample if page.bitspersample in (10, 12, 14) else 0
+    return pixels if pixels is None or not unused else np.right_shift(pixels, unused, dtype=np.uint16)
