@@ -261,7 +261,7 @@ def check_regions(station: Station, width: int, height: int) -> None:
                     f"frame of {width} x {height} pixels: move or shrink it"
                 )
     if outside:
-        raise StationError(_message(outside, "station.toml"))
+        raise StationError(_message(outside, "The station file"))
 
 
 def _across_keys(data: Mapping[str, Any]) -> Iterator[str]:

@@ -128,38 +128,48 @@ class FolderSource:
 
     def leave_out_bad_frames(self) -> None:
         """Read every frame once; leave out, with a note, those that are missing, damaged, or unlike most others."""
-        faults: dict[str, FrameError] = {}
+        kinds, used, faults = self._survey()
+        if not kinds:
+            raise faults[min(faults)]
+        (shape, bits), _ = min(Counter(kinds.values()).items(), key=lambda item: (-item[1], item[0]))
+        usual = [file for file in self._order() if kinds.get(file) == (shape, bits)]
+        self._size, self._size_by = (shape[1], shape[0]), usual[0]
+        self._bits.settle(bits, [(file, used[file]) for file in usual])
+        for file, kind in kinds.items():
+            try:
+                if kind != (shape, bits):
+                    raise FrameError(f"{self.folder / file} is not of the size and depth of most other frames.")
+                self._bits.check(used[file], file)
+            except FrameError as error:
+                faults[file] = error
+        if not any(row.shot.role == "target" and file not in faults for file, row in self._rows.items()):
+            raise faults[min(faults)]
+        self._leave_out(faults)
+        self._check_sweep()
+        if self._station is not None:
+            check_regions(self._station, *self._size)
+
+    def _survey(self) -> tuple[dict[str, tuple[tuple[int, ...], int]], dict[str, int], dict[str, FrameError]]:
+        """Per file that can be read its (shape, bits a sample) and the bits in use; per other file what is wrong."""
         kinds: dict[str, tuple[tuple[int, ...], int]] = {}
         used: dict[str, int] = {}
+        faults: dict[str, FrameError] = {}
         for file, row in self._rows.items():
             try:
                 pixels = self._load(row)
             except FrameError as error:
                 faults[file] = error
             else:
-                kinds[file], used[file] = (pixels.shape, pixels.dtype.itemsize), bits_used(pixels)
-        if not kinds:
-            raise next(iter(faults.values()))
-        usual = min(Counter(kinds.values()).items(), key=lambda item: (-item[1], item[0]))[0]
-        self._size_by = min(file for file, kind in kinds.items() if kind == usual)
-        self._size = (usual[0][1], usual[0][0])
-        self._bits.settle(8 * usual[1], [(f, used[f]) for f in self._order() if kinds.get(f) == usual])
-        for file, kind in kinds.items():
-            try:
-                if kind != usual:
-                    raise FrameError(f"{self.folder / file} is not of the size and depth of most other frames.")
-                self._bits.check(used[file], file)
-            except FrameError as error:
-                faults[file] = error
-        for file, fault in faults.items():
+                kinds[file], used[file] = (pixels.shape, 8 * pixels.dtype.itemsize), bits_used(pixels)
+        return kinds, used, faults
+
+    def _leave_out(self, faults: dict[str, FrameError]) -> None:
+        for file, fault in sorted(faults.items()):
             row = self._rows.pop(file)
             self._digests.pop(file, None)
             self._compressed.discard(file)
             code = "frame-unreadable" if row.path.is_file() else "frame-missing"
             self._left_out.append(Note(code, f"Left out: {fault}"))
-        self._check_sweep()
-        if self._station is not None:
-            check_regions(self._station, *self._size)
 
     def _order(self) -> Iterator[str]:
         """The files of target frames, then of dark ones, in an order that does not depend on the table's."""

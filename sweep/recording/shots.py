@@ -44,12 +44,12 @@ def read_text(path: Path, fault: type[InputError], what: str) -> str:
     try:
         if not path.is_file():
             there = "is not a file" if path.exists() else "is not there"
-            raise fault(f"{path} {there}: a {what} is needed. Check the path.")
+            raise fault(f"{path} {there}. Put there, or name, a {what}.")
         data = path.read_bytes()
     except OSError as error:
         raise fault(f"{path} cannot be read: {error.strerror}. Check the path and its permissions.") from None
     if b"\0" in data or (fault is StationError and len(data) > LARGEST_STATION_BYTES):
-        raise fault(f"{path} is not a text file: a {what} is needed. Check the path.")
+        raise fault(f"{path} is not a text file. Put there, or name, a {what}.")
     try:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
@@ -64,7 +64,7 @@ def read_table(folder: Path, station: Station | None) -> list[Row]:
     target names are checked too. That the files are there is not checked here.
     """
     where = folder / SHOTS
-    text = read_text(where, SourceError, "table of shots")
+    text = read_text(where, SourceError, f"table of shots with the columns {','.join((*REQUIRED, 'role'))}")
     if text.startswith(",".join(RECORDED)) and not text.endswith("\n"):
         text = text[: text.rfind("\n") + 1]  # a recording that was torn off in its last row
     try:
@@ -104,8 +104,10 @@ def _header(cells: Sequence[str], where: Path) -> list[str]:
     names = [c.strip() for c in cells]
     missing = [name for name in REQUIRED if name not in names]
     twice = [name for name in (*REQUIRED, *OPTIONAL) if names.count(name) > 1]
-    if missing and len(names) == 1 and re.search("[;\t]", names[0]):
-        raise SourceError(f"{where} is separated by {shown(names[0][4:5])}: save it with commas between the columns.")
+    other = re.search("[;\t|]", names[0]) if len(names) == 1 else None
+    if missing and other:
+        mark = "tabs" if other[0] == "\t" else f'"{other[0]}"'
+        raise SourceError(f"{where}, row 1: columns are parted by {mark}. Save the table with commas between them.")
     if missing:
         near = get_close_matches(missing[0], [n.lower() for n in names], n=1, cutoff=0.6)
         hint = f" Is it the one called {shown(near[0])}?" if near else ""
