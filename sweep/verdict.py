@@ -1,0 +1,103 @@
+"""The answer in few words, the same on screen, plot and page.
+
+Codes and keys stay in the files; people read these words. Pure: records in, text out.
+"""
+
+from sweep.choose.wording import number
+from sweep.result import Recommendation, Result, Stop
+from sweep.station import Station
+
+WHY_NOT = {
+    "exposure": "too little light",
+    "noise": "too noisy",
+    "contrast": "too little contrast",
+    "beyond-nyquist": "too fine for the pixels",
+    "no-reading": "no sound reading",
+    "unproven": "not proven",
+}
+"""What speaks against a stop, by the code in `why_not`."""
+
+LIMITED_BY = {
+    "depth": "depth: the targets do not all lie in focus",
+    "aberration": "aberration: the lens's own errors",
+    "diffraction": "diffraction at the iris",
+    "sampling": "sampling: pixel size and sensor blur",
+    "exposure": "exposure: a sharper stop gets too little light",
+    "noise": "noise: a sharper stop is too noisy",
+}
+"""What stands in the way of a better contrast, by the code in `limited_by`."""
+
+_COUNT = ("no", "one", "two", "three", "four", "five", "six", "seven", "eight", "nine")
+
+
+def stop_name(stop: float) -> str:
+    """A stop as engraved: `f/5.6`."""
+    return f"f/{stop:g}"
+
+
+def stop_verdict(stop: Stop) -> str:
+    """Whether a stop meets the need, or what speaks against it."""
+    if stop.meets_need:
+        return "meets the need"
+    return ", ".join(WHY_NOT.get(code, code) for code in stop.why_not) or "does not meet the need"
+
+
+def setting(exposure_ms: float | None, gain_db: float | None) -> str:
+    """Exposure and gain: `3.9 ms, 0 dB`."""
+    if exposure_ms is None:
+        return "exposure unknown"
+    return f"{number(exposure_ms)} ms, {gain_db or 0.0:.1f} dB".replace(" 0.0 dB", " 0 dB").replace("-0 dB", "0 dB")
+
+
+def with_u(value: float | None, u: float | None, digits: int = 3) -> str:
+    """A value with its expanded uncertainty, k = 2: `0.412 ± 0.008`; a dash where there is none."""
+    if value is None:
+        return "–"
+    return f"{value:.{digits}f}" if u is None else f"{value:.{digits}f} ± {2 * u:.{digits}f}"
+
+
+def chosen_stop(result: Result) -> Stop | None:
+    """The recommended stop's record."""
+    return next((s for s in result.stops if s.stop == result.recommendation.stop), None)
+
+
+def headline(result: Result, station: Station) -> str:
+    """The answer in one sentence, without its full stop."""
+    chosen = chosen_stop(result)
+    if chosen is None:
+        return "No stop can be recommended: none has a sound reading at every target"
+    use = _use(result.recommendation)
+    if result.recommendation.meets_need:
+        return f"{use}: meets the need {_where(station)}"
+    if set(chosen.why_not) == {"unproven"}:
+        return f"{use}: not proven to meet the need"
+    return f"No stop meets the need; the best is {use} ({stop_verdict(chosen)})"
+
+
+def contrast_line(result: Result, station: Station) -> str:
+    """The worst target's contrast against the need, as a sentence."""
+    chosen = chosen_stop(result)
+    if chosen is None or chosen.worst_contrast is None or chosen.worst_target is None:
+        return (
+            f"A contrast of {station.need.contrast:g} is needed at a feature of {number(station.need.feature_um)} um."
+        )
+    return (
+        f"Contrast of a {number(station.need.feature_um)} um feature at {chosen.worst_target}, the worst: "
+        f"{with_u(chosen.worst_contrast, chosen.worst_contrast_u)} (k = 2); {station.need.contrast:g} is needed."
+    )
+
+
+def _use(recommendation: Recommendation) -> str:
+    return f"{stop_name(recommendation.stop or 0.0)}, {setting(recommendation.exposure_ms, recommendation.gain_db)}"
+
+
+def _where(station: Station) -> str:
+    if station.need.depth_range_mm is not None:
+        near, far = station.need.depth_range_mm
+        return f"at all depths from {near:g} to {far:g} mm"
+    n = len(station.targets)
+    if n == 1:
+        return f"at {station.targets[0].name}"
+    if n == 2:
+        return "at both targets"
+    return f"at all {_COUNT[n] if n < len(_COUNT) else n} targets"
