@@ -28,7 +28,7 @@ def parse_station(text: str, where: str = "station.toml") -> Station:
     try:
         data = tomllib.loads(text.removeprefix("\ufeff"))
     except tomllib.TOMLDecodeError as error:
-        raise StationError(f"{where} is not valid TOML: {_line_first(str(error))}. Mend that line.") from None
+        raise StationError(f"{where} is not valid TOML: {_line_first(str(error), text)}. Mend that line.") from None
     except (ValueError, RecursionError):  # numbers of thousands of digits, thousands of nested brackets
         raise StationError(f"{where} is not valid TOML: a value is far too long or too deeply nested.") from None
     return build_station(data, where)
@@ -171,13 +171,14 @@ def _shown(value: object) -> str:
     return text if len(text) <= 60 else text[:57] + "..."
 
 
-def _line_first(text: str) -> str:
+def _line_first(text: str, document: str) -> str:
     """A TOML message with its place in front: `line 3, column 5: what`."""
     found = re.fullmatch(r"(.*) \(at (?:line (\d+), column (\d+)|(end of document))\)", text, re.DOTALL)
     what = "".join(c if c.isprintable() else "?" for c in (found[1] if found else text))
     if found is None:
         return what
-    return f"at its end: {what}" if found[4] else f"line {found[2]}, column {found[3]}: {what}"
+    place = f"line {len(document.splitlines())}, at the end" if found[4] else f"line {found[2]}, column {found[3]}"
+    return f"{place}: {what}"
 
 
 def _message(mistakes: Sequence[_Mistake], where: str) -> str:
