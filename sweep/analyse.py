@@ -6,16 +6,17 @@ from dataclasses import replace
 import numpy as np
 
 from sweep.choose import Place, StopEvidence, choose
-from sweep.figures import NYQUIST_CY_PX, reading_of
+from sweep.figures import reading_of
 from sweep.fit import AmplitudeData, EdgeData, LensFit, Problem, StopLight, View, fit_lens
 from sweep.frames import Source
 from sweep.lens import Bench
 from sweep.light import Light, light_of
 from sweep.measure.edge import EdgeProfile
 from sweep.measure.linear import Floats
+from sweep.measure.star_level import SQUARE_WAVE
 from sweep.notices import notices
 from sweep.outlook import Estimate, FittedLens, estimate, model_transfer
-from sweep.readings import Progress, Sighting, Sweep, measure_sweep
+from sweep.readings import CLIPPED_SHARE, Progress, Sighting, Sweep, measure_sweep
 from sweep.result import CameraNoise, CurvePoint, LensModel, Reading, Result, SourceFacts
 from sweep.station import Station
 
@@ -39,7 +40,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
     rng = np.random.default_rng(SEED)
     contrast, contrast_u = _contrasts(sweep, readings, places)
     found = estimate(places, contrast, contrast_u, fit, rng)
-    evidence = _evidence(sweep, readings, light, station)
+    evidence = _evidence(sweep, light, fit, station)
     camera = _camera(sweep)
     lens = FittedLens(fit) if fit is not None else None
     compressed = any(note.code == "compressed-source" for note in source.notes)
@@ -68,6 +69,7 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
     """The lens fit, or None where there is too little to fit."""
     edges: list[EdgeData] = []
     amplitudes: list[AmplitudeData] = []
+    prints = _columns(sweep)
     for sighting in _sharp(sweep):
         stop = sweep.stops.index(sighting.stop)
         if sighting.edge is not None and sighting.edge.profile is not None and sighting.edge.transfer is not None:
@@ -76,6 +78,10 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
             d, width, value, u, gradient = rebinned(edge.profile, edge.spread_px)
             view = View(stop, sighting.site.target, edge.curve.direction_deg)
             edges.append(EdgeData(view, d, width, value, u, gradient, _ratio(sweep, sighting), RATIO_U, edge.transfer))
+        elif sighting.star is not None and sighting.star_curve is not None:
+            amplitudes.append(_star_data(sighting, stop, prints[sighting.site.target, sighting.site.patch]))
+        elif sighting.bars is not None:
+            amplitudes.append(_bars_data(sighting, stop, prints[sighting.site.target, sighting.site.patch]))
     if not edges and not amplitudes:
         return None
     known = np.isfinite(light.f_number)
@@ -83,6 +89,51 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
     ln_u = np.where(known, np.hypot(np.where(known, light.ln_u, 0.0), 1e-3), UNKNOWN_STOP_LN_U)
     depths = np.array([t.depth_mm for t in station.targets])
     return fit_lens(Problem.of(Bench.of(station), depths, StopLight(f_number, ln_u), edges, amplitudes))
+
+
+USUAL_PRINT = 0.9
+USUAL_PRINT_LN_U = 0.08
+"""Modulation of a printed black on white of which nothing is stated, and ln u (common practice, no source)."""
+
+
+def _star_data(sighting: Sighting, stop: int, scale: int) -> AmplitudeData:
+    """A star's rings, as transfer by its own level at zero frequency; the error of that level is the scale's."""
+    assert sighting.star is not None and sighting.star.rings is not None and sighting.star_curve is not None
+    rings, curve = sighting.star.rings, sighting.star_curve
+    unit = SQUARE_WAVE * curve.ratio * float(np.median(rings.level))
+    order = np.argsort(rings.v_cy_px)
+    ln_u = curve.ratio_u / curve.ratio if curve.surround else USUAL_PRINT_LN_U
+    return AmplitudeData(
+        View(stop, sighting.site.target, None),
+        rings.v_cy_px[order],
+        rings.signed[order] / unit,
+        rings.u[order] / unit,
+        scale,
+        0.0,
+        max(ln_u, 1e-3),
+    )
+
+
+def _bars_data(sighting: Sighting, stop: int, scale: int) -> AmplitudeData:
+    """A set of bars, as transfer for the print's contrast that the bars tell by themselves, or for a usual one."""
+    bars, told, stated = sighting.bars, sighting.bars_contrast, sighting.site.spec.modulation
+    assert bars is not None
+    value, u = bars.relative
+    unit, ln_u = SQUARE_WAVE * USUAL_PRINT, USUAL_PRINT_LN_U
+    if told is not None:
+        unit, ln_u = SQUARE_WAVE * told.ratio, told.ratio_u / told.ratio
+        value = float(np.copysign(value, told.contrast))
+    elif stated != 1.0:
+        unit, ln_u = SQUARE_WAVE * stated, 0.02
+    return AmplitudeData(
+        View(stop, sighting.site.target, bars.direction_deg),
+        np.array([bars.v_cy_px]),
+        np.array([value / unit]),
+        np.array([u / unit]),
+        scale,
+        0.0,
+        max(ln_u, 1e-3),
+    )
 
 
 def _ratio(sweep: Sweep, sighting: Sighting) -> float:
@@ -134,8 +185,12 @@ def _direction(sweep: Sweep, target: int, patch: int, kind: str) -> float | None
     if kind == "star":
         return None
     for s in sweep.sightings:
-        if (s.site.target, s.site.patch) == (target, patch) and s.ok and s.edge is not None and s.edge.curve is not None:
+        if (s.site.target, s.site.patch) != (target, patch) or not s.ok:
+            continue
+        if s.edge is not None and s.edge.curve is not None:
             return s.edge.curve.direction_deg
+        if s.bars is not None:
+            return s.bars.direction_deg
     return 0.0
 
 
@@ -160,47 +215,72 @@ def _columns(sweep: Sweep) -> dict[tuple[int, int], int]:
     return {key: i for i, key in enumerate(keys)}
 
 
-def _evidence(sweep: Sweep, readings: Sequence[Reading], light: Light, station: Station) -> list[StopEvidence]:
+def _evidence(sweep: Sweep, light: Light, fit: LensFit | None, station: Station) -> list[StopEvidence]:
     """What light and readings say of each stop."""
-    tones = _tones(sweep, light)
+    tones = _tones(sweep, light, fit, station)
     out = []
     for k, stop in enumerate(sweep.stops):
-        here = [(s, r) for s, r in zip(sweep.sightings, readings, strict=True) if s.stop == stop]
-        sharp = [(s, r) for s, r in here if s.kind != "flat"]
-        told = {s.site.target for s, r in sharp if r.ok}
-        f = float(light.f_number[k])
-        known = bool(np.isfinite(f))
+        here = sweep.at(stop)
+        told = {s.site.target for s in here if s.ok and s.kind != "flat"}
+        known = bool(np.isfinite(light.f_number[k]))
         tone = tones[k]
+        swept = max((s for s in here if s.ok), key=lambda s: float(s.exposures.max()), default=None)
         out.append(
             StopEvidence(
                 stop=stop,
-                f_number_by_light=f if known else None,
+                f_number_by_light=float(light.f_number[k]) if known else None,
                 f_number_by_light_u=float(light.u[k]) if known else None,
                 tone_per_ms=tone / sweep.scale.span_dn if tone is not None else None,
                 sound=told == set(range(len(station.targets))),
-                frames=max((s.frames for s, _ in here), default=0),
+                snr_swept_db=_snr_swept_db(here, tone),
+                exposure_swept_ms=float(swept.exposures.max()) if swept is not None else None,
+                frames=max((s.frames for s in here), default=0),
             )
         )
     return out
 
 
-def _tones(sweep: Sweep, light: Light) -> list[float | None]:
+def _snr_swept_db(here: Sequence[Sighting], tone: float | None) -> float | None:
+    """Signal to noise of one pixel at the light tone as swept, from the brightest even area, by the square root of light."""
+    points = [(p, s) for s in here if s.saturated_fraction <= CLIPPED_SHARE for p in s.noise if p.variance_dn2 > 0 and p.mean_dn > 0]
+    if not points or tone is None:
+        return None
+    point, sighting = max(points, key=lambda pair: pair[0].mean_dn)
+    light = tone * float(sighting.exposures.max())
+    return float(20.0 * np.log10(point.mean_dn / np.sqrt(point.variance_dn2)) + 10.0 * np.log10(light / point.mean_dn))
+
+
+def _tones(sweep: Sweep, light: Light, fit: LensFit | None, station: Station) -> list[float | None]:
     """The light tone per ms (linear DN) at each stop: the brightest of its unclipped patches, else by the light's ratio."""
     direct: list[float | None] = []
     for stop in sweep.stops:
-        tones = [s.tone_per_ms for s in sweep.at(stop) if s.tone_per_ms is not None and s.ok]
-        complete = all(s.ok or s.tone_per_ms is None for s in sweep.at(stop))
+        here = [(s, _tone(sweep, s, fit)) for s in sweep.at(stop)]
+        tones = [t for s, t in here if s.ok and t is not None]
+        complete = all(s.ok or "frames-saturated" not in s.why_not for s, _ in here)
         direct.append(max(tones) if tones and complete else None)
     known = [(k, t) for k, t in enumerate(direct) if t is not None]
     out = list(direct)
     for k, tone in enumerate(direct):
         if tone is None and known:
             near, near_tone = min(known, key=lambda pair: abs(pair[0] - k))
-            f, g = (
-                float(light.f_number[i]) if np.isfinite(light.f_number[i]) else sweep.stops[i] for i in (near, k)
-            )
+            f, g = (float(light.f_number[i]) if np.isfinite(light.f_number[i]) else sweep.stops[i] for i in (near, k))
             out[k] = near_tone * (f / g) ** 2
     return out
+
+
+def _tone(sweep: Sweep, sighting: Sighting, fit: LensFit | None) -> float | None:
+    """A patch's light tone per ms: of an edge or flat as measured; of a star or bars their level and print contrast."""
+    if sighting.tone_per_ms is not None:
+        return sighting.tone_per_ms
+    if sighting.star is not None and sighting.star.rings is not None and sighting.star_curve is not None:
+        return float(np.median(sighting.star.rings.level)) * (1.0 + sighting.star_curve.ratio)
+    if sighting.bars is not None and sighting.bars.ok:
+        contrast = sighting.bars_contrast.ratio if sighting.bars_contrast is not None else USUAL_PRINT
+        if fit is not None:
+            scale = f"scale {_columns(sweep)[sighting.site.target, sighting.site.patch]}"
+            contrast *= float(np.exp(fit.value(scale)[0])) if scale in fit.names else 1.0
+        return sighting.bars.level * (1.0 + min(contrast, 1.0))
+    return None
 
 
 def _camera(sweep: Sweep) -> CameraNoise:

@@ -1,6 +1,9 @@
 """From what a patch says to the figures of a reading: half-modulation frequency, contrast at the feature, smallest feature."""
 
+import numpy as np
+
 from sweep.measure.mtf import Transfer
+from sweep.measure.star_level import SQUARE_WAVE
 from sweep.readings import Sighting
 from sweep.result import Reading
 from sweep.station import Station
@@ -24,11 +27,16 @@ def reading_of(sighting: Sighting, station: Station) -> Reading:
     if sighting.ok and sighting.kind != "flat" and feature > NYQUIST_CY_PX:
         why = (*why, "beyond-nyquist")
     curve = sighting.transfer
+    if sighting.ok and sighting.bars is not None:
+        return _bars_reading(sighting, station, why, base)
     if not sighting.ok or curve is None:
         return Reading(ok=sighting.ok, why_not=why, **base)  # type: ignore[arg-type]
-    half = curve.first_fall_to(0.5)
-    at_feature = curve.at(feature) if feature <= 1.0 else None
+    star = sighting.star_curve
+    half = star.mtf50() if star is not None else curve.first_fall_to(0.5)
+    at_feature = star.contrast(feature) if star is not None else curve.at(feature)
     smallest = _smallest_feature(curve, station, target.depth_mm)
+    if star is not None and smallest is not None and star.contrast(smallest[2]) is None:
+        smallest = None
     return Reading(
         ok=True,
         why_not=why,
@@ -39,14 +47,57 @@ def reading_of(sighting: Sighting, station: Station) -> Reading:
         reversed=bool(at_feature and at_feature[0] < -2.0 * at_feature[1]),
         smallest_feature_um=smallest[0] if smallest else None,
         smallest_feature_um_u=smallest[1] if smallest else None,
+        **_astigmatism(sighting, feature),
         **base,  # type: ignore[arg-type]
     )
 
 
-def _smallest_feature(curve: Transfer, station: Station, depth_mm: float) -> tuple[float, float] | None:
-    """Half the period (um, object) at which the curve first falls to the needed contrast; None beyond Nyquist."""
+def _bars_reading(
+    sighting: Sighting, station: Station, why: tuple[str, ...], base: dict[str, object]
+) -> Reading:
+    """What a set of bars says: the contrast at its own frequency, and at the feature's where that is the same."""
+    bars, told, period_um = sighting.bars, sighting.bars_contrast, sighting.site.spec.period_um
+    assert bars is not None and period_um is not None
+    if told is None:
+        return Reading(ok=True, why_not=why, bars_cy_px=bars.v_cy_px, **base)  # type: ignore[arg-type]
+    at_feature = abs(period_um / (2.0 * station.need.feature_um) - 1.0) < SAME_PERIOD
+    return Reading(
+        ok=True,
+        why_not=why,
+        contrast_at_bars=abs(told.contrast),
+        contrast_at_bars_u=told.contrast_u,
+        bars_cy_px=told.bars_cy_px,
+        reversed=told.contrast < -2.0 * told.contrast_u,
+        contrast_at_feature=abs(told.contrast) if at_feature else None,
+        contrast_at_feature_u=told.contrast_u if at_feature else None,
+        **base,  # type: ignore[arg-type]
+    )
+
+
+SAME_PERIOD = 1e-3
+
+
+def _astigmatism(sighting: Sighting, feature: float) -> dict[str, float | None]:
+    """A star's difference over directions at the feature: the half range of contrast, and its u."""
+    star, curve = sighting.star, sighting.star_curve
+    if star is None or star.rings is None or curve is None or not curve.rim_cy_px <= feature <= curve.limit_cy_px:
+        return {}
+    rings = star.rings
+    v = rings.v_cy_px
+    order = np.argsort(v)
+    scale = np.maximum(rings.level * curve.ratio * SQUARE_WAVE, 1e-12)
+    range_ = np.hypot(*rings.astigmatic.T) / scale
+    u = rings.astigmatic_u if rings.astigmatic_u.ndim == 1 else rings.astigmatic_u.mean(axis=1)
+    return {
+        "astigmatic_contrast": float(np.interp(feature, v[order], range_[order])),
+        "astigmatic_contrast_u": float(np.interp(feature, v[order], (u / scale)[order])),
+    }
+
+
+def _smallest_feature(curve: Transfer, station: Station, depth_mm: float) -> tuple[float, float, float] | None:
+    """Half the period (um, object), with u and frequency (cycles/pixel), at which the curve first falls to the needed contrast; None beyond Nyquist."""
     fall = curve.first_fall_to(station.need.contrast)
     if fall is None or fall[0] > NYQUIST_CY_PX:
         return None
     size = station.object_um_per_px_at(depth_mm) / (2.0 * fall[0])
-    return size, size * fall[1] / fall[0]
+    return size, size * fall[1] / fall[0], fall[0]

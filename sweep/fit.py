@@ -3,10 +3,11 @@
 Edges enter with their spread functions, stars and bars with their amplitudes, the light with each ring position's
 f-number. Levels, position and light gradient of an edge are linear and are projected out (variable projection, Golub and
 Pereyra, SIAM J. Numer. Anal. 10, 413-432, 1973); the scale of a star or bar print is a parameter of its own. Weak priors
-keep small what is small in a sound lens. The solver is scipy's trust-region least squares with the derivatives given.
+keep small what is small in a sound lens. The solver is MINPACK's
+Levenberg-Marquardt with the derivatives given.
 """
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -53,13 +54,18 @@ class EdgeData:
 
 @dataclass(frozen=True, slots=True)
 class AmplitudeData:
-    """Modulation at frequencies (m,) cycles per pixel, up to a scale that belongs to print `scale` (an index)."""
+    """Modulation at frequencies (m,) cycles per pixel, up to a scale that belongs to print `scale` (an index).
+
+    `ln_scale`, `ln_scale_u`: what is known of it beforehand.
+    """
 
     view: View
     v_cy_px: Floats
     value: Floats
     u: Floats
     scale: int
+    ln_scale: float
+    ln_scale_u: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -151,9 +157,9 @@ class Problem:
         for t in range(len(depths_mm)):
             names += [f"shift {t}", f"astigmatism {t}"]
             prior += [(0.0, wander), (0.0, wander)]
-        for k in sorted({a.scale for a in amplitudes}):
+        for k, known in sorted({a.scale: (a.ln_scale, a.ln_scale_u) for a in amplitudes}.items()):
             names.append(f"scale {k}")
-            prior.append((0.0, 3.0))
+            prior.append(known)
         return cls(bench, depths_mm, light, tuple(edges), tuple(amplitudes), tuple(names), tuple(prior))
 
     @property
@@ -312,20 +318,17 @@ class _Residuals:
         return np.asarray(wave @ self.nodes.interpolation(row, v))
 
     def __call__(self, theta: Floats) -> Floats:
-        return self._evaluate(theta)[0]
+        return self.evaluate(theta)[0]
 
     def jacobian(self, theta: Floats) -> Floats:
-        return self._evaluate(theta)[1]
-
-    def blocks(self, theta: Floats) -> list[slice]:
-        """Which rows belong to each view."""
-        return self._evaluate(theta)[2]
+        return self.evaluate(theta)[1]
 
     def forget(self) -> None:
         """To be called after `widen` has changed."""
         self._at = None
 
-    def _evaluate(self, theta: Floats) -> tuple[Floats, Floats, list[slice]]:
+    def evaluate(self, theta: Floats) -> tuple[Floats, Floats, list[slice]]:
+        """Residuals, Jacobian, and the rows of each view's data."""
         if self._at is not None and np.array_equal(self._at, theta):
             return self._kept
         value, slopes = transfer_slopes(self.optics, self.nodes, theta)
@@ -387,56 +390,110 @@ def fit_lens(problem: Problem) -> LensFit:
     """
     if not problem.views:
         raise ValueError("nothing to fit: no edge and no amplitude")
-    best: LensFit | None = None
-    rivals: list[tuple[float, LensFit]] = []
-    for start in _starts(problem):
-        fitted, cost = _solve(problem, start)
-        rivals.append((cost, fitted))
-    rivals.sort(key=lambda pair: pair[0])
-    best_cost, best = rivals[0]
-    others = tuple((cost - best_cost, f.theta) for cost, f in rivals[1:] if cost - best_cost < 6.0 and _differs(best, f))
-    return replace(best, rivals=others)
+    rough = sorted((_rough(problem, start) for start in _starts(problem)), key=lambda pair: pair[0])
+    near = [theta for cost, theta in rough if cost - rough[0][0] < RIVAL_CHI2]
+    finished = [_finish(problem, theta) for theta in near[:2]]
+    (best, best_chi2), *others = sorted(finished, key=lambda pair: pair[1])
+    rivals = tuple((chi2 - best_chi2, f.theta) for f, chi2 in others if chi2 - best_chi2 < 6.0 and _differs(best, f))
+    return replace(best, rivals=rivals)
+
+
+RIVAL_CHI2 = 60.0
+"""A rough solution this much worse (in units of the best one's reduced chi-square) is not looked at again."""
 
 
 def _differs(one: LensFit, other: LensFit) -> bool:
     return bool(abs(one.theta[0] - other.theta[0]) > 2.0 * np.sqrt(one.covariance[0, 0]))
 
 
-def _solve(problem: Problem, start: Floats) -> tuple[LensFit, float]:
-    """Fit from one start; blocks that fit far worse than the rest lose weight, once. Returns the fit and its chi-square."""
+def minimise(
+    residuals: Callable[[Floats], Floats],
+    jacobian: Callable[[Floats], Floats],
+    start: Floats,
+    scale: Floats,
+    tolerance: float,
+) -> Floats:
+    """Parameters (p,) of the least sum of squares, by MINPACK's Levenberg-Marquardt with the derivatives given.
+
+    residuals: (p,) -> (m,), m >= p; jacobian: (p,) -> (m, p); scale: (p,) typical size of each parameter; tolerance:
+    relative change of the sum and of the parameters at which it stops.
+    """
+    found = least_squares(
+        lambda x: residuals(x * scale),
+        start / scale,
+        jac=lambda x: jacobian(x * scale) * scale,
+        method="lm",
+        ftol=tolerance,
+        xtol=tolerance,
+        gtol=1e-12,
+        max_nfev=MOST_STEPS,
+    )
+    return np.asarray(found.x * scale)
+
+
+MOST_STEPS = 200
+ROUGH, FINE = 1e-3, 1e-7
+
+
+def _typical(problem: Problem) -> Floats:
+    return np.minimum(np.array(problem.prior)[:, 1], 1.0)
+
+
+def _rough(problem: Problem, start: Floats) -> tuple[float, Floats]:
+    """A rough solution from one start, and its sum of squares over its reduced chi-square where that is above 1."""
     residuals = _Residuals(problem, start)
-    deviation = np.array(problem.prior)[:, 1]
-    scale = np.minimum(deviation, 1.0)
+    theta = minimise(residuals, residuals.jacobian, start, _typical(problem), ROUGH)
+    total = float(np.sum(residuals(theta) ** 2))
+    return total / max(1.0, total / len(residuals(theta))), theta
+
+
+def _finish(problem: Problem, start: Floats) -> tuple[LensFit, float]:
+    """The fit from a rough solution, with its chi-square.
+
+    Where the model does not describe the data their uncertainties are widened until it does, blocks that fit far worse
+    than the rest further than these, so that the priors and the light keep their say.
+    """
+    residuals = _Residuals(problem, start)
     theta = start
-    for turn in range(2):
-        found = least_squares(residuals, theta, jac=residuals.jacobian, method="trf", x_scale=scale, ftol=1e-9, xtol=1e-9, gtol=1e-9, max_nfev=60)
-        theta = found.x
-        r, _, blocks = residuals._evaluate(theta)
-        misfit = np.array([float(np.sum(r[b] ** 2)) / max(b.stop - b.start - 4, 1) for b in blocks])
-        if turn == 0:
-            usual = max(1.0, float(np.median(misfit)))
-            residuals.widen = np.sqrt(np.maximum(1.0, misfit / (2.5 * usual)))
-            if (residuals.widen == 1.0).all():
-                break
-            residuals.forget()
-    r, jacobian, blocks = residuals._evaluate(theta)
-    rows = blocks[-1].stop
-    free = rows - 4 * len(problem.edges) - 6
-    chi2 = float(np.sum(r[:rows] ** 2)) / max(free, 1)
+    for turn in range(TURNS):
+        r, jacobian, blocks = residuals.evaluate(theta)
+        rows = blocks[-1].stop
+        misfit, chi2 = _misfit(r, blocks, residuals.widen, 4 * len(problem.edges) + 6)
+        if turn > 0 and (turn == TURNS - 1 or np.allclose(_widening(misfit, chi2), residuals.widen, rtol=0.1)):
+            break
+        residuals.widen = _widening(misfit, chi2)
+        residuals.forget()
+        theta = minimise(residuals, residuals.jacobian, theta, _typical(problem), FINE)
+    r, jacobian, blocks = residuals.evaluate(theta)
     data, prior = jacobian[:rows], jacobian[rows:]
-    covariance = np.linalg.inv(data.T @ data / max(1.0, chi2) + prior.T @ prior)
-    steps = _focus_steps(residuals, theta, r, jacobian, chi2)
+    covariance = np.linalg.inv(data.T @ data + prior.T @ prior)
+    steps = _focus_steps(residuals, theta, r, jacobian)
     fitted = LensFit(
         problem.bench, problem.depths_mm, problem.light, problem.names, theta, covariance, chi2, misfit, problem.views, steps
     )
-    return fitted, float(np.sum(r**2)) / max(1.0, chi2)
+    return fitted, float(np.sum(r**2))
 
 
-def _focus_steps(residuals: _Residuals, theta: Floats, r: Floats, jacobian: Floats, chi2: float) -> tuple[FocusStep, ...]:
+TURNS = 4
+
+
+def _misfit(r: Floats, blocks: Sequence[slice], widen: Floats, fitted: int) -> tuple[Floats, float]:
+    """Reduced chi-square of each block and of all, by the data's own u; `fitted` parameters went into them."""
+    squares = np.array([float(np.sum(r[b] ** 2)) * w**2 for b, w in zip(blocks, widen, strict=True)])
+    free = np.array([max(b.stop - b.start - 4, 1) for b in blocks])
+    return squares / free, float(squares.sum()) / max(blocks[-1].stop - fitted, 1)
+
+
+def _widening(misfit: Floats, chi2: float) -> Floats:
+    """By what factor the u of each block must grow."""
+    return np.sqrt(np.maximum(max(1.0, chi2), misfit / 2.5))
+
+
+def _focus_steps(residuals: _Residuals, theta: Floats, r: Floats, jacobian: Floats) -> tuple[FocusStep, ...]:
     """Score test (Rao) of one more parameter: a focus that is another from stop k on, for each k."""
     problem = residuals.problem
     stops = np.array([v.stop for v in problem.views])
-    blocks = residuals.blocks(theta)
+    blocks = residuals.evaluate(theta)[2]
     q, _ = np.linalg.qr(jacobian)
     pupil = residuals.optics.pupil(theta)
     by_focus = residuals.optics.slopes(theta, pupil)[0][0]
@@ -452,7 +509,7 @@ def _focus_steps(residuals: _Residuals, theta: Floats, r: Floats, jacobian: Floa
         if strength <= 1e-9 * float(column @ column):
             continue
         shift = -float(free @ r) / strength
-        z = shift * np.sqrt(strength / max(1.0, chi2))
+        z = shift * np.sqrt(strength)
         out.append(FocusStep(int(k), shift, shift * float(np.abs(by_focus[stops == k]).max()), float(z)))
     return tuple(out)
 

@@ -13,6 +13,7 @@ import numpy as np
 
 from sweep.errors import SourceError
 from sweep.frames import Pixels, Shot, Source
+from sweep.measure.bars import BarsContrast, BarsMeasure, bars_contrasts, read_bars
 from sweep.measure.edge import EdgeMeasure, read_edge
 from sweep.measure.linear import (
     COLOUR_SITES,
@@ -27,7 +28,9 @@ from sweep.measure.linear import (
 )
 from sweep.measure.mtf import Transfer
 from sweep.measure.noise import NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer
-from sweep.result import Note, PatchKind
+from sweep.measure.star import StarMeasure, read_star
+from sweep.measure.star_level import StarCurve, star_curves
+from sweep.result import PatchKind
 from sweep.station import Patch, Station
 
 MOST_SLOTS = 32
@@ -68,6 +71,10 @@ class Sighting:
     tone_per_ms: float | None
     exposures: Floats
     edge: EdgeMeasure | None = None
+    star: StarMeasure | None = None
+    star_curve: StarCurve | None = None
+    bars: BarsMeasure | None = None
+    bars_contrast: BarsContrast | None = None
     noise: tuple[NoisePoint, ...] = ()
 
     @property
@@ -75,18 +82,33 @@ class Sighting:
         """How far each frame's pattern lies from their mean, (n, axes) px, and the u of one figure; None: not told."""
         if self.edge is not None and self.edge.ok and self.edge.shift_px is not None:
             return self.edge.shift_px[:, None], self.edge.shift_u_px
+        if self.star is not None and self.star.ok:
+            return self.star.shift_px, self.star.shift_u_px
+        if self.bars is not None and self.bars.ok:
+            return self.bars.shift_px[:, None], self.bars.shift_u_px
         return None
+
+    @property
+    def strength(self) -> float:
+        """How clearly a star or bars stand out: amplitude over level."""
+        if self.star is not None and self.star.rings is not None:
+            return float(self.star.rings.amplitude[0] / self.star.rings.level[0])
+        return self.bars.relative[0] if self.bars is not None else 0.0
 
     @property
     def position_px(self) -> tuple[float, ...] | None:
         """Where the pattern lies in the region, px: an edge across itself, a star's centre."""
         if self.edge is not None and self.edge.ok and self.edge.curve is not None:
             return (self.edge.curve.coefficients[0],)
+        if self.star is not None and self.star.ok:
+            return self.star.centre_px
         return None
 
     @property
     def transfer(self) -> Transfer | None:
         """The signed transfer of lens and camera that the patch shows by itself."""
+        if self.star_curve is not None:
+            return self.star_curve.transfer
         return self.edge.transfer if self.edge is not None else None
 
     @property
@@ -153,6 +175,7 @@ def measure_sweep(source: Source, station: Station, progress: Progress | None = 
         assert stop is not None
         stops.append(stop)
         sightings += pass_.stop(stop, list(group), sites, scale)
+    sightings = _with_bars_contrasts(_with_star_curves(pass_.look_again(sightings)))
     points = [p for s in sightings for p in s.noise if s.saturated_fraction < CLIPPED_SHARE] + list(black.noise)
     return Sweep(
         tuple(stops),
@@ -201,6 +224,7 @@ class _Pass:
         self.done = 0
         self.shape: tuple[int, ...] = ()
         self.row_light: list[Floats] = []
+        self._unfound: list[tuple[float, PatchSite, list[_Slot], Scale]] = []
         self._hashes: dict[bytes, list[str]] = {}
         self._bits = 0
 
@@ -256,7 +280,25 @@ class _Pass:
                 if shot.target is None or shot.target == self.station.targets[site.target].name:
                     _add(mine, _cut(pixels, site, shot, scale), per_slot)
         self.row_light.append(_row_ratios(np.stack(rows)))
-        return [measure_patch(stop, site, mine, self.station, scale) for site, mine in zip(sites, slots, strict=True) if mine]
+        seen = []
+        for site, mine in zip(sites, slots, strict=True):
+            if mine:
+                sighting = measure_patch(stop, site, mine, self.station, scale)
+                seen.append(sighting)
+                if "pattern-not-found" in sighting.why_not:
+                    self._unfound.append((stop, site, mine, scale))
+        return seen
+
+    def look_again(self, sightings: list[Sighting]) -> list[Sighting]:
+        """Measure stars and bars that were too soft to be found by themselves where they stand at their sharpest stop."""
+        out = list(sightings)
+        for stop, site, slots, scale in self._unfound:
+            same = [s for s in sightings if s.site is site and s.ok]
+            if same:
+                near = max(same, key=lambda s: s.strength)
+                i = next(i for i, s in enumerate(out) if s.site is site and s.stop == stop)
+                out[i] = measure_patch(stop, site, slots, self.station, scale, near)
+        return out
 
 
 def _row_means(pixels: Pixels) -> Floats:
@@ -301,8 +343,13 @@ def _add(slots: list[_Slot], new: _Slot, per_slot: int) -> None:
     last.count = n + 1
 
 
-def measure_patch(stop: float, site: PatchSite, slots: Sequence[_Slot], station: Station, scale: Scale) -> Sighting:
-    """Measure one patch at one stop from its frames; clipped frames give way to unclipped ones."""
+def measure_patch(
+    stop: float, site: PatchSite, slots: Sequence[_Slot], station: Station, scale: Scale, near: Sighting | None = None
+) -> Sighting:
+    """Measure one patch at one stop from its frames; clipped frames give way to unclipped ones.
+
+    near: the same patch at a stop where it is sharper, which tells where a soft pattern is.
+    """
     sound = [s for s in slots if s.clipped <= CLIPPED_SHARE]
     used = sound or list(slots)
     units = np.array([s.light_unit for s in used])
@@ -317,19 +364,49 @@ def measure_patch(stop: float, site: PatchSite, slots: Sequence[_Slot], station:
     brightest = float(np.max(units * np.percentile(light, 95, axis=1)))
     if brightest < LEAST_SIGNAL_DN:
         why.append("low-signal")
-    edge = None
-    if site.spec.kind == "edge" and "low-signal" not in why:
-        edge = read_edge(site.sites.x, site.sites.y, light, valid if sound else None, weights)
+    edge, star, bars = None, None, None
+    x, y = site.sites.x, site.sites.y
+    readable = "low-signal" not in why
+    if site.spec.kind == "edge" and readable:
+        edge = read_edge(x, y, light, valid if sound else None, weights)
         why += edge.why_not
         if edge.frame_level is not None:
             frame_light = edge.frame_level * float(np.average(frame_light, weights=weights))
+    elif site.spec.kind == "star" and readable and site.spec.cycles is not None:
+        star = read_star(x, y, light, valid, site.spec.cycles, site.spec.region[2:], near.star if near is not None else None)
+        why += [code for code in star.why_not if code not in why]
+    elif site.spec.kind == "bars" and readable and site.spec.period_um is not None:
+        period_px = site.spec.period_um / station.object_um_per_px_at(station.targets[site.target].depth_mm)
+        bars = read_bars(x, y, light, valid, period_px, near.bars if near is not None else None)
+        why += [code for code in bars.why_not if code not in why]
     full = np.average(np.stack([s.full / s.light_unit for s in used]), axis=0, weights=weights)
     base = Sighting(
         stop, site, not why, tuple(why), clipped, sum(s.count for s in used),
         float(np.average(frame_light, weights=weights)), frame_light, np.array([s.order for s in used]),
-        _tone(full, site, edge, station), units, edge,
+        _tone(full, site, edge, station), units, edge, star, None, bars,
     )  # fmt: skip
     return replace(base, noise=_noise(base, used, scale))
+
+
+def _with_star_curves(sightings: list[Sighting]) -> list[Sighting]:
+    """The sightings with each star's transfer, whose level at zero frequency all its stops share."""
+    out = list(sightings)
+    sites = {id(s.site): s.site for s in sightings if s.kind == "star"}
+    for site in sites.values():
+        places = [i for i, s in enumerate(out) if s.site is site]
+        for i, curve in zip(places, star_curves([out[i].star for i in places], site.spec.modulation), strict=True):
+            out[i] = replace(out[i], star_curve=curve)
+    return out
+
+
+def _with_bars_contrasts(sightings: list[Sighting]) -> list[Sighting]:
+    """The sightings with the contrast of each set of bars, whose level at zero frequency all its stops share."""
+    out = list(sightings)
+    for site in {id(s.site): s.site for s in sightings if s.kind == "bars"}.values():
+        places = [i for i, s in enumerate(out) if s.site is site]
+        for i, told in zip(places, bars_contrasts([out[i].bars for i in places], site.spec.modulation), strict=True):
+            out[i] = replace(out[i], bars_contrast=told)
+    return out
 
 
 def _tone(full: Floats, site: PatchSite, edge: EdgeMeasure | None, station: Station) -> float | None:
