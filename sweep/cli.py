@@ -1,0 +1,256 @@
+"""The command `sweep`: parse, call, print, exit status; nothing else.
+
+Heavy modules are imported where they are used, so that `--help` answers at once.
+"""
+
+import os
+import sys
+import tomllib
+import traceback
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from sweep import __version__
+from sweep.errors import InputError, Interrupted, SourceError, StationError, SweepError
+
+if TYPE_CHECKING:
+    from sweep.result import Result
+    from sweep.station import Station
+
+NEED_NOT_MET = 1
+PATH = click.Path(path_type=Path)
+DEMO_SEED = 1
+DEMO_FOLDER = "sweep-demo"
+RESULT_FOLDER = "result"
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the command and return its exit status; the message of an error goes to stderr."""
+    words = list(sys.argv[1:] if arguments is None else arguments)
+    debug = "--debug" in words
+    try:
+        return int(sweep.main([w for w in words if w != "--debug"], "sweep", standalone_mode=False) or 0)
+    except click.UsageError as error:
+        where = error.ctx.command_path if error.ctx else "sweep"
+        return _failed(InputError(f"{error.format_message()} See {where} --help."), debug)
+    except (KeyboardInterrupt, click.Abort):
+        return _failed(Interrupted("Interrupted."), debug)
+    except SweepError as error:
+        return _failed(error, debug)
+    except SystemExit:  # click's own way out where the reader of the output has gone
+        return 0
+    except Exception as error:  # noqa: BLE001 - the one place where a fault of the tool becomes a line
+        what = " ".join(f"{type(error).__name__}: {error}".split())
+        return _failed(SweepError(f"This is a fault of the tool ({what}). Run again with --debug to see where."), debug)
+
+
+def _failed(error: SweepError, debug: bool) -> int:
+    if debug:
+        traceback.print_exc()
+    click.echo(f"sweep: {error}", err=True)
+    return error.exit_status
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(__version__, message="%(prog)s %(version)s")
+@click.option("--debug", is_flag=True, expose_value=False, help="Show where an error arose.")
+def sweep() -> None:
+    """Find, prove and record the f-stop and exposure of an inspection station.
+
+    Exit status: 0 the need is met, 1 no setting meets it, 2 bad usage or input, 3 camera or capture fault, 130
+    interrupted, 70 fault of the tool.
+    """
+
+
+out_option = click.option("--out", type=PATH, metavar="DIR", help="Write record, plot, result.json and tables to DIR.")
+json_option = click.option("--json", "as_json", is_flag=True, help="Print result.json instead of the answer in words.")
+
+
+@sweep.command()
+@click.argument("source", type=PATH)
+@click.option("--station", "station_file", type=PATH, metavar="FILE", help="Station file, if not SOURCE/station.toml.")
+@out_option
+@json_option
+@click.option("--leave-out-bad-frames", is_flag=True, help="Go on without frames that are missing or damaged.")
+@click.option("--set", "changes", multiple=True, metavar="KEY=VALUE", help="Change a key, as need.feature_um=140.")
+def replay(
+    source: Path,
+    station_file: Path | None,
+    out: Path | None,
+    as_json: bool,
+    leave_out_bad_frames: bool,
+    changes: tuple[str, ...],
+) -> int:
+    """Analyse the frames in the folder SOURCE: a recording, or images with a shots.csv."""
+    if not source.is_dir():
+        raise SourceError(f"{source} is not a folder: name a folder with images and shots.csv.")
+    if station_file is None and not (source / "station.toml").is_file():
+        raise SourceError(f"{source} holds no station.toml. Name the station file with --station FILE.")
+    if out is not None and out.resolve().is_relative_to(source.resolve()):
+        raise InputError(f"--out {out} lies in {source}, which replay leaves as it is. Name a folder elsewhere.")
+    _see_that_results_fit(out)
+    station = _changed(_load(station_file or source / "station.toml"), changes)
+    return _replay(source, station, out, as_json, leave_out_bad_frames)
+
+
+@sweep.command()
+@click.argument("station_file", type=PATH, metavar="STATION.toml")
+@click.option(
+    "--into",
+    "folder",
+    type=PATH,
+    metavar="DIR",
+    required=True,
+    help="New folder for the recording, or one to take up again.",
+)
+@click.option("--camera", "camera_name", metavar="SOURCE", help="Camera, if not camera.source of the station file.")
+@click.option(
+    "--out",
+    type=PATH,
+    metavar="DIR",
+    help=f"Write record, plot and tables to DIR instead of {RESULT_FOLDER} in --into.",
+)
+def record(station_file: Path, folder: Path, camera_name: str | None, out: Path | None) -> int:
+    """Guide through all stops at the camera, keep the frames, then answer as replay does.
+
+    SOURCE: a device number, a URL, a video file, folder:PATH, genicam:ADDRESS or simulated.
+    """
+    station = _load(station_file)
+    source = camera_name or station.camera.source
+    if source is None:
+        raise StationError(f"{station_file} names no camera. Add camera.source, or --camera SOURCE.")
+    out = out or folder / RESULT_FOLDER
+    _see_that_results_fit(out)
+    from sweep.cameras import open_camera
+    from sweep.record import record as run
+    from sweep.screens.terminal import Terminal
+
+    with open_camera(source, station) as camera, Terminal(station) as screen:
+        run(camera, station, station_file.read_text(encoding="utf-8-sig"), folder, screen)
+    return _replay(folder, station, out)
+
+
+@sweep.command()
+@click.argument("station_file", type=PATH, metavar="STATION.toml")
+@out_option
+@json_option
+def plan(station_file: Path, out: Path | None, as_json: bool) -> int:
+    """Say what to expect of a station before any frame, from the station file alone."""
+    _see_that_results_fit(out)
+    station = _load(station_file)
+    from sweep.analyse import forecast
+
+    return _answer(forecast(station), station, out, as_json)
+
+
+@sweep.command()
+@click.option(
+    "--into", "folder", type=PATH, metavar="DIR", help=f"New folder for the recording (default: {DEMO_FOLDER})."
+)
+def demo(folder: Path | None) -> int:
+    """Show a whole run at a simulated station, answer and files included."""
+    from sweep.demo import DEMO_STATION, demo_camera, demo_station, with_hand
+    from sweep.record import record as run
+    from sweep.screens.terminal import Terminal
+
+    folder = folder or _free(DEMO_FOLDER)
+    station = demo_station()
+    camera, hand = demo_camera(DEMO_SEED)
+    with camera, Terminal(station) as screen:
+        run(camera, station, DEMO_STATION, folder, with_hand(hand, screen))
+    return _replay(folder, station, folder / RESULT_FOLDER)
+
+
+def _load(station_file: Path) -> "Station":
+    from sweep.recording import load_station
+
+    return load_station(station_file)
+
+
+def _changed(station: "Station", changes: Sequence[str]) -> "Station":
+    """The station with keys set anew, each as KEY=VALUE with a value as in the station file."""
+    if not changes:
+        return station
+    from sweep.station import build_station
+
+    data: Any = station.model_dump(mode="json", exclude_unset=True)
+    for change in changes:
+        key, equals, text = change.partition("=")
+        if not equals:
+            raise InputError(f"--set {change}: write KEY=VALUE, as need.feature_um=140.")
+        *tables, last = key.strip().split(".")
+        place = data
+        for name in tables:
+            place = place.setdefault(name, {}) if isinstance(place, dict) else None
+        if not isinstance(place, dict):
+            raise InputError(f"--set {change}: {key} is no key of a station file.")
+        place[last] = _value(text.strip())
+    return build_station(data, "the station file with --set")
+
+
+def _value(text: str) -> Any:
+    try:
+        return tomllib.loads(f"value = {text}")["value"]
+    except tomllib.TOMLDecodeError:
+        return text
+
+
+def _free(name: str) -> Path:
+    """A folder of this name here, numbered where the name is taken."""
+    number = 1
+    while (folder := Path(name if number == 1 else f"{name}-{number}")).exists():
+        number += 1
+    return folder
+
+
+def _see_that_results_fit(out: Path | None) -> None:
+    """Refuse a folder for results before any work is done."""
+    if out is not None:
+        from sweep.report import check_out
+
+        check_out(out)
+
+
+def _replay(source: Path, station: "Station", out: Path | None, as_json: bool = False, leave_out: bool = False) -> int:
+    from sweep.analyse import analyse
+    from sweep.recording import open_source
+
+    frames = open_source(source, leave_out_bad_frames=leave_out, station=station)
+    with _progress_bar() as progress:
+        result = analyse(frames, station, progress)
+    return _answer(result, station, out, as_json)
+
+
+@contextmanager
+def _progress_bar() -> Iterator[Callable[[int, int], None] | None]:
+    """What shows (frames done, frames in all) on a terminal; nothing in a pipe."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import Progress
+
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("Measuring frames", total=None)
+        yield lambda done, total: bar.update(task, completed=done, total=total)
+
+
+def _answer(result: "Result", station: "Station", out: Path | None, as_json: bool) -> int:
+    """Write the files, print the answer, and return the exit status."""
+    from sweep.report import result_json, write_report
+    from sweep.screens.answer import answer
+
+    files = write_report(out, result, station) if out is not None else ()
+    try:
+        if as_json:
+            click.echo(result_json(result), nl=False)
+        else:
+            answer(result, station, files)
+        sys.stdout.flush()
+    except BrokenPipeError:  # the reader has gone: no more output, and no complaint at exit
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    return 0 if result.recommendation.meets_need else NEED_NOT_MET
