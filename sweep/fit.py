@@ -9,6 +9,7 @@ Levenberg-Marquardt with the derivatives given.
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -295,11 +296,11 @@ def transfer_slopes(optics: Optics, nodes: Frequencies, theta: Floats) -> tuple[
 class _Residuals:
     """Residuals and Jacobian of the whole problem, evaluated once for each parameter vector."""
 
-    def __init__(self, problem: Problem, theta: Floats) -> None:
+    def __init__(self, problem: Problem) -> None:
         self.problem = problem
         views = problem.views
         self.optics = Optics(problem, views)
-        self.nodes = Nodes(problem.bench, views, np.exp(self.optics.ln_f_number(theta)))
+        self.nodes = Nodes(problem.bench, views, np.exp(self.optics.ln_light))
         self.edge_matrices = [self._edge_matrix(i, e) for i, e in enumerate(problem.edges)]
         first = len(problem.edges)
         self.amplitude_matrices = [self.nodes.interpolation(first + i, a.v_cy_px) for i, a in enumerate(problem.amplitudes)]
@@ -310,10 +311,9 @@ class _Residuals:
     def _edge_matrix(self, row: int, edge: EdgeData) -> Floats:
         """Matrix (m, nodes) from the transfer to the spread function less one half: the integral of M sin(2 pi v d) / (pi v)."""
         reach = float(np.abs(edge.distance_px).max())
-        count = int(64 + 5.0 * self.nodes.top[row] * reach)
-        x, w = np.polynomial.legendre.leggauss(count)
-        v = 0.5 * (x + 1.0) * self.nodes.top[row]
-        weight = 0.5 * w * self.nodes.top[row] / (np.pi * v)
+        x, w = _panels(int(np.ceil(4.0 + 0.4 * self.nodes.top[row] * reach)))
+        v = x * self.nodes.top[row]
+        weight = w * self.nodes.top[row] / (np.pi * v)
         wave = np.sin(2.0 * np.pi * np.outer(edge.distance_px, v)) * np.sinc(np.outer(edge.width_px, v)) * weight
         return np.asarray(wave @ self.nodes.interpolation(row, v))
 
@@ -362,6 +362,14 @@ class _Residuals:
         return self._kept
 
 
+@lru_cache(maxsize=128)
+def _panels(count: int) -> tuple[Floats, Floats]:
+    """Nodes and weights on 0 to 1: Gauss-Legendre of 12 points in each of `count` panels."""
+    x, w = np.polynomial.legendre.leggauss(12)
+    nodes = (np.arange(count)[:, None] + 0.5 * (x + 1.0)) / count
+    return nodes.ravel(), np.tile(0.5 * w / count, count)
+
+
 def _edge_rows(edge: EdgeData, matrix: Floats, value: Floats, slopes: Floats, widen: float) -> tuple[Floats, Floats]:
     """Residuals (m + 1,) and Jacobian (m + 1, parameters) of one edge, levels, position and gradient projected out.
 
@@ -390,9 +398,11 @@ def fit_lens(problem: Problem) -> LensFit:
     """
     if not problem.views:
         raise ValueError("nothing to fit: no edge and no amplitude")
-    rough = sorted((_rough(problem, start) for start in _starts(problem)), key=lambda pair: pair[0])
+    residuals = _Residuals(problem)
+    rough = sorted((_rough(residuals, start) for start in _starts(problem)), key=lambda pair: pair[0])
     near = [theta for cost, theta in rough if cost - rough[0][0] < RIVAL_CHI2]
-    finished = [_finish(problem, theta) for theta in near[:2]]
+    distinct = [t for i, t in enumerate(near) if all(np.abs(t - near[j]).max() > 1e-3 for j in range(i))]
+    finished = [_finish(residuals, theta) for theta in distinct[:2]]
     (best, best_chi2), *others = sorted(finished, key=lambda pair: pair[1])
     rivals = tuple((chi2 - best_chi2, f.theta) for f, chi2 in others if chi2 - best_chi2 < 6.0 and _differs(best, f))
     return replace(best, rivals=rivals)
@@ -439,22 +449,20 @@ def _typical(problem: Problem) -> Floats:
     return np.minimum(np.array(problem.prior)[:, 1], 1.0)
 
 
-def _rough(problem: Problem, start: Floats) -> tuple[float, Floats]:
+def _rough(residuals: _Residuals, start: Floats) -> tuple[float, Floats]:
     """A rough solution from one start, and its sum of squares over its reduced chi-square where that is above 1."""
-    residuals = _Residuals(problem, start)
-    theta = minimise(residuals, residuals.jacobian, start, _typical(problem), ROUGH)
+    theta = minimise(residuals, residuals.jacobian, start, _typical(residuals.problem), ROUGH)
     total = float(np.sum(residuals(theta) ** 2))
     return total / max(1.0, total / len(residuals(theta))), theta
 
 
-def _finish(problem: Problem, start: Floats) -> tuple[LensFit, float]:
+def _finish(residuals: _Residuals, start: Floats) -> tuple[LensFit, float]:
     """The fit from a rough solution, with its chi-square.
 
     Where the model does not describe the data their uncertainties are widened until it does, blocks that fit far worse
     than the rest further than these, so that the priors and the light keep their say.
     """
-    residuals = _Residuals(problem, start)
-    theta = start
+    problem, theta = residuals.problem, start
     for turn in range(TURNS):
         r, jacobian, blocks = residuals.evaluate(theta)
         rows = blocks[-1].stop
@@ -536,6 +544,8 @@ def _starts(problem: Problem) -> list[Floats]:
     starts: list[Floats] = []
     for flat in order:
         i, j = np.unravel_index(flat, cost.shape)
+        if starts and cost[i, j] > HOPELESS * cost.min():
+            break
         lower = cost[max(i - 1, 0) : i + 2, max(j - 1, 0) : j + 2].min() >= cost[i, j]
         if lower:
             start = theta.copy()
@@ -548,6 +558,8 @@ def _starts(problem: Problem) -> list[Floats]:
 
 START_W040 = (-1.5, -0.5, 0.0, 0.5, 1.0, 2.0)
 MOST_STARTS = 3
+HOPELESS = 8.0
+"""A start this many times worse than the best by the coarse look is not tried."""
 START_COLOUR = 0.1
 """Not zero: there the transfer has no slope in it."""
 
