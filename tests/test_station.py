@@ -13,7 +13,7 @@ from numpy.testing import assert_allclose
 from references import facts
 
 from sweep.errors import StationError
-from sweep.station import Station, build_station, check_regions, parse_station
+from sweep.station import build_station, check_regions, parse_station
 
 DOCS = Path(__file__).parent.parent / "docs" / "station-file.md"
 WHOLE = re.search(r"```toml\n(.*?)```", DOCS.read_text(encoding="utf-8"), re.DOTALL)[1]
@@ -366,11 +366,13 @@ def test_records_cannot_be_changed():
 @example("[[targets]]\n[[targets.patches]]\n")
 @example('targets = ["a", {name = 3}]\nlens = {stops = [{}]}')
 def test_any_text_is_a_station_or_one_short_message(text):
+    message = "fine"
     try:
         parse_station(text)
     except StationError as error:
-        assert 1 <= len(str(error).splitlines()) <= 4
-        assert all(c.isprintable() or c == "\n" for c in str(error))
+        message = str(error)
+    assert 1 <= len(message.splitlines()) <= 4
+    assert all(c.isprintable() or c == "\n" for c in message)
 
 
 VALUES = st.recursive(
@@ -389,10 +391,11 @@ PLACES = [
 @given(st.dictionaries(st.sampled_from(PLACES), VALUES, min_size=1, max_size=1))
 def test_any_value_at_any_place_is_a_station_or_one_short_message(changes):
     for place, value in changes.items():
+        message, station = "fine", None
         try:
             station = build_station(with_key(place, value))
         except StationError as error:
-            assert 1 <= len(str(error).splitlines()) <= 4
-        else:
-            assert isinstance(station, Station)
+            message = str(error)
+        assert 1 <= len(message.splitlines()) <= 4
+        if station is not None:
             assert np.isfinite([station.magnification, station.pupil_distance_mm]).all()
