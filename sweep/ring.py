@@ -106,7 +106,9 @@ class Ring:
         for window_s, near in zip(WINDOWS_S, NEAR_STOPS, strict=True):
             times, levels = self._window(window_s)
             if times.size < LEAST_SAMPLES or times[-1] - times[0] < 0.85 * window_s:
-                return RingView("waiting", self._off(self._seen[-1][1]))
+                if window_s == WINDOWS_S[0]:
+                    return RingView("waiting", self._off(self._seen[-1][1]))
+                break
             slope, slope_u, spread = _line(times, levels)
             if self._still_resting(levels):
                 return self._at_rest(levels, spread)

@@ -112,6 +112,14 @@ def test_a_cell_cut_by_a_line_has_the_area_counted_on_a_fine_grid(distance, angl
     assert_allclose(half_plane(np.array([distance / FINER]), nx, ny), counted, atol=3e-3)
 
 
+def test_an_undercorrected_lens_is_sharper_wide_open_before_its_focus():
+    # Rays from the rim focus short, so the light gathers best before the paraxial image: where an object nearer than
+    # the plane of focus has its image behind the sensor (third-order aberration theory, e.g. Born and Wolf, 5.3).
+    lens = SimulatedLens(16.0, 3.45 / 58, 1.4, 530, w040_waves=1.5)
+    near, far = (np.abs(lens.transfer(1.4, depth, 0, np.array([60.0])))[0] for depth in (-4.0, 4.0))
+    assert near > 2 * far
+
+
 def test_edge_by_sum_and_edge_by_fine_cells_agree():
     lens = SimulatedLens(16, 3.45 / 58, 1.4, 530, w040_waves=1, coma_waves=0.3, coma_deg=30, blades=5)
     optics = Optics(lens, 3.45, 0.3, 2.8, 3.0)

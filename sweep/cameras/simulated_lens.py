@@ -43,7 +43,8 @@ class Wavefront:
 class SimulatedLens:
     """A lens on a sensor that stays put; aberrations are given at the widest stop, in waves of `wavelength_nm`.
 
-    `magnification` holds at depth 0; `focus_offset_mm` is the depth that the sensor is focused on.
+    `magnification` holds at depth 0; `focus_offset_mm` is the depth that the sensor is focused on. Positive `w040_waves`
+    is an undercorrected lens: rays from its rim come to a focus nearer to it, as those of an object farther away do.
     `blades` = 0 is a round iris; the barrel keeps the widest stop round in any case.
     """
 
@@ -83,8 +84,8 @@ class SimulatedLens:
         wave_um = self.wavelength_nm / 1000
         return Wavefront(
             defocus_um=1000 * radius_mm**2 / 2 * (1 / exit_to_sensor_mm - 1 / exit_to_image_mm),
-            spherical4_um=self.w040_waves * wave_um * opened**4,
-            spherical6_um=self.w060_waves * wave_um * opened**6,
+            spherical4_um=-self.w040_waves * wave_um * opened**4,
+            spherical6_um=-self.w060_waves * wave_um * opened**6,
             coma_um=self.coma_waves * wave_um * opened**3,
             coma_deg=self.coma_deg,
         )

@@ -1,0 +1,212 @@
+"""The guided run: which stop comes next, when to take its frames, what to keep."""
+
+import math
+from collections.abc import Generator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Literal, Protocol
+
+import numpy as np
+
+from sweep.capture.events import Action, Ask, Begin, Event, Finished, StepDone, Taken, Trouble
+from sweep.capture.live import Ended, Frame, Live
+from sweep.frames import Pixels, Shot
+from sweep.station import Station
+
+MOVED_STOPS = 0.06
+CAP_SHARE = 0.02
+CAPPED_FRAMES = 6
+
+CAUTIONS = (
+    "Moving machinery: stop it and secure it against starting before you reach in.",
+    "Bright or pulsing lamps: do not look into them; pulsing light can trigger seizures.",
+    "The safety rules of your site come before anything that is asked for here.",
+)
+
+Outcome = Literal["done", "skip", "back", "again"]
+Steps = Generator[Event, Action, Outcome]
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """How much to take: frames at each stop, and darks at the end."""
+
+    frames: int = 8
+    darks: int = 8
+
+
+class Keeper(Protocol):
+    """What the run needs of a recording: frames go in, and a stop's frames may be taken back."""
+
+    @property
+    def folder(self) -> Path:
+        """Where the frames are."""
+
+    @property
+    def shots(self) -> Sequence[Shot]:
+        """What has been kept so far, earlier runs into the same folder included."""
+
+    def add(self, pixels: Pixels, shot: Shot) -> Shot:
+        """Put one frame on disk; when this returns, it counts."""
+
+    def drop(self, shots: Sequence[Shot]) -> None:
+        """Take frames back: their rows go, their files may."""
+
+
+def guided_run(live: Live, recorder: Keeper, station: Station, plan: Plan) -> Generator[Event, Action, None]:
+    """Ask for every stop that the recording lacks, widest first, and for darks; END ends it at any time."""
+    yield from _Run(live, recorder, station, plan).steps()
+
+
+class _Run:
+    def __init__(self, live: Live, recorder: Keeper, station: Station, plan: Plan) -> None:
+        self._live = live
+        self._recorder = recorder
+        self._stops = tuple(sorted(station.lens.stops))
+        self._plan = plan
+        self._skipped: list[float] = []
+        self._leaving: float | None = None
+        self._known = False  # whether the ring has been seen at a stop in this run
+        self._offset_s = 1.0 + max((shot.time_s or 0.0 for shot in recorder.shots), default=-1.0)
+        self._start_s: float | None = None
+        self._of = len(self._stops) + (1 if plan.darks else 0)
+
+    def steps(self) -> Generator[Event, Action, None]:
+        ended = False
+        try:
+            yield from self._begin()
+            yield from self._sweep()
+            if self._plan.darks and not self._shots(None):
+                yield from self._darks()
+        except Ended:
+            ended = True
+        taken = tuple(stop for stop in self._stops if self._complete(stop))
+        yield Finished(self._recorder.folder, taken, tuple(self._skipped), ended)
+
+    def _begin(self) -> Generator[Event, Action, None]:
+        while True:
+            action = yield Begin(CAUTIONS, self._stops)
+            if action is Action.END:
+                raise Ended
+            if action is Action.TAKE:
+                return
+
+    def _sweep(self) -> Generator[Event, Action, None]:
+        place = 0
+        while place < len(self._stops):
+            stop = self._stops[place]
+            if self._complete(stop):
+                place += 1
+                continue
+            outcome = yield from self._stop(stop, place)
+            if outcome == "done":
+                self._leaving = stop
+            elif outcome == "skip":
+                self._skipped.append(stop)
+            elif outcome == "back":
+                earlier = [other for other in self._stops[:place] if self._complete(other)]
+                if earlier:
+                    place = self._stops.index(earlier[-1])
+                    self._drop(earlier[-1])
+                continue
+            elif outcome == "again":
+                continue
+            place += 1
+
+    def _stop(self, stop: float, place: int) -> Steps:
+        """One stop, from asking for it to its last frame."""
+        self._drop(stop)
+        self._live.ring.ask(stop)
+        yield Ask(stop, place + 1, self._of, not self._known, self._leaving)
+        while True:
+            action = yield from self._arrival()
+            if action in (Action.SKIP, Action.BACK):
+                return "skip" if action is Action.SKIP else "back"
+            frame = yield from self._live.search()
+            # The hand may have gone on turning while the exposure was set.
+            if action is Action.TAKE or frame.view.state == "arrived":
+                return (yield from self._frames(stop, frame))
+
+    def _arrival(self) -> Generator[Event, Action, Action]:
+        """Wait until the ring rests at the mark, or the screen says TAKE, SKIP or BACK."""
+        while True:
+            frame = yield from self._live.frame(scored=True)
+            if frame.action is not Action.NONE:
+                return frame.action
+            if frame.view.state == "arrived":
+                return Action.NONE
+            yield from self._live.follow(frame.light)
+
+    def _frames(self, stop: float, settled: Frame) -> Steps:
+        """All frames of a stop; those of a stop that moves meanwhile are dropped, and it is waited for again."""
+        means: list[float] = []
+        for number in range(self._plan.frames):
+            frame = yield from self._live.frame()
+            action = frame.action
+            if action in (Action.BACK, Action.SKIP):
+                self._drop(stop)
+                return "again" if action is Action.BACK else "skip"
+            moved = abs(math.log2(max(frame.light.mean, 1e-6) / max(settled.light.mean, 1e-6))) > MOVED_STOPS
+            if moved or (frame.light.clipped and not settled.light.clipped):
+                yield Trouble(
+                    "The light changed while frames were taken: this stop is taken again. Leave the ring alone."
+                )
+                return "again"
+            self._keep(frame, stop)
+            means.append(frame.light.tone)
+            yield from self._told(Taken(stop, number + 1, self._plan.frames))
+        self._live.ring.taken(stop)
+        self._known = True
+        yield from self._told(StepDone(stop, self._live.exposure_ms, float(np.mean(means))))
+        return "done"
+
+    def _darks(self) -> Generator[Event, Action, None]:
+        """Frames with the lens capped; SKIP leaves them out."""
+        yield from self._told(Ask(None, self._of, self._of, False, self._leaving))
+        brightest, dark = 0.0, 0
+        while dark < CAPPED_FRAMES:
+            frame = yield from self._live.frame()
+            if frame.action is Action.SKIP:
+                return
+            if frame.action is Action.TAKE:
+                break
+            brightest = max(brightest, frame.light.mean)
+            dark = dark + 1 if frame.light.mean < CAP_SHARE * brightest else 0
+        for number in range(self._plan.darks):
+            frame = yield from self._live.frame()
+            self._keep(frame, None)
+            yield from self._told(Taken(None, number + 1, self._plan.darks))
+        yield from self._told(StepDone(None, self._live.exposure_ms, 0.0))
+
+    def _keep(self, frame: Frame, stop: float | None) -> None:
+        """Write one frame; it counts from now on."""
+        if self._start_s is None:
+            self._start_s = frame.grab.arrived_s - self._offset_s
+        shot = Shot(
+            file="",  # the recording names it
+            stop=stop,
+            exposure_ms=self._live.exposure_ms,
+            gain_db=self._live.gain_db,
+            role="dark" if stop is None else "target",
+            order=len(self._recorder.shots),
+            time_s=round(frame.grab.arrived_s - self._start_s, 4),
+        )
+        self._recorder.add(frame.grab.pixels, shot)
+
+    def _shots(self, stop: float | None) -> list[Shot]:
+        return [shot for shot in self._recorder.shots if shot.stop == stop]
+
+    def _complete(self, stop: float) -> bool:
+        return len(self._shots(stop)) >= self._plan.frames
+
+    def _drop(self, stop: float) -> None:
+        """Take a stop's frames back, so that it can be taken anew."""
+        shots = self._shots(stop)
+        if shots:
+            self._recorder.drop(shots)
+            self._live.ring.forget(stop)
+
+    def _told(self, event: Event) -> Generator[Event, Action, None]:
+        """Tell something that needs no answer; END is heard all the same."""
+        if (yield event) is Action.END:
+            raise Ended
