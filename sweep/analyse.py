@@ -74,7 +74,9 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
         stop = sweep.stops.index(sighting.stop)
         if sighting.edge is not None and sighting.edge.profile is not None and sighting.edge.transfer is not None:
             edge = sighting.edge
-            assert edge.curve is not None and edge.profile is not None and edge.transfer is not None
+            assert edge.curve is not None
+            assert edge.profile is not None
+            assert edge.transfer is not None
             d, width, value, u, gradient = rebinned(edge.profile, edge.spread_px)
             view = View(stop, sighting.site.target, edge.curve.direction_deg)
             edges.append(EdgeData(view, d, width, value, u, gradient, _ratio(sweep, sighting), RATIO_U, edge.transfer))
@@ -98,7 +100,9 @@ USUAL_PRINT_LN_U = 0.08
 
 def _star_data(sighting: Sighting, stop: int, scale: int) -> AmplitudeData:
     """A star's rings, as transfer by its own level at zero frequency; the error of that level is the scale's."""
-    assert sighting.star is not None and sighting.star.rings is not None and sighting.star_curve is not None
+    assert sighting.star is not None
+    assert sighting.star.rings is not None
+    assert sighting.star_curve is not None
     rings, curve = sighting.star.rings, sighting.star_curve
     unit = SQUARE_WAVE * curve.ratio * float(np.median(rings.level))
     order = np.argsort(rings.v_cy_px)
@@ -242,7 +246,13 @@ def _evidence(sweep: Sweep, light: Light, fit: LensFit | None, station: Station)
 
 def _snr_swept_db(here: Sequence[Sighting], tone: float | None) -> float | None:
     """Signal to noise of one pixel at the light tone as swept, from the brightest even area, by the square root of light."""
-    points = [(p, s) for s in here if s.saturated_fraction <= CLIPPED_SHARE for p in s.noise if p.variance_dn2 > 0 and p.mean_dn > 0]
+    points = [
+        (p, s)
+        for s in here
+        if s.saturated_fraction <= CLIPPED_SHARE
+        for p in s.noise
+        if p.variance_dn2 > 0 and p.mean_dn > 0
+    ]
     if not points or tone is None:
         return None
     point, sighting = max(points, key=lambda pair: pair[0].mean_dn)

@@ -52,12 +52,11 @@ def reading_of(sighting: Sighting, station: Station) -> Reading:
     )
 
 
-def _bars_reading(
-    sighting: Sighting, station: Station, why: tuple[str, ...], base: dict[str, object]
-) -> Reading:
+def _bars_reading(sighting: Sighting, station: Station, why: tuple[str, ...], base: dict[str, object]) -> Reading:
     """What a set of bars says: the contrast at its own frequency, and at the feature's where that is the same."""
     bars, told, period_um = sighting.bars, sighting.bars_contrast, sighting.site.spec.period_um
-    assert bars is not None and period_um is not None
+    assert bars is not None
+    assert period_um is not None
     if told is None:
         return Reading(ok=True, why_not=why, bars_cy_px=bars.v_cy_px, **base)  # type: ignore[arg-type]
     at_feature = abs(period_um / (2.0 * station.need.feature_um) - 1.0) < SAME_PERIOD

@@ -190,7 +190,9 @@ class Optics:
         self.names = problem_or_fit.names
         self.stop = np.array([v.stop for v in views], dtype=int)
         self.target = np.array([v.target for v in views], dtype=int)
-        direction = np.array([0.0 if v.direction_deg is None else np.cos(2.0 * np.radians(v.direction_deg)) for v in views])
+        direction = np.array(
+            [0.0 if v.direction_deg is None else np.cos(2.0 * np.radians(v.direction_deg)) for v in views]
+        )
         self.twist = direction
         self.ln_light = np.log(problem_or_fit.light.f_number)[self.stop] if ln_f_number is None else ln_f_number
         self.widest = float(problem_or_fit.light.f_number.min())
@@ -303,7 +305,9 @@ class _Residuals:
         self.nodes = Nodes(problem.bench, views, np.exp(self.optics.ln_light))
         self.edge_matrices = [self._edge_matrix(i, e) for i, e in enumerate(problem.edges)]
         first = len(problem.edges)
-        self.amplitude_matrices = [self.nodes.interpolation(first + i, a.v_cy_px) for i, a in enumerate(problem.amplitudes)]
+        self.amplitude_matrices = [
+            self.nodes.interpolation(first + i, a.v_cy_px) for i, a in enumerate(problem.amplitudes)
+        ]
         self.widen = np.ones(len(views))
         self._at: Floats | None = None
         self._kept: tuple[Floats, Floats, list[slice]] = (np.zeros(0), np.zeros((0, 0)), [])
@@ -377,7 +381,9 @@ def _edge_rows(edge: EdgeData, matrix: Floats, value: Floats, slopes: Floats, wi
     """
     u = edge.u * widen
     rise = matrix @ value
-    columns = np.column_stack([np.ones_like(rise), rise, np.gradient(rise, edge.distance_px), edge.gradient]) / u[:, None]
+    columns = (
+        np.column_stack([np.ones_like(rise), rise, np.gradient(rise, edge.distance_px), edge.gradient]) / u[:, None]
+    )
     light = float(edge.value.max())
     tie = np.array([1.0 - edge.ratio, -0.5 * (1.0 + edge.ratio), 0.0, 0.0]) / (edge.ratio_u * light)
     stacked = np.vstack([columns, tie])
@@ -477,7 +483,16 @@ def _finish(residuals: _Residuals, start: Floats) -> tuple[LensFit, float]:
     covariance = np.linalg.inv(data.T @ data + prior.T @ prior)
     steps = _focus_steps(residuals, theta, r, jacobian)
     fitted = LensFit(
-        problem.bench, problem.depths_mm, problem.light, problem.names, theta, covariance, chi2, misfit, problem.views, steps
+        problem.bench,
+        problem.depths_mm,
+        problem.light,
+        problem.names,
+        theta,
+        covariance,
+        chi2,
+        misfit,
+        problem.views,
+        steps,
     )
     return fitted, float(np.sum(r**2))
 

@@ -107,7 +107,9 @@ def pixel_box(v_cy_px: Floats, direction_deg: float | None) -> Floats:
     """Transfer of a square pixel at frequencies (n,) along a direction; the mean over directions where that is None."""
     if direction_deg is None:
         angles = np.radians(np.arange(0.0, 45.0, 5.0) + 2.5)
-        return np.asarray(np.mean([np.sinc(v_cy_px * np.cos(t)) * np.sinc(v_cy_px * np.sin(t)) for t in angles], axis=0))
+        return np.asarray(
+            np.mean([np.sinc(v_cy_px * np.cos(t)) * np.sinc(v_cy_px * np.sin(t)) for t in angles], axis=0)
+        )
     t = np.radians(direction_deg)
     return np.asarray(np.sinc(v_cy_px * np.cos(t)) * np.sinc(v_cy_px * np.sin(t)))
 

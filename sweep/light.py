@@ -67,7 +67,9 @@ def light_of(sweep: Sweep) -> Light:
     """
     stops = len(sweep.stops)
     nothing = np.full(stops, np.nan)
-    usable = [s for s in sweep.sightings if s.saturated_fraction <= CLIPPED_SHARE_FOR_LIGHT and (s.frame_light > 0).all()]
+    usable = [
+        s for s in sweep.sightings if s.saturated_fraction <= CLIPPED_SHARE_FOR_LIGHT and (s.frame_light > 0).all()
+    ]
     reference = _reference(sweep)
     if reference is None or not usable:
         return Light(nothing, nothing, None, nothing, 0.0, USUAL_DRIFT, 0.0, ())
@@ -79,7 +81,9 @@ def light_of(sweep: Sweep) -> Light:
     pick = np.zeros((stops, len(solved)))
     pick[np.arange(stops), patches + np.arange(stops)] = -0.5
     pick[:, patches + reference] += 0.5
-    variance = np.einsum("ij,jk,ik->i", pick, covariance, pick) + np.where(np.arange(stops) == reference, 0.0, 0.5 * LAMP_FLOOR**2)
+    variance = np.einsum("ij,jk,ik->i", pick, covariance, pick) + np.where(
+        np.arange(stops) == reference, 0.0, 0.5 * LAMP_FLOOR**2
+    )
     ln_u = np.where(known, np.sqrt(np.maximum(variance, 0.0)), np.nan)
     f_number = np.where(known, sweep.stops[reference] * np.exp(-0.5 * (e - e[reference])), np.nan)
     return Light(

@@ -4,6 +4,7 @@ Every test has a threshold that a sound sweep passes with room to spare: at leas
 a size that matters to the answer. docs/outputs.md lists what to do about each.
 """
 
+import itertools
 from collections import defaultdict
 from collections.abc import Iterable, Sequence
 
@@ -94,11 +95,17 @@ def _frames(sweep: Sweep, station: Station) -> list[Note]:
         few = [s for s in sweep.at(stop) if s.frames < 2]
         if few:
             out.append(
-                Note("too-few-frames", f"{_f(stop)}: a single usable frame; noise can't be told. Take two or more, better eight.")
+                Note(
+                    "too-few-frames",
+                    f"{_f(stop)}: a single usable frame; noise can't be told. Take two or more, better eight.",
+                )
             )
     for group in sweep.identical:
         out.append(
-            Note("frames-identical", f"{_listed(group)} are the same bit for bit; they count as one measurement. Take the stop again.")
+            Note(
+                "frames-identical",
+                f"{_listed(group)} are the same bit for bit; they count as one measurement. Take the stop again.",
+            )
         )
     if sweep.idle_bits and station.camera.bit_depth is not None:
         used = station.camera.bit_depth - sweep.idle_bits
@@ -118,7 +125,7 @@ def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
     off = {k: float(np.log(light.f_number[k] / sweep.stops[k])) for k in known}
     out: list[Note] = []
     named: set[int] = set()
-    for a, b in zip(known, known[1:], strict=False):
+    for a, b in itertools.pairwise(known):
         step = float(np.log(light.f_number[b] / light.f_number[a]))
         wanted = float(np.log(sweep.stops[b] / sweep.stops[a]))
         sure = CERTAIN * float(np.hypot(light.ln_u[a], light.ln_u[b]))
@@ -288,7 +295,12 @@ def _patches(sweep: Sweep, readings: Sequence[Reading], station: Station) -> lis
     for code, places in by_code.items():
         for (target, patch), stops in places.items():
             where = f"{station.targets[target].name}, patch {patch}"
-            out.append(Note(code, f"{where} at {_listed(_f(k) for k in stops)}: {NOTE_CODES[code].meaning} {NOTE_CODES[code].remedy}"))
+            out.append(
+                Note(
+                    code,
+                    f"{where} at {_listed(_f(k) for k in stops)}: {NOTE_CODES[code].meaning} {NOTE_CODES[code].remedy}",
+                )
+            )
     edges: dict[tuple[int, int], list[Sighting]] = defaultdict(list)
     for s in sweep.sightings:
         if s.ok and s.edge is not None:

@@ -70,7 +70,9 @@ def estimate(
     own = left * rng.standard_normal((DRAWS, *model.shape))
     draws = best + (1.0 - weight) * spread + own
     draws = _with_rivals(draws, fit, lens, places, model, rng)
-    f_numbers = np.geomspace(fit.light.f_number.min() / CURVE_MARGIN, fit.light.f_number.max() * CURVE_MARGIN, CURVE_POINTS)
+    f_numbers = np.geomspace(
+        fit.light.f_number.min() / CURVE_MARGIN, fit.light.f_number.max() * CURVE_MARGIN, CURVE_POINTS
+    )
     curve, curve_slopes = lens.between(places, f_numbers)
     curve_draws = curve + np.einsum("np,pgs->ngs", steps, curve_slopes)
     outlook = Outlook(tuple(places), best, draws, f_numbers, curve, curve_draws)
@@ -176,7 +178,9 @@ class FittedLens:
         if without == "sampling":
             return lens
         if without == "aberration":
-            lens = float(lens_transfer(self.fit.bench, replace(pupil, w040=0.0 * pupil.w040, w060=0.0 * pupil.w060), v)[0, 0])
+            lens = float(
+                lens_transfer(self.fit.bench, replace(pupil, w040=0.0 * pupil.w040, w060=0.0 * pupil.w060), v)[0, 0]
+            )
         elif without == "depth":
             lens = self._in_focus(pupil, v)
         elif without == "diffraction":
@@ -194,7 +198,9 @@ class FittedLens:
     def _in_focus(self, pupil: Pupil, v: Floats) -> float:
         """The best that any focus gives at this stop, lens errors as they are."""
         trial = np.linspace(-1.0, 1.0, 81) * (1.0 + 2.0 * abs(float(pupil.w040[0])) + 3.0 * abs(float(pupil.w060[0])))
-        many = Pupil(*(np.repeat(c, len(trial)) for c in (pupil.f_number, pupil.w020, pupil.w040, pupil.w060, pupil.colour)))
+        many = Pupil(
+            *(np.repeat(c, len(trial)) for c in (pupil.f_number, pupil.w020, pupil.w040, pupil.w060, pupil.colour))
+        )
         swept = lens_transfer(self.fit.bench, replace(many, w020=trial), np.repeat(v, len(trial), axis=0))
         return float(swept.max())
 

@@ -373,7 +373,9 @@ def measure_patch(
         if edge.frame_level is not None:
             frame_light = edge.frame_level * float(np.average(frame_light, weights=weights))
     elif site.spec.kind == "star" and readable and site.spec.cycles is not None:
-        star = read_star(x, y, light, valid, site.spec.cycles, site.spec.region[2:], near.star if near is not None else None)
+        star = read_star(
+            x, y, light, valid, site.spec.cycles, site.spec.region[2:], near.star if near is not None else None
+        )
         why += [code for code in star.why_not if code not in why]
     elif site.spec.kind == "bars" and readable and site.spec.period_um is not None:
         period_px = site.spec.period_um / station.object_um_per_px_at(station.targets[site.target].depth_mm)

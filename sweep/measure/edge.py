@@ -23,7 +23,6 @@ ANGLE_RANGE_DEG = (1.8, 12.5)
 ROOM_IN_SPREADS = 1.5
 V_CY_PX = np.linspace(0.0, 1.0, 201)
 BINS_PER_PX = 16
-_TAIL_B_PX = 1.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,7 +106,9 @@ class EdgeMeasure:
     frame_level: Floats | None = None
 
 
-def read_edge(x: Floats, y: Floats, values: Floats, valid: Bools | None = None, weights: Floats | None = None) -> EdgeMeasure:
+def read_edge(
+    x: Floats, y: Floats, values: Floats, valid: Bools | None = None, weights: Floats | None = None
+) -> EdgeMeasure:
     """Read one slanted edge from n frames of one stop.
 
     x, y: (k,) sample positions in pixels; values: (n, k) linear light; valid: (n, k), False where a sample must
@@ -239,6 +240,12 @@ class _Spread:
         return middle - 0.5 * step, middle + 0.5 * step
 
 
+def _soft(knots: tuple[float, ...]) -> tuple[float, float]:
+    """Deviation of the step column's Gaussian and softening of the tail column (px): wide enough for the knots to follow."""
+    fine = knots[len(knots) // 2] - knots[len(knots) // 2 - 1]
+    return 2.4 * fine, 2.1 * fine
+
+
 _TABLE_PER_PX = 32
 _TABLE_REACH_PX = 160.0
 
@@ -247,13 +254,14 @@ _TABLE_REACH_PX = 160.0
 def _tables(knots: tuple[float, ...]) -> tuple[Floats, Floats]:
     """The spread function's columns, and their slopes, over a fine grid of distances.
 
-    Level, step (Gaussian of 1 px), 1/distance tail, and the core's cubic splines, which vanish with two
-    derivatives at the core's ends.
+    Level, step (a blurred one), 1/distance tail, and the core's cubic splines, which vanish with two derivatives at the
+    core's ends.
     """
     d = np.arange(-_TABLE_REACH_PX, _TABLE_REACH_PX + 1e-9, 1.0 / _TABLE_PER_PX)
-    q = d * d + _TAIL_B_PX**2
-    value = [np.ones_like(d), 0.5 * erf(d / np.sqrt(2.0)), -d / q]
-    slope = [np.zeros_like(d), np.exp(-0.5 * d * d) / np.sqrt(2.0 * np.pi), (d * d - _TAIL_B_PX**2) / q**2]
+    sigma, b = _soft(knots)
+    q = d * d + b * b
+    value = [np.ones_like(d), 0.5 * erf(d / (sigma * np.sqrt(2.0))), -d / q]
+    slope = [np.zeros_like(d), np.exp(-0.5 * (d / sigma) ** 2) / (sigma * np.sqrt(2.0 * np.pi)), (d * d - b * b) / q**2]
     inside = (d >= knots[3]) & (d <= knots[-4])
     core, core_slope = (np.zeros((len(d), len(knots) - 10)) for _ in range(2))
     core[inside] = _basis(knots)(d[inside])
@@ -293,11 +301,12 @@ def _knots(spread_px: float, reach_px: float) -> tuple[float, ...]:
 def _transform(knots: tuple[float, ...]) -> NDArray[np.complex128]:
     """Fourier transform of the columns' derivatives at V_CY_PX, (n, columns).
 
-    Step (a Gaussian of 1 px): exp(-w^2 / 2); tail: -pi w exp(-w b), w = 2 pi v; splines by Gauss-Legendre quadrature, knot by knot.
+    Step: exp(-(w sigma)^2 / 2); tail: -pi w exp(-w b), w = 2 pi v; splines by Gauss-Legendre quadrature, knot by knot.
     """
     w = 2.0 * np.pi * V_CY_PX
-    step = np.exp(-0.5 * w * w)
-    tail = -np.pi * w * np.exp(-w * _TAIL_B_PX)
+    sigma, b = _soft(knots)
+    step = np.exp(-0.5 * (w * sigma) ** 2)
+    tail = -np.pi * w * np.exp(-w * b)
     t = np.unique(np.asarray(knots))
     nodes, weights = np.polynomial.legendre.leggauss(8)
     d = (0.5 * (t[1:] + t[:-1])[:, None] + 0.5 * np.diff(t)[:, None] * nodes).ravel()
@@ -356,8 +365,12 @@ def _side_levels(state: _State, d: Floats, t: Floats, frames: Floats, good: Bool
     """Each frame's level, (n,), from the even sides alone: there an edge that has moved changes nothing."""
     assert state.fitted is not None
     model = state.model(d, t)
-    weight = (good & state.keep & (np.abs(d) > min(2.0 * state.spread_px, 0.6 * state.room_px))) * (model / state.deviation**2)
-    return np.asarray((weight * np.where(good, frames, 0.0)).sum(axis=1) / np.maximum((weight * model).sum(axis=1), 1e-300))
+    weight = (good & state.keep & (np.abs(d) > min(2.0 * state.spread_px, 0.6 * state.room_px))) * (
+        model / state.deviation**2
+    )
+    return np.asarray(
+        (weight * np.where(good, frames, 0.0)).sum(axis=1) / np.maximum((weight * model).sum(axis=1), 1e-300)
+    )
 
 
 def _refit(state: _State, d: Floats, t: Floats, light: Floats, there: Bools) -> bool:
@@ -392,7 +405,9 @@ def _move_curve(state: _State, d: Floats, t: Floats, light: Floats, bend: bool) 
     columns = np.column_stack([slope, slope * t, slope * (t * t - 1.0 / 3.0)])[:, : 3 if bend else 2]
     scale = state.curve.polarity / state.curve.tilt
     move = np.zeros(3)
-    move[: columns.shape[1]] = -scale * np.linalg.solve(columns.T @ (columns * weight[:, None]), columns.T @ (weight * residual))
+    move[: columns.shape[1]] = -scale * np.linalg.solve(
+        columns.T @ (columns * weight[:, None]), columns.T @ (weight * residual)
+    )
     fine = np.linspace(-0.5 * state.room_px, 0.5 * state.room_px, 801)
     dark, bright = state.fitted.levels
     half_way = float(np.interp(0.5 * (dark + bright), np.maximum.accumulate(state.fitted.value(fine)), fine))
@@ -438,7 +453,9 @@ def _binned(d: Floats, columns: list[Floats], weight: Floats) -> tuple[Floats, l
     return means[0], means[1:], total[filled]
 
 
-def _fit_spread(d: Floats, flat: Floats, keep: Bools, deviation: Floats, knots: tuple[float, ...], before: _Spread | None) -> _Spread:
+def _fit_spread(
+    d: Floats, flat: Floats, keep: Bools, deviation: Floats, knots: tuple[float, ...], before: _Spread | None
+) -> _Spread:
     """Weighted linear least squares for levels, tail, core and light gradient across the edge."""
     weight = keep / deviation**2
     centre, (value, gradient_column), total = _binned(d, [flat, d * (before.value(d) if before else flat)], weight)
@@ -508,7 +525,7 @@ def _finish(state: _State, d: Floats, t: Floats, light: Floats, shifts: tuple[Fl
     rise = (fitted.value(np.linspace(-reach, reach, 401)) - dark) / (bright - dark)
     return EdgeMeasure(
         ok=True,
-        transfer=_transfer(fitted),
+        transfer=_transfer(fitted, _cut_short(state)),
         profile=EdgeProfile(centre, value - fitted.gradient * gradient_column, 1.0 / np.sqrt(total), gradient_column),
         dark=dark,
         light=bright,
@@ -540,7 +557,12 @@ def _ragged(state: _State, d: Floats, t: Floats, light: Floats) -> float:
     return float(np.sqrt(max(excess, 0.0)))
 
 
-def _transfer(fitted: _Spread) -> Transfer:
+def _cut_short(state: _State) -> float:
+    """Relative u of the step where the region ends before the spread function has levelled out."""
+    return 0.06 * max(0.0, 2.4 - state.room_px / state.spread_px)
+
+
+def _transfer(fitted: _Spread, step_u: float) -> Transfer:
     """Signed transfer at V_CY_PX: the transform's modulus, noise bias taken off, with the sign about the edge's own middle."""
     matrix = _transform(fitted.knots)
     step = float(fitted.coefficients[1])
@@ -557,4 +579,6 @@ def _transfer(fitted: _Spread) -> Transfer:
     imag_u2 = np.einsum("ij,jk,ik->i", tangent.imag, covariance, tangent.imag)
     modulus2 = np.maximum(np.abs(turned) ** 2 - imag_u2, 0.0)
     value = np.where(turned.real < 0, -1.0, 1.0) * np.sqrt(modulus2)
-    return Transfer(V_CY_PX, value, np.sqrt(np.maximum(real_u2, 0.0)))
+    return Transfer(
+        V_CY_PX, value, np.sqrt(np.maximum(real_u2, 0.0) + (step_u * np.minimum(value, 1.0 - np.abs(value))) ** 2)
+    )

@@ -80,7 +80,7 @@ class Scale:
     def slope(self, dn: NDArray[np.generic] | Floats) -> Floats:
         """Linear DN per stored DN at the values `dn`: what one code step, and its rounding, is worth in light."""
         value = np.asarray(dn, dtype=np.float64)
-        return np.asarray((self.linear(value + 0.5) - self.linear(value - 0.5)))
+        return np.asarray(self.linear(value + 0.5) - self.linear(value - 0.5))
 
 
 def sharpness_sites(layout: Layout, region: Region) -> Sites:

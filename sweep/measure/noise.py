@@ -68,7 +68,9 @@ class PhotonTransfer:
         return max(g * self.dn_per_electron * mean_dn + g * g * max(self.dark_variance_dn2, 0.0), 0.0) + rounding_dn2
 
 
-def area_noise(frames: Floats, gain_db: float, rounding_dn2: float, grid: tuple[Floats, Floats] | None = None) -> NoisePoint | None:
+def area_noise(
+    frames: Floats, gain_db: float, rounding_dn2: float, grid: tuple[Floats, Floats] | None = None
+) -> NoisePoint | None:
     """Noise of one even area from n frames (n, k) of linear light in DN; None with fewer than two frames or 30 pixels.
 
     grid: x and y of the samples, for the correlation between neighbours. A pixel that jumps (more than 6 deviations)
@@ -79,7 +81,11 @@ def area_noise(frames: Floats, gain_db: float, rounding_dn2: float, grid: tuple[
         return None
     levels = frames.mean(axis=1)
     mean = float(levels.mean())
-    scaled = frames * (mean / levels)[:, None] if mean > 0 and (levels > 0.2 * mean).all() else frames - (levels - mean)[:, None]
+    scaled = (
+        frames * (mean / levels)[:, None]
+        if mean > 0 and (levels > 0.2 * mean).all()
+        else frames - (levels - mean)[:, None]
+    )
     centre = scaled.mean(axis=0)
     rest = scaled - centre
     per_pixel = (rest**2).sum(axis=0) / (n - 1)
