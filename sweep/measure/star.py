@@ -23,6 +23,7 @@ from sweep.measure.star_find import (
     Frames,
     Point,
     find_centre,
+    flatten,
     inner_radius,
     level_frames,
     polar,
@@ -36,6 +37,8 @@ _RING_SAMPLES = 90
 _SIDES = (-1, 1, -2, 2)
 _LEVEL_TERMS = 6
 _RIM_MARGIN_PX = 3.5
+_RIM_PERIODS = 0.4
+_RIM_WIDTHS = 1.4
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,14 +123,16 @@ def read_star(
 
 
 def _mostly_noise(frames: Frames) -> bool:
-    """Whether a pixel's noise, from frame to frame, is half of the level and more."""
-    return len(frames.values) > 1 and float(np.median(frames.values.std(axis=0, ddof=1))) > 0.5
+    """Whether the samples scatter by more than any print of that mean level could make them, or from frame to frame."""
+    between = float(np.median(frames.values.std(axis=0, ddof=1))) if len(frames.values) > 1 else 0.0
+    return float(frames.mean.std()) > 1.5 or between > 0.5
 
 
 def _measure(frames: Frames, cycles: int, centre: Point, known: StarMeasure | None) -> StarMeasure:
     """Rim, shift of each frame, then the rings over all frames, each about its own centre."""
+    frames = flatten(frames, centre)
     rim, width = find_rim(frames, cycles, centre)
-    outer = room(centre, frames.size) - 1.0 if rim is None else rim - max(_RIM_MARGIN_PX, width)
+    outer = room(centre, frames.size) - 1.0 if rim is None else rim - _rim_margin(cycles, rim, width)
     edges = _ring_edges(inner_radius(cycles), outer, frames.density)
     if len(edges) <= LEAST_RINGS:
         return StarMeasure(False, ("pattern-not-found",))
@@ -144,7 +149,7 @@ def _measure(frames: Frames, cycles: int, centre: Point, known: StarMeasure | No
         return StarMeasure(False, ("pattern-not-found",))
     noise, temporal = _noise(rest, fits.coefficients.size)
     rings, phase, shift_u = _rings(fits, cycles, len(centres), noise, temporal, known)
-    profile = None if rim is None else measure_profile(frames, cycles, centres, rim, fits.gradient(), noise)
+    profile = None if rim is None else measure_profile(frames, cycles, centres, rim, noise)
     unit = frames.unit
     return StarMeasure(
         True,
@@ -167,10 +172,16 @@ def _scaled(rings: StarRings, unit: float) -> StarRings:
     return replace(rings, **{name: getattr(rings, name) * unit for name in names})
 
 
+def _rim_margin(cycles: int, rim: float, width: float) -> float:
+    """How far from the rim (pixels) the wedges are as if they had no end, for a blur of that width."""
+    return max(_RIM_MARGIN_PX, _RIM_WIDTHS * width, _RIM_PERIODS * 2 * np.pi * rim / cycles)
+
+
 def _wild(rest: Floats) -> Bools:
-    """Samples that no noise explains (hot pixels, dust): beyond six times the robust scatter."""
+    """Samples that no noise explains (hot pixels, dust): beyond six times the robust scatter and 2 % of the level."""
     used = rest[rest != 0]
-    return np.asarray(np.abs(rest) > 6 * 1.4826 * float(np.median(np.abs(used)) if used.size else np.inf))
+    scatter = 1.4826 * float(np.median(np.abs(used))) if used.size else np.inf
+    return np.asarray(np.abs(rest) > max(6 * scatter, 0.02))
 
 
 def _ring_edges(inner: float, outer: float, density: float) -> Floats:
@@ -188,12 +199,6 @@ class _RingFits:
     radius: Floats
     coefficients: Floats
     variance: Floats
-
-    def gradient(self) -> tuple[float, float]:
-        """Relative change of the light per pixel along x and y, from the level's first order."""
-        scale = float(np.sum(self.radius**2 * self.coefficients[:, 0]))
-        along = [float(np.sum(self.radius * self.coefficients[:, i])) / scale for i in (2, 3)]
-        return along[0], along[1]
 
 
 def _fit_rings(frames: Frames, cycles: int, centres: Floats, edges: Floats) -> tuple[_RingFits | None, Floats]:

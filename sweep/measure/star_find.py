@@ -1,6 +1,6 @@
 """Where a star is: its centre from its own symmetry, then from the phase of its wedges ring by ring."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -70,6 +70,18 @@ def polar(frames: Frames, centre: Point) -> tuple[Floats, Complex]:
     return radius, np.where(radius > 0, z / np.maximum(radius, 1e-12), 1.0)
 
 
+def flatten(frames: Frames, centre: Point) -> Frames:
+    """The frames with a light gradient taken out: the plane that the whole rings about the centre lie on."""
+    radius, _ = polar(frames, centre)
+    whole = (radius < room(centre, frames.size)) & frames.weight.all(axis=0)
+    plane = np.stack([np.ones_like(frames.x), frames.x - centre[0], frames.y - centre[1]])
+    level, along_x, along_y = np.linalg.lstsq(plane[:, whole].T, frames.mean[whole], rcond=None)[0]
+    light = 1 + (along_x * plane[1] + along_y * plane[2]) / level
+    if level <= 0 or light.min() < 0.2:
+        return frames
+    return replace(frames, values=frames.values / light, mean=frames.mean / light)
+
+
 def find_centre(frames: Frames, cycles: int) -> Point | None:
     """Centre of the star of so many cycles, in pixels; None where the region doesn't show it.
 
@@ -83,7 +95,7 @@ def find_centre(frames: Frames, cycles: int) -> Point | None:
         centre = refine_centre(frames, frames.mean, np.ones_like(frames.mean), cycles, start)
         if room(centre, frames.size) < inner + LEAST_RINGS * RING_PX:
             continue
-        power = _harmonic_power(frames, cycles, centre)
+        power, _ = _harmonic(frames, cycles, centre)
         if power > best_power:
             best, best_power = centre, power
     if best is None or not _shows_star(frames, cycles, best):
@@ -92,11 +104,12 @@ def find_centre(frames: Frames, cycles: int) -> Point | None:
 
 
 def _shows_star(frames: Frames, cycles: int, centre: Point) -> bool:
-    """Whether rings about the centre hold the n-th harmonic beyond noise, and no other harmonic more."""
+    """Whether rings about the centre hold the n-th harmonic in one phase, beyond noise, and no other harmonic more."""
     rings = (room(centre, frames.size) - inner_radius(cycles)) / RING_PX
     if rings < LEAST_RINGS:
         return False
-    return _harmonic_power(frames, cycles, centre) > 1 + 8 / np.sqrt(rings) and _cycles_right(frames, cycles, centre)
+    power, coherence = _harmonic(frames, cycles, centre)
+    return power > 1 + 8 / np.sqrt(rings) and coherence > 0.7 and _cycles_right(frames, cycles, centre)
 
 
 def _symmetry_centres(frames: Frames, cycles: int) -> list[Point]:
@@ -184,8 +197,8 @@ def refine_centre(
     return float(centre[0]), float(centre[1])
 
 
-def _harmonic_power(frames: Frames, cycles: int, centre: Point) -> float:
-    """Power of the n-th harmonic over what noise would give: 1 on average without star."""
+def _harmonic(frames: Frames, cycles: int, centre: Point) -> tuple[float, float]:
+    """Power of the n-th harmonic over what noise would give, and how far its rings share one phase (0 to 1)."""
     inner, outer = inner_radius(cycles), room(centre, frames.size)
     radius, direction = polar(frames, centre)
     near = (radius > inner) & (radius < outer)
@@ -193,10 +206,12 @@ def _harmonic_power(frames: Frames, cycles: int, centre: Point) -> float:
     rings = _coarse_rings(radius[near], turn, value, np.ones_like(value), np.arange(inner, outer, RING_PX))
     filled = rings.count > 20
     if not filled.any():
-        return 0.0
+        return 0.0, 0.0
     rest = value - rings.level[rings.ring] - (np.conj(rings.harmonic[rings.ring]) * turn).real
     variance = max(float(np.median(np.abs(rest))) / 0.6745, 1e-6) ** 2
-    return float(np.mean(rings.count[filled] * np.abs(rings.harmonic[filled]) ** 2)) / (4 * variance)
+    weighted = rings.count[filled] * rings.harmonic[filled] ** 2
+    total = float(np.sum(np.abs(weighted)))
+    return total / (4 * variance * int(filled.sum())), float(np.abs(weighted.sum())) / max(total, 1e-300)
 
 
 def _cycles_right(frames: Frames, cycles: int, centre: Point) -> bool:
@@ -213,5 +228,5 @@ def _cycles_right(frames: Frames, cycles: int, centre: Point) -> bool:
         return False
     first = 5
     others = spectrum[first : slots // 4].copy()
-    others[max(0, cycles - first - 2) : max(0, cycles - first + 3)] = 0
+    others[max(0, cycles - first) : max(0, cycles - first + 1)] = 0
     return bool(spectrum[cycles] > 1.2 * others.max())

@@ -29,11 +29,12 @@ CURVE_CY_PX = np.linspace(0.0, NYQUIST_CY_PX, 101)
 _KNOTS_CY_PX = (0.0, 0.03, 0.06, 0.09, 0.12, 0.15, 0.18, 0.21, 0.24, 0.27, 0.3, 0.34, 0.38, 0.43, 0.5, 0.65, 0.82, 1.0)
 _EXTRA = 4
 _FALL_AT_50_PX = 0.003
-_RATIO_FLOOR = 0.002
-_REACH_SHARE = 0.03
+_RATIO_FLOOR = 0.0015
+_REACH_SHARE = 0.02
 _MOTTLE_BINS = 10.0
 _FREE_IN_RINGS = 10
 _STATED_MODULATION_U = 0.01
+_CURVE_FLOOR = 0.001
 
 
 @dataclass(frozen=True, slots=True)
@@ -145,8 +146,8 @@ class _Problem:
                 block = kernel.rows(rim, solution[: len(self.at_zero)], self.at_zero)
                 rows.append(block * trust[:, None])
                 right.append(self.profile.value * trust)
-            rows += self._prior_part(ratio, typical)
-            right.append(np.zeros(sum(len(r) for r in rows) - sum(len(b) for b in right)))
+            prior_rows, prior_right = self._prior_part(ratio, typical)
+            rows, right = rows + prior_rows, right + prior_right
             a, b = np.vstack(rows), np.concatenate(right)
             covariance = np.asarray(np.linalg.pinv(a.T @ a, hermitian=True), np.float64)
             solution = covariance @ (a.T @ b)
@@ -167,19 +168,22 @@ class _Problem:
         extra[:, 3] = self.signed * (self.rings.radius_px / 50) ** 2
         return [np.hstack([self.ring_rows, extra]) / self.rings.u[:, None]], [self.signed / self.rings.u]
 
-    def _prior_part(self, ratio: tuple[float, float] | None, typical: Floats) -> list[Floats]:
-        """Rows whose right-hand side is 0: smoothness, size of what is hardly known, and the ratio."""
+    def _prior_part(self, ratio: tuple[float, float] | None, typical: Floats) -> tuple[list[Floats], list[Floats]]:
+        """Rows and right-hand sides: smoothness, size of what is hardly known, and the ratio."""
         j = len(self.at_zero)
         smooth = np.hstack([self.bend, np.zeros((len(self.bend), _EXTRA))]) / typical[:, None]
         weak = np.zeros((_EXTRA, j + _EXTRA))
         sizes = (1e6 * self.mid, 0.3, 2 * self.mid, _FALL_AT_50_PX)
         weak[range(_EXTRA), range(j, j + _EXTRA)] = 1 / np.array(sizes)
-        if ratio is None:
-            return [smooth, weak]
-        # half difference = ratio x (light - half difference); without a surround the rings' level is the mean
-        datum = np.zeros((1, j + _EXTRA))
-        datum[0, :j], datum[0, j] = self.at_zero * (1 + ratio[0]), -ratio[0]
-        return [smooth, weak, datum / (ratio[1] * self.mid)]
+        rows, right = [smooth, weak], [np.zeros(len(smooth) + len(weak))]
+        if ratio is not None:
+            # half difference = ratio x (light - half difference); without a surround the rings' level is that mean
+            seen = self.profile is not None
+            datum = np.zeros((1, j + _EXTRA))
+            datum[0, :j], datum[0, j] = self.at_zero * (1 + ratio[0] * seen), -ratio[0] * seen
+            rows.append(datum / (ratio[1] * self.mid))
+            right.append(np.full(1, 0.0 if seen else ratio[0] / ratio[1]))
+        return rows, right
 
     def curve(self, ratio: float, ratio_u: float) -> StarCurve:
         """The transfer with the pooled ratio."""
@@ -193,7 +197,12 @@ class _Problem:
         smooth = np.convolve(np.pad(beyond, 2, "edge"), kernel, "valid")
         value = np.where(m < 0, -1.0, 1.0) * (np.abs(m) + np.interp(CURVE_CY_PX, v, smooth, left=0.0))
         return StarCurve(
-            Transfer(CURVE_CY_PX, value, u), float(v[0]), float(v[-1]), ratio, ratio_u, self.profile is not None
+            Transfer(CURVE_CY_PX, value, np.hypot(u, _CURVE_FLOOR * (CURVE_CY_PX > 0))),
+            float(v[0]),
+            float(v[-1]),
+            ratio,
+            ratio_u,
+            self.profile is not None,
         )
 
 

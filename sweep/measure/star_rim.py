@@ -15,7 +15,7 @@ _BORDER_PX = 2.0
 
 @dataclass(frozen=True, slots=True)
 class RadialProfile:
-    """Mean level over radius, across the rim: bins of pixels, wedges and gradient taken out, unit of the samples.
+    """Mean level over radius, across the rim: bins of pixels, wedges taken out, unit of the samples.
 
     `radius_px`, `value`, `u`: (b,); `ring`: (b,) True for whole rings of `RING_BIN_PX`, False for blocks of the
     region's corners; `border`: (b, d) how many of the region's four borders lie at 0, 1, ... pixels, mean of a bin.
@@ -40,7 +40,7 @@ def find_rim(frames: Frames, cycles: int, centre: Point) -> tuple[float | None, 
     count = np.bincount(slot, minlength=len(edges))[: len(edges)]
     level = np.bincount(slot, frames.mean, len(edges))[: len(edges)] / np.maximum(count, 1)
     smooth = np.convolve(level, np.ones(3) / 3, "same")
-    first, last = int(max(inner + 6, 0.5 * outer) / RING_BIN_PX), len(edges) - 5
+    first, last = int(max(inner + 6, 0.5 * outer) / RING_BIN_PX), len(edges) - 8
     steps = [(abs(float(smooth[i + 4 : i + 7].mean() - smooth[i - 7 : i - 3].mean())), i) for i in range(first, last)]
     if not steps:
         return None, 0.0
@@ -67,13 +67,11 @@ def _crossing(radii: Floats, rise: Floats, level: float) -> float:
     return float(radii[i] + (radii[i + 1] - radii[i]) * min(max(part, 0.0), 1.0))
 
 
-def measure_profile(
-    frames: Frames, cycles: int, centres: Floats, rim: float, gradient: tuple[float, float], noise: float
-) -> RadialProfile | None:
+def measure_profile(frames: Frames, cycles: int, centres: Floats, rim: float, noise: float) -> RadialProfile | None:
     """The level in whole rings as far as they fit into the region, then in blocks of its corners.
 
-    centres: (n, 2) of the star in each frame; gradient: relative change of the light per pixel along x and y;
-    noise: rms of a pixel of the mean frame. None where the region holds too little of the surround.
+    frames: with light gradients taken out; centres: (n, 2) of the star in each; noise: rms of a pixel of the mean
+    frame. None where the region holds too little of the surround.
     """
     bins = _Bins.of(frames, inner_radius(cycles) + 5, rim, (float(centres[:, 0].mean()), float(centres[:, 1].mean())))
     n, b = len(centres), bins.count
@@ -83,11 +81,9 @@ def measure_profile(
         slot, whole = bins.slot(radius)
         use = np.flatnonzero((slot >= 0) & (weight > 0))
         turn = np.where(whole, direction**cycles, 0.0)[use]
-        z = radius[use] * direction[use]
-        even = value[use] * (1 - (gradient[0] * z.real + gradient[1] * z.imag))
         columns = (np.ones(len(use)), turn.real, turn.imag)
         for i in range(3):
-            right[:, i] += np.bincount(slot[use], columns[i] * even, b)
+            right[:, i] += np.bincount(slot[use], columns[i] * value[use], b)
             for j in range(3):
                 square[:, i, j] += np.bincount(slot[use], columns[i] * columns[j], b)
         far += np.bincount(slot[use], radius[use], b)
