@@ -194,8 +194,7 @@ def _begun(folder: Path) -> bool:
     names = {path.name for path in folder.iterdir() if not path.name.endswith(PART)}
     if SHOTS not in names:
         return names == {STATION}
-    text = read_text(folder / SHOTS, SourceError, "table of shots")
-    return text.splitlines()[:1] == [_csv_line(RECORDED).strip()]
+    return (folder / SHOTS).read_bytes().startswith(_csv_line(RECORDED).encode())
 
 
 def _is_empty(folder: Path) -> bool:
@@ -204,9 +203,7 @@ def _is_empty(folder: Path) -> bool:
 
 def _whole_rows(folder: Path) -> list[Row]:
     """The rows that were written to their end; none where the run was torn off before its first frame."""
-    if not (folder / SHOTS).exists() or (folder / SHOTS).read_bytes().count(b"\n") < 2:
-        return []
-    return read_table(folder, None)
+    return read_table(folder, None, may_be_empty=True) if (folder / SHOTS).exists() else []
 
 
 def _compare(folder: Path, row: Row) -> None:

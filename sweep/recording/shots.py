@@ -41,13 +41,20 @@ def load_station(path: Path | str) -> Station:
 
 def read_text(path: Path, fault: type[InputError], what: str) -> str:
     """The text of a UTF-8 file, with or without byte order mark. Raises `fault` with one sentence."""
+    return _text_of(_bytes_of(path, fault, what), path, fault, what)
+
+
+def _bytes_of(path: Path, fault: type[InputError], what: str) -> bytes:
     try:
         if not path.is_file():
             there = "is not a file" if path.exists() else "is not there"
             raise fault(f"{path} {there}. Put there, or name, a {what}.")
-        data = path.read_bytes()
+        return path.read_bytes()
     except OSError as error:
         raise fault(f"{path} cannot be read: {error.strerror}. Check the path and its permissions.") from None
+
+
+def _text_of(data: bytes, path: Path, fault: type[InputError], what: str) -> str:
     if b"\0" in data or (fault is StationError and len(data) > LARGEST_STATION_BYTES):
         raise fault(f"{path} is not a text file. Put there, or name, a {what}.")
     try:
@@ -57,16 +64,14 @@ def read_text(path: Path, fault: type[InputError], what: str) -> str:
         raise fault(f"{path}, line {line}, is not UTF-8 text. Save the {what} as UTF-8.") from None
 
 
-def read_table(folder: Path, station: Station | None) -> list[Row]:
+def read_table(folder: Path, station: Station | None, *, may_be_empty: bool = False) -> list[Row]:
     """Read a folder's `shots.csv`.
 
-    Raises SourceError, with every mistake, where the table cannot be used as it is; with a station its stops and
-    target names are checked too. That the files are there is not checked here.
+    A last row that a torn run did not write to its end does not count. With a station its stops and target names are
+    checked too; that the files are there is not. Raises SourceError with every mistake.
     """
     where = folder / SHOTS
-    text = read_text(where, SourceError, f"table of shots with the columns {','.join((*REQUIRED, 'role'))}")
-    if text.startswith(",".join(RECORDED)) and not text.endswith("\n"):
-        text = text[: text.rfind("\n") + 1]  # a recording that was torn off in its last row
+    text = _table_text(where)
     try:
         lines = list(csv.reader(io.StringIO(text, newline=""), strict=True))
     except csv.Error as error:
@@ -79,9 +84,18 @@ def read_table(folder: Path, station: Station | None) -> list[Row]:
     found = [row for number, cells in rows[1:] if (row := table.row(number, cells)) is not None]
     if table.mistakes:
         raise SourceError(message(table.mistakes, f"{where} has {len(table.mistakes)} mistakes"))
-    if not found:
+    if not found and not may_be_empty:
         raise SourceError(f"{where} lists no frame. Add one row a frame.")
     return found
+
+
+def _table_text(where: Path) -> str:
+    what = f"table of shots with the columns {','.join((*REQUIRED, 'role'))}"
+    data = _bytes_of(where, SourceError, what)
+    last = data.rfind(b"\n") + 1
+    if data.startswith(f"{','.join(RECORDED)}\n".encode()) and not re.search(rb",[0-9a-f]{64}$", data[last:]):
+        data = data[:last]  # a recording that was torn off in its last row
+    return _text_of(data, where, SourceError, what)
 
 
 def message(mistakes: Sequence[str], title: str) -> str:
