@@ -1,0 +1,1 @@
+"""Random trials against exact truth; `python -m tests.trials NAME` makes the tables of docs/trials.md."""
