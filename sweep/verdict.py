@@ -3,8 +3,10 @@
 Codes and keys stay in the files; people read these words. Pure: records in, text out.
 """
 
-from sweep.choose.wording import number
-from sweep.result import Recommendation, Result, Stop
+import re
+
+from sweep.choose.wording import chance, number
+from sweep.result import NOTE_CODES, Note, Recommendation, Result, Stop
 from sweep.station import Station
 
 WHY_NOT = {
@@ -85,6 +87,24 @@ def contrast_line(result: Result, station: Station) -> str:
         f"Contrast of a {number(station.need.feature_um)} um feature at {chosen.worst_target}, the worst: "
         f"{with_u(chosen.worst_contrast, chosen.worst_contrast_u)} (k = 2); {station.need.contrast:g} is needed."
     )
+
+
+def chance_line(result: Result, station: Station) -> str:
+    """How sure the answer is, as a sentence; empty where there is none."""
+    chosen = chosen_stop(result)
+    if chosen is None:
+        return ""
+    return (
+        f"Chance that it meets the need: {chance(chosen.chance_meets)} ({station.need.confidence:g} wanted). "
+        f"Chance that no other usable stop is better: {chance(result.recommendation.chance_best)}."
+    )
+
+
+def told(note: Note) -> str:
+    """A warning with what to do: its own text, and the remedy of its kind where the text does not say that already."""
+    remedy = NOTE_CODES[note.code].remedy
+    words, said = (set(re.findall(r"[a-z]{4,}", text.lower())) for text in (remedy, note.text))
+    return note.text if 2 * len(words & said) >= len(words) else f"{note.text} {remedy}"
 
 
 def _use(recommendation: Recommendation) -> str:

@@ -60,7 +60,7 @@ def a_result(
     warnings: Sequence[Note] = (),
     model: bool = True,
 ) -> Result:
-    """A result at that station. `ms_at_f4`: exposure at f/4; `sharpness` scales contrasts; `clipped` stops aren't read."""
+    """A result at that station. `ms_at_f4`: exposure at f/4; `sharpness` scales contrasts; `clipped`: unread stops."""
     readings = tuple(
         _reading(station, stop, i, patch, sharpness, stop in clipped, model)
         for stop in station.lens.stops
@@ -186,7 +186,7 @@ def _recommendation(station: Station, stops: Sequence[Stop]) -> Recommendation:
             f"feature of {need.feature_um:g} um keeps a contrast of {best.worst_contrast:.3f} (u 0.004); "
             f"{need.contrast:g} is needed.",
             f"Chance that f/{best.stop:g} meets the need: over 0.99; that no other usable stop is better: 0.93.",
-            f"{best.exposure_ms:.3g} ms with {best.gain_db:.1f} dB of gain brings the light tone to 70 % of full scale.",
+            f"{best.exposure_ms:.3g} ms with {best.gain_db:.1f} dB of gain brings the light tone to 70 %.",
             f"Signal-to-noise ratio at the light tone: {best.snr_db:.1f} dB (30 dB wanted).",
             f"What costs most at {best.worst_target} is diffraction at the iris: 31 % of the contrast.",
         ),

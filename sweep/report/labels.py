@@ -2,6 +2,7 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -12,48 +13,51 @@ Points = NDArray[np.float64]
 _LINE_PT = 1.25  # height of a line of text, of its font size
 _LETTER_PT = 0.62  # width of a letter, of its font size: on the wide side for DejaVu Sans
 _GAP_PT = 3.0
-_LEAD_PT = 16.0
+_LEAD_PT = 12.0
+_SAMPLE_PT = 26.0
+_AWAY_PT = (14.0, 26.0, 42.0, 62.0, 86.0)  # how far a free label may stand from its point
+_UP = (1.0, -1.0, 0.5, -0.5, 1.6, -1.6, 2.4, -2.4)  # how high, of that
 
 
 @dataclass(frozen=True, slots=True)
 class Label:
-    """A text that belongs to height `y` (data units) at the right edge of the axes."""
+    """A text that belongs to height `y` (data units) at the right edge; a line sample stands before it where stated."""
 
     y: float
     text: str
     colour: str = "black"
     bold: bool = False
+    dash: Any = None
+    marker: str = ""
 
 
 def label_right(axes: Axes, labels: Sequence[Label], size_pt: float) -> None:
     """Write labels right of the axes at their heights, moved apart where they would overlap, each with a leader."""
     labels = sorted(labels, key=lambda one: one.y)
-    pixels_per_pt = axes.figure.dpi / 72
+    pixels_per_pt = _pixels_per_pt(axes)
     box = axes.get_window_extent()
+    width_pt, height_pt = box.width / pixels_per_pt, box.height / pixels_per_pt
     wanted = [(axes.transData.transform((1, one.y))[1] - box.y0) / pixels_per_pt for one in labels]
     heights = [size_pt * _LINE_PT * (one.text.count("\n") + 1) + _GAP_PT for one in labels]
-    placed = spread(wanted, heights, box.height / pixels_per_pt)
-    for label, want, got in zip(labels, wanted, placed, strict=True):
-        axes.annotate(
+    for label, want, got in zip(labels, wanted, spread(wanted, heights, height_pt), strict=True):
+        start, sample_end = 1 + _LEAD_PT / width_pt, 1 + (_LEAD_PT + _SAMPLE_PT) / width_pt
+        end = start if label.dash is None else sample_end
+        y = got / height_pt
+        loose: dict[str, Any] = {"transform": axes.transAxes, "clip_on": False, "color": label.colour}
+        axes.plot([1, start], [want / height_pt, y], lw=0.7, **loose)
+        if label.dash is not None:
+            axes.plot([start, end], [y, y], ls=label.dash, lw=2.2 if label.bold else 1.2, **loose)
+            axes.plot([(start + end) / 2], [y], marker=label.marker, ms=5, mec="white", mew=0.5, **loose)
+        axes.text(
+            end + _GAP_PT / width_pt,
+            y,
             label.text,
-            xy=(1, want / (box.height / pixels_per_pt)),
-            xycoords="axes fraction",
-            xytext=(_LEAD_PT, got - want),
-            textcoords="offset points",
-            va="center",
+            transform=axes.transAxes,
+            va="center_baseline" if "\n" not in label.text else "center",
             fontsize=size_pt,
             color=label.colour,
             fontweight="bold" if label.bold else "normal",
             linespacing=1.1,
-            annotation_clip=False,
-            arrowprops={
-                "arrowstyle": "-",
-                "color": label.colour,
-                "lw": 0.8,
-                "shrinkA": 1,
-                "shrinkB": 0,
-                "relpos": (0, 0.5),
-            },
         )
 
 
@@ -93,40 +97,30 @@ def _top(block: Sequence[int], wanted: Sequence[float], high: Sequence[float], r
 
 def label_free(axes: Axes, xy: tuple[float, float], text: str, size_pt: float, taken: Points) -> None:
     """Write a label near the point `xy` where it covers the fewest of the points `taken` (n, 2), all in data units."""
+    pixels_per_pt = _pixels_per_pt(axes)
     lines = text.split("\n")
-    pixels_per_pt = axes.figure.dpi / 72
-    width = max(len(line) for line in lines) * size_pt * _LETTER_PT
-    height = len(lines) * size_pt * _LINE_PT
-    box = axes.get_window_extent()
-    x0, y0 = axes.transData.transform(xy) / pixels_per_pt
+    size = np.array([max(len(line) for line in lines) * size_pt * _LETTER_PT, len(lines) * size_pt * _LINE_PT])
+    here = axes.transData.transform(xy) / pixels_per_pt
     others = axes.transData.transform(taken) / pixels_per_pt
-    best: tuple[float, float, float] | None = None
-    for away in (14.0, 26.0, 42.0, 62.0, 86.0):
-        for side in (1, -1):
-            for up in (1.0, -1.0, 0.6, -0.6, 1.6, -1.6, 2.4, -2.4):
-                left = x0 + (away * 0.7 if side > 0 else -away * 0.7 - width)
-                low = y0 + up * away - height / 2
-                inside = (
-                    left > box.x0 / pixels_per_pt + 2
-                    and left + width < box.x1 / pixels_per_pt - 2
-                    and low > box.y0 / pixels_per_pt + 2
-                    and low + height < box.y1 / pixels_per_pt - 2
-                )
-                if not inside:
-                    continue
-                covered = np.sum(
-                    (others[:, 0] > left - 4)
-                    & (others[:, 0] < left + width + 4)
-                    & (others[:, 1] > low - 3)
-                    & (others[:, 1] < low + height + 3)
-                )
-                if best is None or covered + away / 200 < best[0]:
-                    best = (float(covered + away / 200), left - x0, low + height / 2 - y0)
-    _, dx, dy = best or (0.0, 12.0, 0.0)
+    corners = axes.get_window_extent().get_points() / pixels_per_pt
+    low = np.array(
+        [
+            (x, up * away)
+            for away in _AWAY_PT
+            for x in (0.7 * away, -0.7 * away - size[0])  # right of the point, left of it
+            for up in _UP
+        ]
+    )
+    low[:, 1] -= size[1] / 2
+    low += here
+    inside = np.all((low > corners[0] + 2) & (low + size < corners[1] - 2), axis=1)
+    covers = np.all((others > low[:, None] - 4) & (others < low[:, None] + size + 4), axis=2).sum(axis=1)
+    # Among equals the first is the nearest.
+    best = low[np.argmin(np.where(inside, covers, len(others) + 1))]
     axes.annotate(
         text,
         xy=xy,
-        xytext=(dx, dy),
+        xytext=(best[0] - here[0], best[1] + size[1] / 2 - here[1]),
         textcoords="offset points",
         va="center",
         fontsize=size_pt,
@@ -136,3 +130,9 @@ def label_free(axes: Axes, xy: tuple[float, float], text: str, size_pt: float, t
         bbox={"boxstyle": "square,pad=0.2", "fc": "white", "ec": "none", "alpha": 0.85},
         arrowprops={"arrowstyle": "-", "color": "black", "lw": 0.8, "shrinkA": 0, "shrinkB": 7},
     )
+
+
+def _pixels_per_pt(axes: Axes) -> float:
+    figure = axes.get_figure(root=True)
+    assert figure is not None
+    return figure.dpi / 72

@@ -1,8 +1,9 @@
 """Names as the fonts at hand can show them."""
 
 from functools import cache
+from pathlib import Path
 
-from matplotlib.font_manager import findfont
+import matplotlib
 from matplotlib.ft2font import FT2Font
 
 MISSING = "\N{WHITE SQUARE}"
@@ -19,4 +20,5 @@ def drawable(text: str) -> str:
 
 @cache
 def _letters() -> frozenset[int]:
-    return frozenset(FT2Font(findfont("DejaVu Sans Mono")).get_charmap())
+    fonts = Path(matplotlib.get_data_path()) / "fonts" / "ttf"
+    return frozenset(FT2Font(fonts / "DejaVuSansMono.ttf").get_charmap())
