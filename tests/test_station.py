@@ -357,6 +357,18 @@ def test_distance_and_scale_of_a_lens_whose_pupils_differ(first_mm, second_mm, g
     assert_allclose(station.object_um_per_px_at(30.0), 3.45 * abs(height / on_sensor), rtol=1e-10)
 
 
+@pytest.mark.parametrize(
+    ("stated", "of_files", "full_dn"), [(12, None, 4095), (12, 16, 4095), (None, 16, 65535), (None, None, 255)]
+)
+def test_full_scale_is_the_top_code(stated, of_files, full_dn):
+    text = (
+        LEAST
+        if stated is None
+        else LEAST.replace("pixel_pitch_um = 3.45", f"pixel_pitch_um = 3.45, bit_depth = {stated}")
+    )
+    assert parse_station(text).full_scale_dn(of_files) == full_dn
+
+
 def test_records_cannot_be_changed():
     with pytest.raises(ValueError, match="frozen"):
         parse_station(LEAST).need.contrast = 0.5

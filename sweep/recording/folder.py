@@ -122,7 +122,7 @@ class FolderSource:
             more = f" and {len(missing) - 1} more of {SHOTS}" if len(missing) > 1 else f" of {SHOTS}"
             raise FrameError(
                 f"{self.folder / missing[0]}{more} cannot be found. Put the file back, take its row out, or leave it "
-                "out."
+                "out (--leave-out-bad-frames)."
             )
         self._check_sweep()
 

@@ -101,7 +101,7 @@ def as_layout(pixels: Pixels, layout: Layout, file: str) -> Pixels:
     return first
 
 
-_REMEDY = "Copy the file again, take the frame again, or leave it out."
+_REMEDY = "Copy the file again, take the frame again, or leave it out (--leave-out-bad-frames)."
 
 
 def _decode_by_opencv(data: bytes) -> NDArray[np.generic] | None:
