@@ -1,6 +1,6 @@
 """The one path: frames in, a Result out. It cannot tell where the frames came from."""
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -15,7 +15,7 @@ from sweep.measure.edge import EdgeProfile
 from sweep.measure.linear import Floats
 from sweep.measure.star_level import SQUARE_WAVE
 from sweep.notices import notices
-from sweep.outlook import Estimate, FittedLens, estimate, model_transfer
+from sweep.outlook import Estimate, FittedLens, estimate, half_modulation
 from sweep.readings import CLIPPED_SHARE, Progress, Sighting, Sweep, measure_sweep
 from sweep.result import CameraNoise, CurvePoint, LensModel, Reading, Result, SourceFacts
 from sweep.station import Station
@@ -36,7 +36,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
     light = light_of(sweep)
     readings = [reading_of(s, station) for s in sweep.sightings]
     fit = _fit(sweep, light, station)
-    places = _places(sweep, station)
+    places = places_of(station, _directions(sweep))
     rng = np.random.default_rng(SEED)
     contrast, contrast_u = _contrasts(sweep, readings, places)
     found = estimate(places, contrast, contrast_u, fit, rng)
@@ -52,17 +52,17 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
         recommendation,
         stops,
         tuple(_with_model(sweep, readings, found, fit, station)),
-        _public_camera(camera, station),
-        _model(fit, lens, recommendation.stop, sweep, places),
+        _public_camera(camera, sweep, station),
+        lens_model(fit, lens, places, recommendation.stop, sweep.stops),
         (*source.notes, *noticed, *notes),
         SourceFacts(sweep.frames, source.sha256),
-        _curve(found, places),
+        model_curve(found),
     )
 
 
 def _sharp(sweep: Sweep) -> list[Sighting]:
     """Sound sightings that carry a transfer or an amplitude."""
-    return [s for s in sweep.sightings if s.ok and s.kind in ("edge", "star", "bars")]
+    return [s for s in sweep.sightings if s.ok and s.kind in SHARPNESS_KINDS]
 
 
 def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
@@ -163,19 +163,24 @@ def rebinned(profile: EdgeProfile, spread_px: float) -> tuple[Floats, Floats, Fl
     return d, width, value, 1.0 / np.sqrt(total[order]), gradient
 
 
-def _places(sweep: Sweep, station: Station) -> list[Place]:
-    """The places that the choice must serve: every sharpness patch, and the depths between where a range is stated."""
+def places_of(station: Station, directions: Mapping[tuple[int, int], float]) -> list[Place]:
+    """The places that the choice must serve: every sharpness patch, and the depths between where a range is stated.
+
+    directions: of the frequencies that each patch (target, patch) speaks for, degrees; 0 where none is known.
+    """
     places: list[Place] = []
     for i, target in enumerate(station.targets):
         for j, patch in enumerate(target.patches):
-            if patch.kind not in ("edge", "star", "bars"):
-                continue
-            direction = _direction(sweep, i, j, patch.kind)
-            places.append(_place(station, target.name, target.depth_mm, i, direction))
+            if patch.kind in SHARPNESS_KINDS:
+                direction = None if patch.kind == "star" else directions.get((i, j), 0.0)
+                places.append(_place(station, target.name, target.depth_mm, i, direction))
     if station.need.depth_range_mm is not None:
         for depth in np.linspace(*station.need.depth_range_mm, DEPTH_STEPS):
             places.append(_place(station, f"{depth:+.3g} mm", float(depth), -1, 0.0))
     return places
+
+
+SHARPNESS_KINDS = ("edge", "star", "bars")
 
 
 def _place(station: Station, name: str, depth_mm: float, target: int, direction: float | None) -> Place:
@@ -184,18 +189,15 @@ def _place(station: Station, name: str, depth_mm: float, target: int, direction:
     )
 
 
-def _direction(sweep: Sweep, target: int, patch: int, kind: str) -> float | None:
-    """Direction of the frequencies that a patch speaks for, from its sound sightings; None for a star."""
-    if kind == "star":
-        return None
+def _directions(sweep: Sweep) -> dict[tuple[int, int], float]:
+    """Direction of the frequencies that each edge or set of bars speaks for, from its sound sightings."""
+    out: dict[tuple[int, int], float] = {}
     for s in sweep.sightings:
-        if (s.site.target, s.site.patch) != (target, patch) or not s.ok:
-            continue
-        if s.edge is not None and s.edge.curve is not None:
-            return s.edge.curve.direction_deg
-        if s.bars is not None:
-            return s.bars.direction_deg
-    return 0.0
+        if s.ok and s.edge is not None and s.edge.curve is not None:
+            out[s.site.target, s.site.patch] = s.edge.curve.direction_deg
+        elif s.ok and s.bars is not None:
+            out[s.site.target, s.site.patch] = s.bars.direction_deg
+    return out
 
 
 def _contrasts(sweep: Sweep, readings: Sequence[Reading], places: Sequence[Place]) -> tuple[Floats, Floats]:
@@ -215,7 +217,7 @@ def _contrasts(sweep: Sweep, readings: Sequence[Reading], places: Sequence[Place
 
 def _columns(sweep: Sweep) -> dict[tuple[int, int], int]:
     """Column of each sharpness patch among the places."""
-    keys = sorted({(s.site.target, s.site.patch) for s in sweep.sightings if s.kind in ("edge", "star", "bars")})
+    keys = sorted({(s.site.target, s.site.patch) for s in sweep.sightings if s.kind in SHARPNESS_KINDS})
     return {key: i for i, key in enumerate(keys)}
 
 
@@ -294,29 +296,26 @@ def _tone(sweep: Sweep, sighting: Sighting, fit: LensFit | None) -> float | None
 
 
 def _camera(sweep: Sweep) -> CameraNoise:
-    """The camera's figures for the choice; per linear DN whatever the response."""
+    """The camera's figures for the choice, per linear DN whatever the response; dark noise as it comes."""
     transfer = sweep.photon_transfer
     full = int(sweep.scale.full_dn)
     if transfer is None:
         return CameraNoise(None, None, sweep.black.level_dn, full)
     gain = 1.0 / transfer.dn_per_electron
     gain_u = gain * transfer.dn_per_electron_u / transfer.dn_per_electron
-    dark = transfer.dark_noise_dn
-    if dark is None:
-        return CameraNoise(gain, None, sweep.black.level_dn, full, gain_u, None)
-    dark_u = transfer.dark_variance_dn2_u / (2.0 * dark)
+    dark = float(np.sqrt(transfer.dark_variance_dn2))
+    dark_u = transfer.dark_variance_dn2_u / (2.0 * dark) if dark > 0 else 0.0
     read_u = float(np.hypot(gain * dark_u, dark * gain_u))
     return CameraNoise(gain, gain * dark, sweep.black.level_dn, full, gain_u, read_u)
 
 
-def _public_camera(camera: CameraNoise, station: Station) -> CameraNoise:
-    """The same for the result: no electrons where the response is not linear."""
-    if station.camera.response == "linear":
-        return camera
-    return replace(camera, electrons_per_dn=None, read_noise_e=None, electrons_per_dn_u=None, read_noise_e_u=None)
-
-
-V_MODEL = np.linspace(0.0, 1.0, 201)
+def _public_camera(camera: CameraNoise, sweep: Sweep, station: Station) -> CameraNoise:
+    """The same for the result: no electrons where the response is not linear, no dark noise that rounding hides."""
+    if station.camera.response != "linear" or sweep.photon_transfer is None:
+        return replace(camera, electrons_per_dn=None, read_noise_e=None, electrons_per_dn_u=None, read_noise_e_u=None)
+    if sweep.photon_transfer.dark_noise_dn is None:
+        return replace(camera, read_noise_e=None, read_noise_e_u=None)
+    return camera
 
 
 def _with_model(
@@ -333,47 +332,49 @@ def _with_model(
     ]
     places = [found.outlook.places[c] for _, _, c in keyed]
     views = [View(k, p.target, p.direction_deg) for (_, k, _), p in zip(keyed, places, strict=True)]
-    curves = model_transfer(fit, views, np.array([p.depth_mm for p in places]), V_MODEL)
+    depths = np.array([p.depth_mm for p in places])
+    halves = half_modulation(fit, views, depths)
     out = list(readings)
-    for (i, k, c), curve in zip(keyed, curves, strict=True):
+    for (i, k, c), half in zip(keyed, halves, strict=True):
         best, u = found.outlook.contrast[k, c], found.outlook.draws[:, k, c].std()
-        half = _half(curve)
         out[i] = replace(
             out[i],
             model_contrast=float(abs(best)),
             model_contrast_u=float(u),
-            model_mtf50_cy_px=half,
-            model_mtf50_cy_px_u=None,
+            model_mtf50_cy_px=half[0] if half else None,
+            model_mtf50_cy_px_u=half[1] if half else None,
         )
     return out
 
 
-def _half(curve: Floats) -> float | None:
-    below = np.flatnonzero(curve <= 0.5)
-    if below.size == 0:
-        return None
-    i = int(below[0])
-    step = V_MODEL[1] - V_MODEL[0]
-    return float(V_MODEL[i] - step * (0.5 - curve[i]) / (curve[i - 1] - curve[i]))
-
-
-def _model(
-    fit: LensFit | None, lens: FittedLens | None, stop: float | None, sweep: Sweep, places: Sequence[Place]
+def lens_model(
+    fit: LensFit | None, lens: FittedLens | None, places: Sequence[Place], stop: float | None, stops: Sequence[float]
 ) -> LensModel:
-    if fit is None:
+    """The fitted lens in the terms of the trade.
+
+    Spherical aberration is positive where marginal rays focus short. Best focus is the depth that is sharpest at the
+    recommended stop, at the mean frequency of the feature.
+    """
+    if fit is None or lens is None:
         return LensModel(None, None, None, None)
-    focus, focus_u = fit.value("focus")
     w040, w040_u = fit.value("w040")
     blur2, blur2_u = fit.value("blur2")
     blur = float(np.sqrt(max(blur2, 0.0)))
+    focus = lens.best_depth_mm(stops.index(stop), places) if stop is not None else fit.value("focus")[0]
     return LensModel(
-        focus, -w040, blur, fit.reduced_chi2, focus_u, w040_u, blur2_u / (2.0 * blur) if blur > 0 else None
+        focus,
+        -w040,
+        blur,
+        fit.reduced_chi2,
+        fit.value("focus")[1],
+        w040_u,
+        blur2_u / (2.0 * blur) if blur > 0 else None,
     )
 
 
-def _curve(found: Estimate, places: Sequence[Place]) -> tuple[CurvePoint, ...]:
+def model_curve(found: Estimate) -> tuple[CurvePoint, ...]:
     """The worst patch of each target along the model's curve, for the plot."""
-    outlook = found.outlook
+    outlook, places = found.outlook, found.outlook.places
     if outlook.curve is None or outlook.curve_f_numbers is None or outlook.curve_draws is None:
         return ()
     points = []

@@ -142,7 +142,7 @@ def plan(station_file: Path, out: Path | None, as_json: bool) -> int:
     """Say what to expect of a station before any frame, from the station file alone."""
     _see_that_results_fit(out)
     station = _load(station_file)
-    from sweep.analyse import forecast
+    from sweep.forecast import forecast
 
     return _answer(forecast(station), station, out, as_json)
 

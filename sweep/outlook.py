@@ -189,6 +189,16 @@ class FittedLens:
             lens /= max(float(lens_transfer(self.fit.bench, perfect, v)[0, 0]), 1e-6)
         return lens * camera
 
+    def best_depth_mm(self, stop_index: int, places: Sequence[Place]) -> float:
+        """The depth (mm) that is sharpest at a stop, by the mean over the feature's frequencies of all places."""
+        depths = np.array([p.depth_mm for p in places])
+        reach = max(float(np.ptp(depths)), 1e-3 * self.fit.bench.focal_length_mm / self.fit.bench.magnification)
+        trial = np.linspace(depths.min() - reach, depths.max() + reach, 241)
+        v = np.full((len(trial), 1), np.mean([p.feature_cy_px for p in places]))
+        optics = Optics(self.fit, [View(stop_index, -1, 0.0)] * len(trial), trial)
+        sharp = transfer(optics, Frequencies([View(stop_index, -1, 0.0)] * len(trial), v), self.fit.theta)[:, 0]
+        return float(trial[int(np.argmax(sharp))])
+
     def _camera(self, place: Place, pixel_scale: float) -> float:
         """Pixel box and sensor blur at the feature; a smaller pixel shrinks both."""
         v = np.array([place.feature_cy_px * pixel_scale])
@@ -205,7 +215,19 @@ class FittedLens:
         return float(swept.max())
 
 
-def model_transfer(fit: LensFit, views: Sequence[View], depths_mm: Floats, v_cy_px: Floats) -> Floats:
-    """Signed transfer (views, n) of lens and camera at common frequencies (n,)."""
+V_CY_PX = np.linspace(0.0, 1.0, 201)
+
+
+def half_modulation(fit: LensFit, views: Sequence[View], depths_mm: Floats) -> list[tuple[float, float] | None]:
+    """The model's half-modulation frequency (cycles/pixel) of each view, and its u; None where it does not fall so far."""
     optics = Optics(fit, views, depths_mm)
-    return transfer(optics, Frequencies(views, np.tile(v_cy_px, (len(views), 1))), fit.theta)
+    curves = transfer(optics, Frequencies(views, np.tile(V_CY_PX, (len(views), 1))), fit.theta)
+    below = curves <= 0.5
+    first = np.where(below.any(axis=1), below.argmax(axis=1), 1)
+    row = np.arange(len(views))
+    before, after = curves[row, first - 1], curves[row, first]
+    step = V_CY_PX[1]
+    v = V_CY_PX[first] - step * (0.5 - after) / np.where(before > after, before - after, 1.0)
+    _, slopes = transfer_slopes(optics, Frequencies(views, v[:, None]), fit.theta)
+    u = np.sqrt(np.einsum("pv,pq,qv->v", slopes[:, :, 0], fit.covariance, slopes[:, :, 0])) * step / np.abs(before - after)
+    return [(float(v[i]), float(u[i])) if below[i].any() else None for i in row]
