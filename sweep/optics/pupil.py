@@ -4,6 +4,7 @@ Wavefront coefficients are in waves at the pupil's edge: W(rho) = W020 rho^2 + W
 The frequency s of a transfer function is a fraction of the diffraction cut-off 1 / (wavelength x working f-number).
 """
 
+from collections.abc import Iterator
 from functools import lru_cache
 from typing import Literal, overload
 
@@ -90,10 +91,10 @@ def otf(
     points[0] = np.minimum(np.abs(points[0]), 1.0)
     nodes_u, nodes_t = _node_counts(*points)
     out = np.empty((5 if derivatives else 1, points.shape[1]))
-    for n in np.unique(nodes_u):
-        group = np.flatnonzero(nodes_u == n)
-        rules = (_half_rule(int(n)), _half_rule(int(nodes_t[group].max())))
-        size = max(1, _BLOCK // int(n))
+    for group in _groups(nodes_u, nodes_t):
+        n = int(nodes_u[group].max())
+        rules = (_half_rule(n), _half_rule(int(nodes_t[group].max())))
+        size = max(1, _BLOCK // n)
         for start in range(0, group.size, size):
             block = group[start : start + size]
             out[:, block] = _quadrature(points[:, block], *rules, derivatives)
@@ -102,6 +103,20 @@ def otf(
 
 
 _BLOCK = 8192  # numbers a block: its dozen arrays stay in the second-level cache
+_WORTH_A_GROUP = 10_000  # cosines; fewer are computed faster than another group of calls is made
+
+
+def _groups(nodes_u: NDArray[np.int64], nodes_t: NDArray[np.int64]) -> Iterator[NDArray[np.intp]]:
+    """Indices of the points that share a rule: those of one count of nodes, and few of lower counts."""
+    counts = np.unique(nodes_u)[::-1]
+    last = 0
+    for k, n in enumerate(counts):
+        spared = (counts[last] - n) * nodes_t[nodes_u == n].sum()
+        if spared > _WORTH_A_GROUP:
+            yield np.flatnonzero((nodes_u <= counts[last]) & (nodes_u > n))
+            last = k
+    if counts.size:
+        yield np.flatnonzero(nodes_u <= counts[last])
 
 
 def _quadrature(points: Floats, rule_u: tuple[Floats, Floats], rule_t: tuple[Floats, Floats], slopes: bool) -> Floats:
@@ -116,16 +131,19 @@ def _quadrature(points: Floats, rule_u: tuple[Floats, Floats], rule_t: tuple[Flo
     a_axis = x * x + s * s
     w6_present = bool(w6.any())
     first = w2 + w6 * (b * b) if w6_present else w2
-    cosines, sines, sines_a, sines_aa = np.zeros((4, *b.shape))
+    twice_b = 2.0 * b
+    cosines, sines, sines_a, sines_aa = (np.zeros_like(b) for _ in range(4))
     for t, wt in zip(*rule_t, strict=True):
         a = sin2_u * (t * t)
         a += a_axis
-        wave = a * (3.0 * w6) if w6_present else np.zeros_like(a)
-        wave += 2.0 * w4
-        wave *= a
+        if w6_present:
+            wave = a * (3.0 * w6)
+            wave += 2.0 * w4
+            wave *= a
+        else:
+            wave = a * (2.0 * w4)
         wave += first
-        wave *= b
-        wave += wave
+        wave *= twice_b
         cosine, sine = _cos_sin_of_waves(wave, slopes)
         cosine *= wt
         cosines += cosine
