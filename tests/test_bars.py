@@ -10,7 +10,8 @@ from numpy.testing import assert_allclose
 from printed import Bars, Blur, noisy, render, samples
 from references import facts
 
-from sweep.measure.bars import SQUARE_WAVE, BarsMeasure, bars_contrasts, read_bars
+from sweep.measure.bars import BarsMeasure, bars_contrasts, read_bars
+from sweep.measure.bars_fit import SQUARE_WAVE
 
 SIZE = (84, 56)
 SHARP, SOFT = Blur(0.85, 0.4), Blur(0.42, 0.0)

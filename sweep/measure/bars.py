@@ -16,15 +16,13 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from sweep.measure.bars_fit import LEVEL_TERMS, SQUARE_WAVE, BarsFit, Samples, design_of
 from sweep.measure.linear import Bools, Floats
 
-SQUARE_WAVE = 4 / np.pi
 SATURATED_LIMIT = 0.01
 PERIOD_TOLERANCE = 0.12
 NYQUIST_CY_PX = 0.5
-_HIGHEST_CY_PX = 1.1
 _BORDER_PX = 3.0
-_LEVEL_TERMS = 6
 _FIRM = 6.0
 _MODULATION_U = 0.01
 _RATIO_U_LIMIT = 0.12
@@ -104,7 +102,7 @@ def read_bars(
     levels = np.where(good, values, 0.0)[:, shared].mean(axis=1) if shared.any() else np.zeros(1)
     if not np.isfinite(levels).all() or levels.min() <= 0 or levels.min() < 0.2 * levels.max():
         return BarsMeasure(False, ("low-signal",))
-    bars = _Samples(x[shared], y[shared], values[:, shared] / levels[:, None], float(levels.mean()))
+    bars = Samples(x[shared], y[shared], values[:, shared] / levels[:, None], float(levels.mean()))
     wave = _strongest_wave(bars, period_px)
     measure = None if wave is None else _read(bars, wave, period_px)
     if measure is None and near is not None and near.ok:
@@ -167,20 +165,7 @@ def _print_ratio(sound: Sequence[BarsMeasure], modulation: float) -> tuple[float
     return float(min(np.exp(mean), 1.0)), float(min(np.exp(mean), 1.0)) * u
 
 
-@dataclass(frozen=True, slots=True)
-class _Samples:
-    """Samples, (k,), and frames at one level, (n, k), as parts of their mean level `unit`."""
-
-    x: Floats
-    y: Floats
-    values: Floats
-    unit: float
-
-    def part(self, use: Bools) -> "_Samples":
-        return _Samples(self.x[use], self.y[use], self.values[:, use], self.unit)
-
-
-def _strongest_wave(bars: _Samples, period_px: float) -> tuple[float, float] | None:
+def _strongest_wave(bars: Samples, period_px: float) -> tuple[float, float] | None:
     """The frequency vector of the strongest wave of that period in any direction; None where another is stronger."""
     x, y, mean = bars.x - bars.x.min(), bars.y - bars.y.min(), bars.values.mean(axis=0)
     width, height = int(np.ptp(x)) + 1, int(np.ptp(y)) + 1
@@ -208,7 +193,7 @@ def _strongest_wave(bars: _Samples, period_px: float) -> tuple[float, float] | N
     return float(fx[0, column]), float(fy[row, 0])
 
 
-def _read(bars: _Samples, wave: tuple[float, float], period_px: float) -> BarsMeasure | None:
+def _read(bars: Samples, wave: tuple[float, float], period_px: float) -> BarsMeasure | None:
     """Frequency vector by Gauss-Newton on the mean frame, then each frame's wave with its own phase."""
     core = _core(bars, wave)
     if core is None:
@@ -218,12 +203,12 @@ def _read(bars: _Samples, wave: tuple[float, float], period_px: float) -> BarsMe
     mean = inner.values.mean(axis=0)
     scale = max(float(np.ptp(inner.x)), float(np.ptp(inner.y)))
     for _ in range(4):
-        design = _design(inner, f)
+        design = design_of(inner, f)
         if len(mean) < 3 * design.shape[1]:
             return None
         coefficients = np.linalg.lstsq(design, mean, rcond=None)[0]
-        c, s = coefficients[_LEVEL_TERMS : _LEVEL_TERMS + 2]
-        cx, sx, cy, sy = coefficients[_LEVEL_TERMS + 2 : _LEVEL_TERMS + 6]
+        c, s = coefficients[LEVEL_TERMS : LEVEL_TERMS + 2]
+        cx, sx, cy, sy = coefficients[LEVEL_TERMS + 2 : LEVEL_TERMS + 6]
         if c * c + s * s <= 0:
             return None
         # a turn of the phase along x or y is a change of the frequency
@@ -232,12 +217,12 @@ def _read(bars: _Samples, wave: tuple[float, float], period_px: float) -> BarsMe
     v = float(np.hypot(*f))
     if abs(v * period_px - 1) > PERIOD_TOLERANCE or not 0 < v <= NYQUIST_CY_PX:
         return None
-    fit = _Fit.of(inner, f)
+    fit = BarsFit.of(inner, f)
     firm = fit is not None and abs(fit.together) > _FIRM * fit.u(0) and not fit.something_else()
-    return fit.measure(float(np.angle(fit.together))) if fit is not None and firm else None
+    return _record(fit, float(np.angle(fit.together))) if fit is not None and firm else None
 
 
-def _read_like(bars: _Samples, near: BarsMeasure) -> BarsMeasure | None:
+def _read_like(bars: Samples, near: BarsMeasure) -> BarsMeasure | None:
     """The wave of another stop's frequency and phase, however weak it is."""
     angle = np.radians(near.direction_deg)
     f = near.v_cy_px * np.array([np.cos(angle), np.sin(angle)])
@@ -252,11 +237,11 @@ def _read_like(bars: _Samples, near: BarsMeasure) -> BarsMeasure | None:
     inner = bars.part(np.asarray(border >= _BORDER_PX))
     if len(inner.x) < 64:
         return None
-    fit = _Fit.of(inner, f)
-    return None if fit is None else fit.measure(near.phase_rad + 2 * np.pi * float(f @ fit.middle))
+    fit = BarsFit.of(inner, f)
+    return None if fit is None else _record(fit, near.phase_rad + 2 * np.pi * float(f @ fit.middle))
 
 
-def _core(bars: _Samples, wave: tuple[float, float]) -> Bools | None:
+def _core(bars: Samples, wave: tuple[float, float]) -> Bools | None:
     """The samples inside the set: where the wave is strong along and across, its ends and borders left out."""
     v = float(np.hypot(*wave))
     x, y = bars.x, bars.y
@@ -303,126 +288,38 @@ def _longest_run(strong: Bools) -> tuple[int, int]:
     return best
 
 
-def _design(bars: _Samples, f: Floats, orders: Sequence[int] = (2, 3, 5)) -> Floats:
-    """Columns: level with its gradients, the fundamental, its change along x and y, and the harmonics."""
-    dx, dy = bars.x - bars.x.mean(), bars.y - bars.y.mean()
-    angle = 2 * np.pi * (dx * f[0] + dy * f[1])
-    scale = max(float(np.ptp(dx)), float(np.ptp(dy)))
-    u, w = dx / scale, dy / scale
-    c, s = np.cos(angle), np.sin(angle)
-    seen = [h for h in orders if h * np.hypot(*f) < _HIGHEST_CY_PX]
-    harmonics = [part for h in seen for part in (np.cos(h * angle), np.sin(h * angle))]
-    return np.stack([np.ones_like(u), u, w, u * u, u * w, w * w, c, s, u * c, u * s, w * c, w * s, *harmonics], axis=1)
-
-
-@dataclass(frozen=True, slots=True)
-class _Fit:
-    """Each frame's complex harmonics 1, 3, 5, their unscaled u, and the noise, as parts of the level.
-
-    `folded`: what a harmonic that the sampling makes one with the fundamental may add to it.
-    """
-
-    f: Floats
-    middle: Floats
-    waves: NDArray[np.complex128]
-    units: Floats
-    level: float
-    samples: int
-    noise: float
-    temporal: float | None
-    folded: float
-    unit: float
-
-    @classmethod
-    def of(cls, bars: _Samples, f: Floats) -> "_Fit | None":
-        """The fit with wild samples left out, and with no more harmonics than the sampling keeps apart."""
-        middle = np.array([bars.x.mean(), bars.y.mean()])
-        left_out: tuple[int, ...] = ()
-        for orders in ((2, 3, 5), (2, 3), (2,), ()):
-            design = _design(bars, f, orders)
-            inverse = np.linalg.pinv(design.T @ design, rcond=1e-10, hermitian=True)
-            apart = inverse[_LEVEL_TERMS, _LEVEL_TERMS] + inverse[_LEVEL_TERMS + 1, _LEVEL_TERMS + 1] < 16 / len(design)
-            if (
-                apart
-                and np.linalg.matrix_rank(design.T @ design, tol=1e-8 * len(design), hermitian=True) == design.shape[1]
-            ):
-                break
-            left_out = tuple(h for h in (3, 5) if h not in orders[:-1])
-        for _ in range(2):
-            coefficients = inverse @ (design.T @ bars.values.T)
-            rest = bars.values - (design @ coefficients).T
-            mean = rest.mean(axis=0)
-            use = np.abs(mean) <= 6 * 1.4826 * float(np.median(np.abs(mean)))
-            if use.all() or use.sum() < 2 * design.shape[1]:
-                break
-            bars, design = bars.part(use), design[use]
-            inverse = np.linalg.pinv(design.T @ design, rcond=1e-10, hermitian=True)
-        n, k = bars.values.shape
-        freedom = max(k - design.shape[1], 1)
-        noise = float(np.sqrt(np.sum(mean**2) / freedom))
-        temporal = float(np.sqrt(np.sum((rest - mean) ** 2) / (freedom * (n - 1)))) if n > 1 else None
-        if noise <= 0 or not np.isfinite(noise):
-            return None
-        seen = [h for h in orders if h * np.hypot(*f) < _HIGHEST_CY_PX]
-        waves, units = np.zeros((3, n), complex), np.full(3, np.inf)
-        for i, h in enumerate((1, 3, 5)):
-            if h == 1 or h in seen:
-                at = _LEVEL_TERMS if h == 1 else _LEVEL_TERMS + 6 + 2 * seen.index(h)
-                waves[i] = coefficients[at] - 1j * coefficients[at + 1]
-                units[i] = np.sqrt((inverse[at, at] + inverse[at + 1, at + 1]) / 2)
-        # seen through a transfer that falls like exp(-a v), the third is the cube of the first
-        transfer = min(1.0, abs(waves[0].mean()) / SQUARE_WAVE)
-        folded = SQUARE_WAVE * sum(transfer**h / h for h in left_out) / np.sqrt(3)
-        return cls(f, middle, waves, units, float(coefficients[0].mean()), k, noise, temporal, float(folded), bars.unit)
-
-    @property
-    def together(self) -> complex:
-        """The fundamental of all frames."""
-        return complex(self.waves[0].mean())
-
-    def u(self, i: int) -> float:
-        """Standard uncertainty of the i-th harmonic of the mean frame."""
-        return self.noise * float(self.units[i])
-
-    def something_else(self) -> bool:
-        """Whether the fit leaves more than the frames' noise and a fifth of the bars: they are no bars."""
-        if self.temporal is None:
-            return False
-        limit = 4 * self.temporal**2 / self.waves.shape[1] + (0.25 * abs(self.together)) ** 2
-        return bool(self.noise**2 > limit)
-
-    def measure(self, phase: float) -> BarsMeasure | None:
-        """The record; `phase` (rad) at the region's middle is that of the fundamental, to half a turn."""
-        n = self.waves.shape[1]
-        if self.level <= 0:
-            return None
-        strong = n > 1 and abs(self.together) > _FIRM * self.u(0)
-        turn = np.exp(1j * np.angle(self.waves[0] * np.conj(self.together))) if strong else np.ones(n)
-        first, third, fifth = (
-            complex(np.mean(wave * np.conj(turn) ** h)) * np.exp(-1j * h * phase)
-            for wave, h in zip(self.waves, (1, 3, 5), strict=True)
-        )
-        # about a light bar's middle a square wave is cos a - cos 3a / 3 + cos 5a / 5
-        parts = (
-            (first.real, float(np.hypot(self.u(0), self.folded))),
-            (-third.real, self.u(1)),
-            (fifth.real, self.u(2)),
-        )
-        v = float(np.hypot(*self.f))
-        frame = self.temporal if self.temporal is not None else self.noise
-        pattern = float(np.sqrt(max(self.noise**2 - frame**2 / n, 0.0)))
-        least = max(abs(first), self.u(0))
-        return BarsMeasure(
-            True,
-            v_cy_px=v,
-            v_u=self.u(0) / least * np.sqrt(12 / self.samples) / (2 * np.pi),
-            direction_deg=float(np.degrees(np.arctan2(self.f[1], self.f[0]))),
-            harmonics=tuple((float(a) * self.unit, u * self.unit) for a, u in parts),
-            pattern_u=pattern * float(self.units[0]) * self.unit,
-            level=self.level * self.unit,
-            phase_rad=float((phase - 2 * np.pi * float(self.f @ self.middle)) % (2 * np.pi)),
-            shift_px=np.asarray(np.angle(turn / turn.mean()) / (2 * np.pi * v)),
-            shift_u_px=frame * float(self.units[0]) / (least * 2 * np.pi * v),
-            noise=self.noise * self.unit,
-            temporal_noise=None if self.temporal is None else self.temporal * self.unit,
-        )
+def _record(fit: BarsFit, phase: float) -> BarsMeasure | None:
+    """The record; `phase` (rad) at the region's middle is that of the fundamental, to half a turn."""
+    n = fit.waves.shape[1]
+    if fit.level <= 0:
+        return None
+    strong = n > 1 and abs(fit.together) > _FIRM * fit.u(0)
+    turn = np.exp(1j * np.angle(fit.waves[0] * np.conj(fit.together))) if strong else np.ones(n)
+    first, third, fifth = (
+        complex(np.mean(wave * np.conj(turn) ** h)) * np.exp(-1j * h * phase)
+        for wave, h in zip(fit.waves, (1, 3, 5), strict=True)
+    )
+    # about a light bar's middle a square wave is cos a - cos 3a / 3 + cos 5a / 5
+    parts = (
+        (first.real, float(np.hypot(fit.u(0), fit.folded))),
+        (-third.real, fit.u(1)),
+        (fifth.real, fit.u(2)),
+    )
+    v = float(np.hypot(*fit.f))
+    frame = fit.temporal if fit.temporal is not None else fit.noise
+    pattern = float(np.sqrt(max(fit.noise**2 - frame**2 / n, 0.0)))
+    least = max(abs(first), fit.u(0))
+    return BarsMeasure(
+        True,
+        v_cy_px=v,
+        v_u=fit.u(0) / least * np.sqrt(12 / fit.samples) / (2 * np.pi),
+        direction_deg=float(np.degrees(np.arctan2(fit.f[1], fit.f[0]))),
+        harmonics=tuple((float(a) * fit.unit, u * fit.unit) for a, u in parts),
+        pattern_u=pattern * float(fit.units[0]) * fit.unit,
+        level=fit.level * fit.unit,
+        phase_rad=float((phase - 2 * np.pi * float(fit.f @ fit.middle)) % (2 * np.pi)),
+        shift_px=np.asarray(np.angle(turn / turn.mean()) / (2 * np.pi * v)),
+        shift_u_px=frame * float(fit.units[0]) / (least * 2 * np.pi * v),
+        noise=fit.noise * fit.unit,
+        temporal_noise=None if fit.temporal is None else fit.temporal * fit.unit,
+    )

@@ -87,20 +87,14 @@ def find_centre(frames: Frames, cycles: int) -> Point | None:
 
     Noise alone is taken for a star in fewer than one region in 10,000.
     """
-    inner = inner_radius(cycles)
-    best, best_power = None, 0.0
+    least = inner_radius(cycles) + LEAST_RINGS * RING_PX
     for start in _symmetry_centres(frames, cycles):
-        if room(start, frames.size) < inner + LEAST_RINGS * RING_PX:
+        if room(start, frames.size) < least:
             continue
         centre = refine_centre(frames, frames.mean, np.ones_like(frames.mean), cycles, start)
-        if room(centre, frames.size) < inner + LEAST_RINGS * RING_PX:
-            continue
-        power, _ = _harmonic(frames, cycles, centre)
-        if power > best_power:
-            best, best_power = centre, power
-    if best is None or not _shows_star(frames, cycles, best):
-        return None
-    return best
+        if room(centre, frames.size) >= least and _shows_star(frames, cycles, centre):
+            return centre
+    return None
 
 
 def _shows_star(frames: Frames, cycles: int, centre: Point) -> bool:
@@ -152,9 +146,9 @@ class _Rings:
     harmonic: Complex
 
 
-def _coarse_rings(radius: Floats, turn: Complex, value: Floats, weight: Floats, edges: Floats) -> _Rings:
-    ring = np.asarray(np.digitize(radius, edges), np.intp)
-    m = len(edges) + 1
+def _coarse_rings(radius: Floats, turn: Complex, value: Floats, weight: Floats, begin: float, width: float) -> _Rings:
+    ring = ((radius - begin) / width).astype(np.intp)
+    m = int(ring.max()) + 1 if len(ring) else 1
     count = np.asarray(np.maximum(np.bincount(ring, weight, m), 1e-9))
     level = np.bincount(ring, weight * value, m) / count
     rest = weight * (value - level[ring])
@@ -163,36 +157,42 @@ def _coarse_rings(radius: Floats, turn: Complex, value: Floats, weight: Floats, 
 
 
 def refine_centre(
-    frames: Frames, value: Floats, weight: Floats, cycles: int, start: Point, outer: float = np.inf
+    frames: Frames, value: Floats, weight: Floats, cycles: int, start: Point, outer: float | None = None
 ) -> Point:
     """The centre that brings the wedges of each ring to one phase, by Gauss-Newton steps.
 
-    value, weight: (k,) of one frame or of their mean; outer: radius (pixels) beyond which there are no wedges. The
-    outer rings come first: there a phase stands for the largest shift. A start within a quarter of the period of
-    the outermost ring is near enough.
+    value, weight: (k,) of one frame or of their mean; outer: radius (pixels) beyond which there are no wedges, known
+    where `start` is a centre already. Else the outer rings come first: there a phase stands for the largest shift, and
+    a start within a quarter of the period of the outermost ring is near enough.
     """
     inner = inner_radius(cycles)
+    reach = room(start, frames.size) if outer is None else outer
+    wide = np.hypot(frames.x - start[0], frames.y - start[1]) < reach + 2
+    x, y, value, weight = frames.x[wide], frames.y[wide], value[wide], weight[wide]
     centre = np.array(start)
     for step in range(6):
-        end = min(outer, room((centre[0], centre[1]), frames.size))
-        begin = inner if step > 2 else max(inner, 0.55 * end)
+        end = min(reach, room((centre[0], centre[1]), frames.size))
+        begin = inner if step > 2 or outer is not None else max(inner, 0.55 * end)
         if end < begin + 4:
             break
-        radius, direction = polar(frames, (centre[0], centre[1]))
-        near = (radius > begin) & (radius < end)
-        turn, r, w = direction[near] ** cycles, radius[near], weight[near]
-        rings = _coarse_rings(r, turn, value[near], w, np.arange(begin, end, 2.0))
+        z = (x - centre[0]) + 1j * (y - centre[1])
+        r = np.abs(z)
+        near = (r > begin) & (r < end)
+        r, w = r[near], weight[near]
+        direction = z[near] / r
+        turn = direction**cycles
+        rings = _coarse_rings(r, turn, value[near], w, begin, 2.0)
         local = np.conj(rings.harmonic[rings.ring]) * turn
         rest = (value[near] - rings.level[rings.ring] - local.real) * w
         slope = -local.imag * cycles / r * w
-        across = np.stack([slope * direction[near].imag, -slope * direction[near].real])
+        across = np.stack([slope * direction.imag, -slope * direction.real])
         square = across @ across.T
         if np.linalg.det(square) <= 1e-6 * float(np.trace(square)) ** 2:
             break
         move = np.linalg.solve(square, across @ rest)
         move *= min(1.0, 1.0 / max(float(np.hypot(*move)), 1e-12))
         centre += move
-        if step > 2 and np.hypot(*move) < 1e-3:
+        if np.hypot(*move) < 1e-3 and begin == inner:
             break
     return float(centre[0]), float(centre[1])
 
@@ -203,7 +203,7 @@ def _harmonic(frames: Frames, cycles: int, centre: Point) -> tuple[float, float]
     radius, direction = polar(frames, centre)
     near = (radius > inner) & (radius < outer)
     turn, value = direction[near] ** cycles, frames.mean[near]
-    rings = _coarse_rings(radius[near], turn, value, np.ones_like(value), np.arange(inner, outer, RING_PX))
+    rings = _coarse_rings(radius[near], turn, value, np.ones_like(value), inner, RING_PX)
     filled = rings.count > 20
     if not filled.any():
         return 0.0, 0.0

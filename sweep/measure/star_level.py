@@ -13,6 +13,7 @@ and from the print's modulation where that is stated.
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from scipy.interpolate import BSpline
@@ -27,13 +28,16 @@ from sweep.measure.star_rim import RING_BIN_PX, RadialProfile
 SQUARE_WAVE = 4 / np.pi
 CURVE_CY_PX = np.linspace(0.0, NYQUIST_CY_PX, 101)
 _KNOTS_CY_PX = (0.0, 0.03, 0.06, 0.09, 0.12, 0.15, 0.18, 0.21, 0.24, 0.27, 0.3, 0.34, 0.38, 0.43, 0.5, 0.65, 0.82, 1.0)
+# beside the spline: surround, rim's place (px), level beyond the borders, fall-off of the light at 50 px (natural and
+# lamp fall-off over some 100 px of a frame); their sizes where the data say nothing, in parts of the mean level
 _EXTRA = 4
-_FALL_AT_50_PX = 0.003
-_RATIO_FLOOR = 0.0015
-_REACH_SHARE = 0.02
-_MOTTLE_BINS = 10.0
-_FREE_IN_RINGS = 10
-_STATED_MODULATION_U = 0.01
+_EXTRA_SIZES = (1e6, 0.3, 2.0, 0.003)
+# third derivative of the curve (px^3 / cycle^3): a disc of defocus of 3 px radius has some 1300, a sharp lens 100
+_FIRST_BEND, _LEAST_BEND, _FREE_IN_RINGS = 500.0, 75.0, 10
+# a print's mottle spreads over some ten bins of the profile; 1.4 is what the noise of a robust scatter may do
+_MOTTLE_BINS, _SCATTER_OF_NOISE, _PROFILE_FLOOR = 10.0, 1.4, 3e-4
+# of the ratio: least u, share of the blur's reach that may be misjudged, u of a stated modulation
+_RATIO_FLOOR, _REACH_SHARE, _STATED_MODULATION_U = 0.0015, 0.02, 0.01
 _CURVE_FLOOR = 0.001
 
 
@@ -80,7 +84,7 @@ def star_curves(stars: Sequence[StarMeasure | None], modulation: float = 1.0) ->
         return curves
     best = max(sound, key=lambda seen: float(seen[2].signed[0] / seen[2].level[0]))[1]
     problems = [(i, _Problem(s, rings, best.phase_rad)) for i, s, rings in sound]
-    ratio, ratio_u = _pooled_ratio([problem.solve(None) for _, problem in problems], modulation)
+    ratio, ratio_u = _pooled_ratio([problem.solve(None, steps=4) for _, problem in problems], modulation)
     for i, problem in problems:
         curves[i] = problem.curve(ratio, ratio_u)
     return curves
@@ -117,108 +121,115 @@ def _basis(v_cy_px: Floats, derivative: int = 0) -> Floats:
 
 
 class _Problem:
-    """The linear least squares of one star: rings and profile against spline, surround, rim, border and fall-off."""
+    """The linear least squares of one star: rings and profile against spline, surround, rim, border and fall-off.
+
+    All levels are parts of the star's mean level. What each step learns (the rim's place, how far the profile can be
+    trusted, how bent the curve is) is kept for the next.
+    """
 
     def __init__(self, star: StarMeasure, rings: StarRings, upright_rad: float) -> None:
-        self.rings = rings
-        # outermost rings that are reversed against those of the star seen with the most contrast
-        self.signed = rings.signed * (1.0 if np.cos(star.phase_rad - upright_rad) >= 0 else -1.0)
-        self.mid = float(np.median(rings.level))
-        self.profile = star.profile if star.rim_px is not None else None
-        self.rim = star.rim_px or 0.0
-        v = rings.v_cy_px
+        mid = float(np.median(rings.level))
+        # outermost rings may be reversed against those of the star seen with the most contrast
+        turned = 1.0 if np.cos(star.phase_rad - upright_rad) >= 0 else -1.0
+        self.signed, self.u = rings.signed * turned / mid, rings.u / mid
+        self.modulus_less_signed = (rings.amplitude - np.abs(rings.signed)) / mid
+        v = self.v = rings.v_cy_px
         # what the curved wave fronts of a star add: the next term of the operator M(|grad|) on exp(i n theta)
         self.ring_rows = SQUARE_WAVE * (_basis(v) - v[:, None] ** 3 * _basis(v, 3) / (6 * star.cycles**2))
+        self.ring_fall = self.signed * (rings.radius_px / 50) ** 2
         self.at_zero = _basis(np.zeros(1))[0]
         self.middles = (np.array(_KNOTS_CY_PX[1:]) + _KNOTS_CY_PX[:-1]) / 2
         self.bend = _basis(self.middles, 3)
+        self.bend_size = _FIRST_BEND
+        self.profile = _Profile.of(star.profile, mid) if star.profile is not None and star.rim_px is not None else None
+        self.rim = star.rim_px or 0.0
+        self.solution = np.zeros(len(self.at_zero) + _EXTRA)
 
-    def solve(self, ratio: tuple[float, float] | None) -> _Solution:
+    def solve(self, ratio: tuple[float, float] | None, steps: int) -> _Solution:
         """Iterated least squares; `ratio` (value, u) of half difference to mean level as a further datum."""
-        kernel = None if self.profile is None else _Kernel(self.profile)
-        rim, typical = self.rim, np.full(len(self.middles), 1000.0 * self.mid / 2)
-        solution = np.zeros(len(self.at_zero) + _EXTRA)
-        trust = np.zeros(0) if self.profile is None else 1 / np.hypot(self.profile.u, 3e-4 * self.mid)
-        for _ in range(5):
-            rows, right = self._ring_part()
-            block = np.zeros((0, len(solution)))
-            if kernel is not None and self.profile is not None:
-                block = kernel.rows(rim, solution[: len(self.at_zero)], self.at_zero)
-                rows.append(block * trust[:, None])
-                right.append(self.profile.value * trust)
-            prior_rows, prior_right = self._prior_part(ratio, typical)
-            rows, right = rows + prior_rows, right + prior_right
-            a, b = np.vstack(rows), np.concatenate(right)
-            covariance = np.asarray(np.linalg.pinv(a.T @ a, hermitian=True), np.float64)
-            solution = covariance @ (a.T @ b)
-            rim += float(np.clip(solution[-3], -1, 1))
-            if self.profile is not None:
-                trust = _trust(self.profile, block @ solution, self.mid)
-            bends = (self.bend @ solution[: len(self.at_zero)])[(self.middles > 0.06) & (self.middles < 0.3)]
-            size = max(1.5 * float(np.sqrt(np.mean(bends**2))), 75 * self.mid)
-            typical = np.where(
-                self.middles < self.rings.v_cy_px[0], size, size * (1 if ratio is None else _FREE_IN_RINGS)
-            )
         j = len(self.at_zero)
-        light = float(solution[j]) if self.profile is not None else self.mid + float(self.at_zero @ solution[:j])
-        return _Solution(solution[:j], light, covariance[: j + 1, : j + 1])
+        covariance = np.zeros((j + _EXTRA, j + _EXTRA))
+        for _ in range(steps):
+            parts = [self._ring_part(), self._prior_part(ratio)]
+            block = None if self.profile is None else self.profile.rows(self.rim, self.solution[:j], self.at_zero)
+            if block is not None and self.profile is not None:
+                parts.append((block * self.profile.trust[:, None], self.profile.value * self.profile.trust))
+            a, b = np.vstack([rows for rows, _ in parts]), np.concatenate([right for _, right in parts])
+            covariance = np.asarray(np.linalg.pinv(a.T @ a, hermitian=True), np.float64)
+            self.solution = covariance @ (a.T @ b)
+            if block is not None and self.profile is not None:
+                self.rim += float(np.clip(self.solution[j + 1], -1, 1))
+                self.profile.weigh(block @ self.solution)
+            bends = (self.bend @ self.solution[:j])[(self.middles > 0.06) & (self.middles < 0.3)]
+            self.bend_size = max(1.5 * float(np.sqrt(np.mean(bends**2))), _LEAST_BEND)
+        light = float(self.solution[j]) if self.profile is not None else 1 + float(self.at_zero @ self.solution[:j])
+        return _Solution(self.solution[:j], light, covariance[: j + 1, : j + 1])
 
-    def _ring_part(self) -> tuple[list[Floats], list[Floats]]:
+    def _ring_part(self) -> tuple[Floats, Floats]:
         extra = np.zeros((len(self.signed), _EXTRA))
-        extra[:, 3] = self.signed * (self.rings.radius_px / 50) ** 2
-        return [np.hstack([self.ring_rows, extra]) / self.rings.u[:, None]], [self.signed / self.rings.u]
+        extra[:, 3] = self.ring_fall
+        return np.hstack([self.ring_rows, extra]) / self.u[:, None], self.signed / self.u
 
-    def _prior_part(self, ratio: tuple[float, float] | None, typical: Floats) -> tuple[list[Floats], list[Floats]]:
+    def _prior_part(self, ratio: tuple[float, float] | None) -> tuple[Floats, Floats]:
         """Rows and right-hand sides: smoothness, size of what is hardly known, and the ratio."""
         j = len(self.at_zero)
-        smooth = np.hstack([self.bend, np.zeros((len(self.bend), _EXTRA))]) / typical[:, None]
+        free = np.where((self.middles < self.v[0]) | (ratio is None), 1, _FREE_IN_RINGS)
+        smooth = np.hstack([self.bend, np.zeros((len(self.bend), _EXTRA))]) / (self.bend_size * free)[:, None]
         weak = np.zeros((_EXTRA, j + _EXTRA))
-        sizes = (1e6 * self.mid, 0.3, 2 * self.mid, _FALL_AT_50_PX)
-        weak[range(_EXTRA), range(j, j + _EXTRA)] = 1 / np.array(sizes)
-        rows, right = [smooth, weak], [np.zeros(len(smooth) + len(weak))]
+        weak[range(_EXTRA), range(j, j + _EXTRA)] = 1 / np.array(_EXTRA_SIZES)
+        rows, right = [smooth, weak], np.zeros(len(smooth) + len(weak))
         if ratio is not None:
             # half difference = ratio x (light - half difference); without a surround the rings' level is that mean
             seen = self.profile is not None
             datum = np.zeros((1, j + _EXTRA))
             datum[0, :j], datum[0, j] = self.at_zero * (1 + ratio[0] * seen), -ratio[0] * seen
-            rows.append(datum / (ratio[1] * self.mid))
-            right.append(np.full(1, 0.0 if seen else ratio[0] / ratio[1]))
-        return rows, right
+            rows.append(datum / ratio[1])
+            right = np.append(right, 0.0 if seen else ratio[0] / ratio[1])
+        return np.vstack(rows), right
 
     def curve(self, ratio: float, ratio_u: float) -> StarCurve:
         """The transfer with the pooled ratio."""
-        solution = self.solve((ratio, ratio_u))
-        m, u, _ = solution.value(CURVE_CY_PX)
-        v = self.rings.v_cy_px
-        beyond = (self.rings.amplitude - np.abs(self.rings.signed)) / (
-            SQUARE_WAVE * float(self.at_zero @ solution.coefficients)
-        )
-        kernel = np.ones(5) / 5
-        smooth = np.convolve(np.pad(beyond, 2, "edge"), kernel, "valid")
-        value = np.where(m < 0, -1.0, 1.0) * (np.abs(m) + np.interp(CURVE_CY_PX, v, smooth, left=0.0))
-        return StarCurve(
-            Transfer(CURVE_CY_PX, value, np.hypot(u, _CURVE_FLOOR * (CURVE_CY_PX > 0))),
-            float(v[0]),
-            float(v[-1]),
-            ratio,
-            ratio_u,
-            self.profile is not None,
-        )
+        solution = self.solve((ratio, ratio_u), steps=2)
+        m, u, step = solution.value(CURVE_CY_PX)
+        beyond = np.convolve(np.pad(self.modulus_less_signed, 2, "edge"), np.ones(5) / 5, "valid")
+        more = np.interp(CURVE_CY_PX, self.v, beyond / (SQUARE_WAVE * step[0]), left=0.0)
+        value = np.where(m < 0, -1.0, 1.0) * (np.abs(m) + more)
+        transfer = Transfer(CURVE_CY_PX, value, np.hypot(u, _CURVE_FLOOR * (CURVE_CY_PX > 0)))
+        return StarCurve(transfer, float(self.v[0]), float(self.v[-1]), ratio, ratio_u, self.profile is not None)
 
 
-class _Kernel:
-    """What the spline's parts make of a disc's profile: integrals over frequency by the midpoint rule."""
+@lru_cache(maxsize=4)
+def _j0_table(reach: int) -> Floats:
+    return np.asarray(j0(np.arange(reach * 64) / 64))
 
-    def __init__(self, profile: RadialProfile) -> None:
-        self.profile = profile
-        count = int(6 * 2.2 * float(profile.radius_px.max()))
+
+def _j0(x: Floats) -> Floats:
+    """Bessel function by table, to 3e-5: there are some 100,000 values a star."""
+    table = _j0_table(64 * (int(x.max()) // 64 + 1) + 1)
+    return np.asarray(np.interp(x.reshape(-1), np.arange(len(table)) / 64, table).reshape(x.shape))
+
+
+class _Profile:
+    """The level across the rim, and what the spline's parts make of it: integrals over frequency by midpoints."""
+
+    def __init__(self, profile: RadialProfile, mid: float) -> None:
+        self.value, self.u = profile.value / mid, np.hypot(profile.u / mid, _PROFILE_FLOOR)
+        self.trust = 1 / self.u
+        self.ring, self.border = profile.ring, profile.border
+        self.fall = self.value * (profile.radius_px / 50) ** 2
+        count = int(13 * float(profile.radius_px.max()))
         self.step = 1 / count
         self.v = (np.arange(count) + 0.5) / count
         self.basis = _basis(self.v)
-        wave = j0(2 * np.pi * profile.radius_px[:, None] * self.v)
+        wave = _j0(2 * np.pi * profile.radius_px[:, None] * self.v)
         self.wave = wave * np.where(profile.ring[:, None], np.sinc(RING_BIN_PX * self.v), 1.0)
         d = np.arange(profile.border.shape[1]) + 0.5
         self.edge = np.sin(2 * np.pi * d[:, None] * self.v) / (np.pi * self.v) @ self.basis * self.step
+
+    @classmethod
+    def of(cls, profile: RadialProfile, mid: float) -> "_Profile | None":
+        """None where the rim is without a surround worth the name."""
+        return cls(profile, mid) if (~profile.ring).any() and profile.ring.any() else None
 
     def rows(self, rim: float, coefficients: Floats, at_zero: Floats) -> Floats:
         """Columns: spline, surround, rim's place, what lies beyond the region's borders, fall-off of the light."""
@@ -232,21 +243,17 @@ class _Kernel:
         if half > 0:
             moved = (2 * np.pi) ** 2 * rim * self.v * j0(x) * (self.basis @ coefficients)
             extra[:, 1] = -(self.wave @ moved) * self.step
-            tail = np.clip(0.5 - self.edge @ (coefficients / half), -0.1, 0.6)
-            extra[:, 2] = self.profile.border @ tail
-        extra[:, 3] = self.profile.value * (self.profile.radius_px / 50) ** 2
+            extra[:, 2] = self.border @ np.clip(0.5 - self.edge @ (coefficients / half), -0.1, 0.6)
+        extra[:, 3] = self.fall
         return np.hstack([-inside, extra])
 
-
-def _trust(profile: RadialProfile, fitted: Floats, mid: float) -> Floats:
-    """Weights of the profile's bins from their own scatter about the fit (an uneven print), outliers held down."""
-    rest = profile.value - fitted
-    u = np.hypot(profile.u, 3e-4 * mid)
-    for part in (profile.ring, ~profile.ring):
-        if part.any():
-            excess = max((1.4826 * float(np.median(np.abs(rest[part] / u[part])))) ** 2 - 1.4, 0.0)
-            u = np.where(part, u * np.sqrt(1 + _MOTTLE_BINS * excess), u)
-    return np.asarray(np.sqrt(np.minimum(1.0, 2.0 / np.maximum(np.abs(rest / u), 1e-9))) / u)
+    def weigh(self, fitted: Floats) -> None:
+        """Weights of the bins from their own scatter about the fit (an uneven print), outliers held down."""
+        rest, u = self.value - fitted, self.u
+        for part in (self.ring, ~self.ring):
+            excess = (1.4826 * float(np.median(np.abs(rest[part] / u[part])))) ** 2 - _SCATTER_OF_NOISE
+            u = np.where(part, u * np.sqrt(1 + _MOTTLE_BINS * max(excess, 0.0)), u)
+        self.trust = np.asarray(np.sqrt(np.minimum(1.0, 2.0 / np.maximum(np.abs(rest / u), 1e-9))) / u)
 
 
 def _pooled_ratio(solutions: Sequence[_Solution], modulation: float) -> tuple[float, float]:
