@@ -1,13 +1,9 @@
 """One image file's bytes -> its pixels as stored: nothing rescaled, turned, or blended.
 
-PNG, BMP, PGM and JPEG are decoded by OpenCV, TIFF by tifffile, which alone leaves orientation and packed samples as
-they are. Damage is looked for in the bytes first: a codec would only print a line, and a JPEG's lost rows would come
-out grey.
+PNG, BMP, PGM and JPEG are decoded by OpenCV, TIFF by tifffile (`tiff.py`). Damage is looked for in the bytes first: a
+codec would only print a line, and a JPEG's lost rows would come out grey.
 """
 
-import io
-import logging
-import math
 import os
 import re
 import struct
@@ -19,7 +15,6 @@ from contextlib import contextmanager
 
 import cv2
 import numpy as np
-import tifffile
 from numpy.typing import NDArray
 
 from sweep.errors import FrameError
@@ -27,7 +22,6 @@ from sweep.frames import Pixels
 from sweep.station import Layout
 
 MOST_STRAY_BYTES = 64  # many USB cameras pad their JPEG data by a few bytes (common practice, no source)
-MOST_EXPANSION = 1500  # deflate and LZW cannot expand by more: 1032 and some 1400 times
 _SIGNATURES = {
     b"\x89PNG\r\n\x1a\n": "PNG",
     b"\xff\xd8\xff": "JPEG",
@@ -39,14 +33,9 @@ _SIGNATURES = {
     b"II+\0": "TIFF",
     b"MM\0+": "TIFF",
 }
-_TIFF_FAULTS = (
-    tifffile.TiffFileError, ArithmeticError, AssertionError, AttributeError, ImportError, LookupError, MemoryError,
-    OSError, RuntimeError, TypeError, ValueError, struct.error, zlib.error,
-)  # fmt: skip
 
 _ONE_AT_A_TIME = threading.Lock()
 
-logging.getLogger("tifffile").addHandler(logging.NullHandler())
 cv2.utils.logging.setLogLevel(cv2.utils.logging.LOG_LEVEL_SILENT)
 
 
@@ -68,9 +57,11 @@ def decode(data: bytes, file: str) -> Pixels:
     if (kind == "PNG" and not _png_is_whole(data)) or (kind == "JPEG" and not _jpeg_is_whole(data)):
         raise FrameError(f"{file} is damaged or cut short. {_REMEDY}")
     if kind == "TIFF":
-        pixels = _decode_tiff(data, file)
+        from sweep.recording.tiff import decode_tiff  # its import would slow down every other reading
+
+        pixels = decode_tiff(data, file)
     else:
-        pixels = _decode_jpeg(data) if kind == "JPEG" else _decode_by_opencv(data)
+        pixels = _decode_jpeg(data) if kind == "JPEG" else decode_by_opencv(data)
     if pixels is None:
         raise FrameError(f"{file} is damaged or cut short. {_REMEDY}")
     if pixels.dtype not in (np.uint8, np.uint16) or pixels.ndim not in (2, 3) or not pixels.size:
@@ -104,7 +95,8 @@ def as_layout(pixels: Pixels, layout: Layout, file: str) -> Pixels:
 _REMEDY = "Copy the file again, take the frame again, or leave it out (--leave-out-bad-frames)."
 
 
-def _decode_by_opencv(data: bytes) -> NDArray[np.generic] | None:
+def decode_by_opencv(data: bytes) -> NDArray[np.generic] | None:
+    """The pixels as OpenCV finds them, None where it finds none."""
     try:
         return cv2.imdecode(np.frombuffer(data, np.uint8), cv2.IMREAD_UNCHANGED)
     except cv2.error:  # more pixels than it allows, or a header that makes no sense
@@ -142,7 +134,7 @@ def _jpeg_is_whole(data: bytes) -> bool:
 def _decode_jpeg(data: bytes) -> NDArray[np.generic] | None:
     """A JPEG file's pixels; None where the codec says that data were lost, though it makes up some in their place."""
     with _ONE_AT_A_TIME, _codec_messages() as said:
-        pixels = _decode_by_opencv(data)
+        pixels = decode_by_opencv(data)
     return None if any(map(_tells_of_damage, said)) else pixels
 
 
@@ -175,55 +167,3 @@ def _codec_messages() -> Iterator[list[str]]:
                     said.append(line.decode(errors="replace"))
                 else:
                     os.write(2, line)
-
-
-def _decode_tiff(data: bytes, file: str) -> NDArray[np.generic] | None:
-    """The one page of a TIFF file as stored, None where it is damaged. Raises FrameError for other kinds."""
-    try:
-        with tifffile.TiffFile(io.BytesIO(data)) as tiff:
-            pages = [page for each in tiff.pages if not (page := each.aspage()).is_reduced]
-            if len(pages) != 1:
-                raise FrameError(f"{file} holds {len(pages)} images: save one frame a file.")
-            page = pages[0]
-            if page.photometric not in (
-                tifffile.PHOTOMETRIC.MINISBLACK,
-                tifffile.PHOTOMETRIC.RGB,
-                tifffile.PHOTOMETRIC.CFA,
-            ):
-                name = getattr(page.photometric, "name", page.photometric)
-                raise FrameError(f"{file} is a TIFF file of the kind {name}: save grey or RGB without a palette.")
-            if not _tiff_is_whole(page, len(data)):
-                return None
-            if page.compression == tifffile.COMPRESSION.LZW or page.bitspersample in (10, 12, 14):
-                return _decode_tiff_by_opencv(data, page)
-            pixels = page.asarray()
-            if page.samplesperpixel > 1:
-                pixels = np.moveaxis(pixels, 0, -1) if page.planarconfig == tifffile.PLANARCONFIG.SEPARATE else pixels
-                pixels = pixels[..., [2, 1, 0]] if page.samplesperpixel >= 3 else pixels
-            return pixels
-    except _TIFF_FAULTS as error:
-        if "imagecodecs" in str(error):
-            raise FrameError(f"{file} is compressed in a way that is not read: save TIFF plain or deflated.") from None
-        return None
-
-
-def _tiff_is_whole(page: tifffile.TiffPage, size: int) -> bool:
-    """Whether all strips or tiles that the page's size calls for lie inside the file, and can hold its pixels."""
-    ends = [at + n for at, n in zip(page.dataoffsets, page.databytecounts, strict=True)]
-    whole = len(ends) == math.prod(page.chunked) and min(page.databytecounts, default=0) > 0 and max(ends) <= size
-    return whole and page.nbytes <= MOST_EXPANSION * size
-
-
-def _decode_tiff_by_opencv(data: bytes, page: tifffile.TiffPage) -> NDArray[np.generic] | None:
-    """LZW, and samples packed without gaps, which tifffile alone cannot take apart.
-
-    OpenCV would turn the picture by its orientation tag, so that is set to 1 first; it moves packed samples to the high
-    bits, which is undone.
-    """
-    plain = bytearray(data)
-    tag = page.tags.get("Orientation")
-    if tag is not None:
-        struct.pack_into(f"{page.parent.byteorder}H", plain, tag.valueoffset, 1)
-    pixels = _decode_by_opencv(bytes(plain))
-    unused = 16 - page.bitspersample if page.bitspersample in (10, 12, 14) else 0
-    return pixels if pixels is None or not unused else np.right_shift(pixels, unused, dtype=np.uint16)
