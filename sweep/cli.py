@@ -182,13 +182,14 @@ def _changed(station: "Station", changes: Sequence[str]) -> "Station":
         key, equals, text = change.partition("=")
         if not equals:
             raise InputError(f"--set {change}: write KEY=VALUE, as need.feature_um=140.")
-        *tables, last = key.strip().split(".")
-        place = data
-        for name in tables:
-            place = place.setdefault(name, {}) if isinstance(place, dict) else None
-        if not isinstance(place, dict):
-            raise InputError(f"--set {change}: {key} is no key of a station file.")
-        place[last] = _value(text.strip())
+        *tables, last = (int(name) if name.isdecimal() else name for name in key.strip().split("."))
+        try:
+            place = data
+            for name in tables:
+                place = place.setdefault(name, {}) if isinstance(place, dict) else place[name]
+            place[last] = _value(text.strip())
+        except (TypeError, IndexError):
+            raise InputError(f"--set {change}: there is no key {key} in a station file.") from None
     return build_station(data, "the station file with --set")
 
 
@@ -241,6 +242,8 @@ def _progress_bar() -> Iterator[Callable[[int, int], None] | None]:
 
 def _answer(result: "Result", station: "Station", out: Path | None, as_json: bool) -> int:
     """Write the files, print the answer, and return the exit status."""
+    from rich.console import Console
+
     from sweep.report import result_json, write_report
     from sweep.screens.answer import answer
 
@@ -249,8 +252,8 @@ def _answer(result: "Result", station: "Station", out: Path | None, as_json: boo
         if as_json:
             click.echo(result_json(result), nl=False)
         else:
-            answer(result, station, files)
+            Console().print(answer(result, station, files))
         sys.stdout.flush()
-    except BrokenPipeError:  # the reader has gone: no more output, and no complaint at exit
+    except (BrokenPipeError, SystemExit):  # the reader has gone; rich then ends the process, but the status counts
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     return 0 if result.recommendation.meets_need else NEED_NOT_MET

@@ -8,12 +8,13 @@ import types
 from dataclasses import replace
 from pathlib import Path
 
-import click
 import pytest
 from results import a_result, a_station
 
 import sweep.analyse
+import sweep.forecast
 import sweep.recording
+import sweep.screens.answer
 from sweep import __version__, cli
 from sweep.errors import CameraError, FrameError, Interrupted
 from sweep.result import Result
@@ -46,13 +47,13 @@ def asked(monkeypatch):
 
     def answer(result, station, files):
         seen.answered, seen.files = result, files
-        click.echo("the answer")
+        return "the answer"
 
     monkeypatch.setattr(sweep.recording, "load_station", lambda path: station)
     monkeypatch.setattr(sweep.recording, "open_source", lambda path, **options: options)
     monkeypatch.setattr(sweep.analyse, "analyse", analyse)
-    monkeypatch.setattr(sweep.analyse, "forecast", lambda station: analyse(None, station), raising=False)
-    monkeypatch.setitem(sys.modules, "sweep.screens.answer", types.SimpleNamespace(answer=answer))
+    monkeypatch.setattr(sweep.forecast, "forecast", lambda station: analyse(None, station))
+    monkeypatch.setattr(sweep.screens.answer, "answer", answer)
     return seen
 
 
@@ -110,6 +111,8 @@ def test_debug_shows_where_a_fault_arose(folder, asked, capsys):
         (["replay", "{source}", "--set", "need.feature_um"], "KEY=VALUE"),
         (["replay", "{source}", "--set", "need.feature_um.x=1"], "need.feature_um.x"),
         (["replay", "{source}", "--set", "need.featur_um=1"], "feature_um"),
+        (["replay", "{source}", "--set", "targets.9.depth_mm=1"], "targets.9.depth_mm"),
+        (["replay", "{source}", "--set", "targets.first=1"], "targets.first"),
         (["replay", "{source}", "--set", "need.contrast=much"], "need.contrast"),
         (["record", "{source}/station.toml"], "--into"),
         (["record", "{source}/station.toml", "--into", "{other}/new"], "names no camera"),
@@ -159,11 +162,13 @@ def test_progress_bar_on_a_terminal(folder, asked, monkeypatch):
 
 def test_set_changes_keys_of_the_station(folder, asked):
     changes = ["need.feature_um=140", "need.depth_range_mm=[0, 12]", "station.name=lane 3", "need.flicker_hz = 100"]
+    changes.append("targets.1.depth_mm=3.5")
     words = [word for change in changes for word in ("--set", change)]
     assert cli.main(["replay", str(folder), *words]) == 0
     station: Station = asked.station
     assert (station.need.feature_um, station.need.depth_range_mm) == (140.0, (0.0, 12.0))
     assert (station.station.name, station.need.flicker_hz) == ("lane 3", 100.0)
+    assert station.targets[1].depth_mm == 3.5
     assert station.need.contrast == a_station().need.contrast
 
 

@@ -17,7 +17,7 @@ LEVELS = (
     ("light", "figures", "outlook"),
     ("notices", "verdict"),
     ("analyse", "compare", "capture"),
-    ("report", "screens", "demo", "record"),
+    ("forecast", "report", "screens", "demo", "record"),
     ("cli",),
     ("__main__",),
 )
@@ -26,7 +26,7 @@ LEVEL_OF = {name: level for level, row in enumerate(LEVELS) for name in row}
 # No file, device, screen or clock in these.
 PURE = {
     "errors", "station", "frames", "result", "optics", "lens", "measure", "ring", "readings", "fit", "choose",
-    "light", "figures", "outlook", "notices", "verdict", "analyse", "compare",
+    "light", "figures", "outlook", "notices", "verdict", "analyse", "compare", "forecast",
 }  # fmt: skip
 IMPURE_IMPORTS = {
     "asyncio", "datetime", "glob", "io", "logging", "multiprocessing", "os", "pathlib", "random", "shutil", "socket",
