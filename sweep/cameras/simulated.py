@@ -24,6 +24,7 @@ from sweep.result import Note
 from sweep.station import Patch, Station, Target
 
 Floats = NDArray[np.float64]
+Plane = NDArray[np.float32]
 
 BACKGROUND = 0.35  # reflectance of what lies around the cards
 SOFT_RIM_PX = 4  # over which a card's own outline fades into the background
@@ -177,7 +178,7 @@ class Scene:
         self.station = station
         self.sim = sim
         width, height = sim.size_px
-        self._pattern = 1 + sim.pattern * rng.standard_normal((height, width))
+        self._pattern = 1 + np.float32(sim.pattern) * rng.standard_normal((height, width), dtype=np.float32)
         self._cards = [
             (
                 target.depth_mm,
@@ -188,14 +189,14 @@ class Scene:
             for patch, print_ in zip(target.patches, prints, strict=True)
         ]
         self._seen: dict[float, list[tuple[Patch, Picture]]] = {}
-        self._still: dict[float, Floats] = {}
+        self._still: dict[float, Plane] = {}
 
-    def picture(self, f_number: float, dx: float = 0.0, dy: float = 0.0) -> Floats:
+    def picture(self, f_number: float, dx: float = 0.0, dy: float = 0.0) -> Plane:
         """Light on the sensor over that from a white print, (rows, columns); the frame shifted by (dx, dy) px."""
         if dx == dy == 0 and f_number in self._still:
             return self._still[f_number]
         width, height = self.sim.size_px
-        frame = np.full((height, width), BACKGROUND)
+        frame = np.full((height, width), BACKGROUND, np.float32)
         for patch, draw in self._drawn(f_number):
             _lay(frame, patch, draw(dx, dy))
         if dx == dy == 0:
@@ -213,33 +214,35 @@ class Scene:
     ) -> Pixels:
         """One frame, as the camera would hand it over; `lamp` = 0 is a capped lens."""
         sim, camera = self.sim, self.station.camera
-        light = self.picture(f_number, *shift_px) if lamp > 0 else np.zeros(self._pattern.shape)
-        electrons_full = sim.light_e_ms * exposure_ms / f_number**2 * lamp
+        light = self.picture(f_number, *shift_px) if lamp > 0 else np.zeros(self._pattern.shape, np.float32)
+        per_share = self._pattern * np.float32(sim.light_e_ms * exposure_ms / f_number**2 * lamp)
         full_dn = full_scale_dn(self.station)
 
-        def read_out(share: Floats | float, pattern: Floats) -> Floats:
-            electrons = rng.poisson(light * share * electrons_full * pattern).astype(np.float64)
+        def read_out(share: Plane | np.float32) -> Plane:
+            # Photon counts of tens and more are normal for all that is measured here; drawing them so is quick.
+            mean = light * share * per_share
+            electrons = mean + np.sqrt(mean) * rng.standard_normal(mean.shape, dtype=np.float32)
             if sim.full_well_e is not None:
-                electrons = np.minimum(electrons, sim.full_well_e)
-            electrons += sim.read_noise_e * rng.standard_normal(electrons.shape)
+                electrons = np.minimum(electrons, np.float32(sim.full_well_e))
+            electrons += np.float32(sim.read_noise_e) * rng.standard_normal(mean.shape, dtype=np.float32)
             if sim.sharpening:
                 electrons += sim.sharpening * (electrons - gaussian_filter(electrons, SHARPEN_SIGMA_PX))
-            dn = electrons / sim.electrons_per_dn * 10 ** (gain_db / 20)
-            dn = _answer(dn, full_dn - camera.black_level_dn, camera.response) + camera.black_level_dn
-            return np.clip(np.round(dn), 0, full_dn)
+            linear = np.asarray(electrons * (10 ** (gain_db / 20) / sim.electrons_per_dn), dtype=np.float32)
+            dn = _answer(linear, full_dn - camera.black_level_dn, camera.response) + np.float32(camera.black_level_dn)
+            return np.clip(np.rint(dn), 0, full_dn)
 
         if camera.layout == "bgr":
-            frame = np.stack([read_out(share, self._pattern) for share in sim.colour_bgr], axis=2)
+            frame = np.stack([read_out(np.float32(share)) for share in sim.colour_bgr], axis=2)
         elif camera.layout == "mono":
-            frame = read_out(1.0, self._pattern)
+            frame = read_out(np.float32(1))
         else:
-            frame = read_out(self._mosaic(camera.layout), self._pattern)
+            frame = read_out(self._mosaic(camera.layout))
         return frame.astype(np.uint8) if full_dn < 256 else frame.astype(np.uint16)
 
-    def _mosaic(self, layout: str) -> Floats:
+    def _mosaic(self, layout: str) -> Plane:
         """The colour filter's share of the light at each pixel."""
         share = dict(zip("bgr", self.sim.colour_bgr, strict=True))
-        filters = np.ones(self._pattern.shape)
+        filters = np.ones(self._pattern.shape, np.float32)
         for place, colour in enumerate(layout):
             filters[place // 2 :: 2, place % 2 :: 2] = share[colour]
         return filters
@@ -344,18 +347,20 @@ def round_exposure(exposure_ms: float, step_ms: float) -> float:
     return round(max(1, round(exposure_ms / step_ms)) * step_ms, 6)
 
 
-def _answer(dn: Floats, span_dn: float, response: str | float) -> Floats:
+def _answer(dn: Plane, span_dn: float, response: str | float) -> Plane:
     """The camera's response curve, from linear light to codes above black."""
     if response == "linear":
         return dn
     part = np.clip(dn / span_dn, 0, None)
     if response == "srgb":
         # IEC 61966-2-1:1999
-        return np.asarray(span_dn * np.where(part <= 0.0031308, 12.92 * part, 1.055 * part ** (1 / 2.4) - 0.055))
-    return np.asarray(span_dn * part ** (1 / float(response)))
+        return np.asarray(
+            span_dn * np.where(part <= 0.0031308, 12.92 * part, 1.055 * part ** (1 / 2.4) - 0.055), np.float32
+        )
+    return np.asarray(span_dn * part ** (1 / float(response)), dtype=np.float32)
 
 
-def _lay(frame: Floats, patch: Patch, card: Floats) -> None:
+def _lay(frame: Plane, patch: Patch, card: Floats) -> None:
     """Lay a card's picture into the frame, its outline fading into what is around."""
     height, width = card.shape
     ramp = [

@@ -20,7 +20,7 @@ from sweep.station import Station
 
 SEED = 20
 READ_OUT_MS = 1.0
-MOVING_STEPS_A_STOP = 6  # pictures are drawn for so many ring positions a stop while it turns
+MOVING_STEPS_A_STOP = 4  # pictures are drawn for so many ring positions a stop while it turns
 FULL_WELL_E = 10_000.0
 WIDE_OPEN_MS = 0.28  # exposure that fills the wells with the light tone at the widest stop
 

@@ -11,6 +11,7 @@ autocorrelation of the generalised pupil). Geometry of thick lenses by the chief
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -43,9 +44,9 @@ class Wavefront:
 class SimulatedLens:
     """A lens on a sensor that stays put; aberrations are given at the widest stop, in waves of `wavelength_nm`.
 
-    `magnification` holds at depth 0; `focus_offset_mm` is the depth that the sensor is focused on. Positive `w040_waves`
-    is an undercorrected lens: rays from its rim come to a focus nearer to it, as those of an object farther away do.
-    `blades` = 0 is a round iris; the barrel keeps the widest stop round in any case.
+    `magnification` holds at depth 0; `focus_offset_mm` is the depth that the sensor is focused on. Positive
+    `w040_waves` is an undercorrected lens: rays from its rim come to a focus nearer to it, as those of an object
+    farther away do. `blades` = 0 is a round iris; the barrel keeps the widest stop round in any case.
     """
 
     focal_length_mm: float
@@ -127,20 +128,30 @@ def pupil_transfer(
     fraction_of_cutoff: frequency x wavelength x working f-number; beyond 1 the transfer of a round pupil is 0.
     Returns complex values, 1 at zero frequency. Holds to 1e-3 for path differences up to some 40 waves.
     """
-    samples = int(min(2048, 256 + 48 * front.span_um() / wavelength_um))
+    same_all_round = blades == 0 and front.coma_um == 0
+    table, end = _correlation(front, wavelength_um, 0.0 if same_all_round else direction_deg, blades)
+    inside = fraction_of_cutoff < end
+    return np.asarray(np.where(inside, table(np.minimum(fraction_of_cutoff, end)), 0), dtype=np.complex128)
+
+
+@lru_cache(maxsize=64)
+def _correlation(
+    front: Wavefront, wavelength_um: float, direction_deg: float, blades: int
+) -> tuple[CubicSpline[np.complex128], float]:
+    """The pupil's normalised autocorrelation along a direction, over the fraction of cut-off, and where it ends."""
+    samples = 4 * int(min(512, 64 + 12 * front.span_um() / wavelength_um))
     reach = 1.0 if blades == 0 else math.sqrt(2 * math.pi / (blades * math.sin(2 * math.pi / blades)))
     step = 2 * reach / samples
     along = np.linspace(-1, 1, samples) * (samples - 1) * step / 2
     rows = np.linspace(-1, 1, samples // 2) * (samples // 2 - 1) * step
+    if blades == 0 and front.coma_um == 0:
+        rows = rows[samples // 4 :]  # the pupil is the same on both sides of the direction
     pupil = _pupil(front, wavelength_um, along[None, :], rows[:, None], step, direction_deg, blades)
-    length = next_fast_len(2 * samples)
-    spread = (np.abs(fft(pupil, length, axis=1)) ** 2).sum(axis=0)
+    spread = (np.abs(fft(pupil, next_fast_len(2 * samples), axis=1)) ** 2).sum(axis=0)
     correlation = np.conj(ifft(spread)[:samples])
     # At no shift the softened rim meets itself and would count squared; the area is what it stands for.
     correlation[0] = np.abs(pupil).sum()
-    table = CubicSpline(np.arange(samples) * step / 2, correlation / correlation[0])
-    wanted = np.minimum(fraction_of_cutoff, reach * (1 - 1 / samples))
-    return np.asarray(np.where(fraction_of_cutoff < reach * (1 - 1 / samples), table(wanted), 0), dtype=np.complex128)
+    return CubicSpline(np.arange(samples) * step / 2, correlation / correlation[0]), reach * (1 - 1 / samples)
 
 
 def _pupil(

@@ -25,7 +25,7 @@ SETTLED_SHARE = 0.03
 FIRST_TIMEOUT_S = 10.0
 GRAB_TIMEOUT_S = 2.0
 LOST_LIMIT_S = 120.0
-SCORES_EVERY_S = 0.5
+SCORES_EVERY_S = 0.25
 
 
 class Ended(Exception):
@@ -57,7 +57,8 @@ class Live:
         self._station = station
         self._fixed_ms = fixed_ms
         self._paused = False
-        self._scores: tuple[Score, ...] = ()
+        self._scores = [Score(target.name, None) for target in station.targets]
+        self._next_score = 0
         self._scored_s = -math.inf
         self._last_s = -math.inf
         self._period_s = 0.05
@@ -75,7 +76,9 @@ class Live:
             if not light.clipped and grab.arrived_s > self._fresh_s():
                 view = self.ring.see(grab.arrived_s, light.mean / (self.exposure_ms * 10 ** (self.gain_db / 20)))
             if scored and grab.arrived_s - self._scored_s > SCORES_EVERY_S:
-                self._scores, self._scored_s = self.meter.scores(grab.pixels), grab.arrived_s
+                # One target at a time, so that no frame waits for all of them.
+                self._scores[self._next_score] = self.meter.score(self._next_score, grab.pixels)
+                self._next_score, self._scored_s = (self._next_score + 1) % len(self._scores), grab.arrived_s
             seen = Seen(
                 grab.pixels,
                 view,
@@ -85,7 +88,7 @@ class Live:
                 self.exposure_ms,
                 self.gain_db,
                 self._paused,
-                self._scores,
+                tuple(self._scores),
             )
             action = _obeyed((yield seen))
             if action is Action.PAUSE or (self._paused and action is Action.TAKE):

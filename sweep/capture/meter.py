@@ -48,11 +48,8 @@ class Meter:
             clipped.append(float(np.mean(codes >= curve.size - 1)))
         return Light(max(tones), float(np.mean(means)), max(clipped) > CLIPPED_SHARE)
 
-    def scores(self, pixels: Pixels) -> tuple[Score, ...]:
-        """Contrast at the feature of each target's first edge, read as in the final analysis."""
-        return tuple(self._score(place, pixels) for place in range(len(self._station.targets)))
-
-    def _score(self, place: int, pixels: Pixels) -> Score:
+    def score(self, place: int, pixels: Pixels) -> Score:
+        """Contrast at the feature of one target's first edge (by its place in the list), read as in the analysis."""
         target, camera = self._station.targets[place], self._station.camera
         edge = next((patch for patch in target.patches if patch.kind == "edge"), None)
         if edge is None:
