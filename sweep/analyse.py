@@ -69,7 +69,7 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
     """The lens fit, or None where there is too little to fit."""
     edges: list[EdgeData] = []
     amplitudes: list[AmplitudeData] = []
-    prints = _columns(sweep)
+    prints, common = _columns(sweep), _print_contrast(sweep)
     for sighting in _sharp(sweep):
         stop = sweep.stops.index(sighting.stop)
         if sighting.edge is not None and sighting.edge.profile is not None and sighting.edge.transfer is not None:
@@ -81,9 +81,9 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
             view = View(stop, sighting.site.target, edge.curve.direction_deg)
             edges.append(EdgeData(view, d, width, value, u, gradient, _ratio(sweep, sighting), RATIO_U, edge.transfer))
         elif sighting.star is not None and sighting.star_curve is not None:
-            amplitudes.append(_star_data(sighting, stop, prints[sighting.site.target, sighting.site.patch]))
+            amplitudes.append(_star_data(sighting, stop, prints[sighting.site.target, sighting.site.patch], common))
         elif sighting.bars is not None:
-            amplitudes.append(_bars_data(sighting, stop, prints[sighting.site.target, sighting.site.patch]))
+            amplitudes.append(_bars_data(sighting, stop, prints[sighting.site.target, sighting.site.patch], common))
     if not edges and not amplitudes:
         return None
     known = np.isfinite(light.f_number)
@@ -93,51 +93,51 @@ def _fit(sweep: Sweep, light: Light, station: Station) -> LensFit | None:
     return fit_lens(Problem.of(Bench.of(station), depths, StopLight(f_number, ln_u), edges, amplitudes))
 
 
-USUAL_PRINT = 0.9
-USUAL_PRINT_LN_U = 0.08
-"""Modulation of a printed black on white of which nothing is stated, and ln u (common practice, no source)."""
+USUAL_PRINT = (0.85, 0.15)
+"""Modulation of a printed black on white of which nothing is known, and its u (common practice, no source)."""
+PRINT_LN_U = 0.02
+"""Patches of one station are printed alike to this (common practice, no source)."""
 
 
-def _star_data(sighting: Sighting, stop: int, scale: int) -> AmplitudeData:
+def _print_contrast(sweep: Sweep) -> tuple[float, float]:
+    """Light-dark half difference over mean level of the station's prints, and u: from all stars and bars that tell it."""
+    told = {}
+    for s in sweep.sightings:
+        if s.star_curve is not None and s.star_curve.surround:
+            told[id(s.site)] = (s.star_curve.ratio, s.star_curve.ratio_u)
+        elif s.bars_contrast is not None:
+            told[id(s.site)] = (s.bars_contrast.ratio, s.bars_contrast.ratio_u)
+    values = [USUAL_PRINT, *((ratio, float(np.hypot(u, PRINT_LN_U * ratio))) for ratio, u in told.values())]
+    weights = np.array([1.0 / u**2 for _, u in values])
+    return float(np.average([v for v, _ in values], weights=weights)), float(1.0 / np.sqrt(weights.sum()))
+
+
+def _star_data(sighting: Sighting, stop: int, scale: int, common: tuple[float, float]) -> AmplitudeData:
     """A star's rings, as transfer by its own level at zero frequency; the error of that level is the scale's."""
-    assert sighting.star is not None
-    assert sighting.star.rings is not None
-    assert sighting.star_curve is not None
+    assert sighting.star is not None and sighting.star.rings is not None and sighting.star_curve is not None
     rings, curve = sighting.star.rings, sighting.star_curve
-    unit = SQUARE_WAVE * curve.ratio * float(np.median(rings.level))
+    ratio, ratio_u = (curve.ratio, curve.ratio_u) if curve.surround else common
+    unit = SQUARE_WAVE * ratio * float(np.median(rings.level))
     order = np.argsort(rings.v_cy_px)
-    ln_u = curve.ratio_u / curve.ratio if curve.surround else USUAL_PRINT_LN_U
-    return AmplitudeData(
-        View(stop, sighting.site.target, None),
-        rings.v_cy_px[order],
-        rings.signed[order] / unit,
-        rings.u[order] / unit,
-        scale,
-        0.0,
-        max(ln_u, 1e-3),
-    )
+    view = View(stop, sighting.site.target, None)
+    value, u = rings.signed[order] / unit, rings.u[order] / unit
+    return AmplitudeData(view, rings.v_cy_px[order], value, u, scale, 0.0, max(ratio_u / ratio, 2e-3))
 
 
-def _bars_data(sighting: Sighting, stop: int, scale: int) -> AmplitudeData:
-    """A set of bars, as transfer for the print's contrast that the bars tell by themselves, or for a usual one."""
-    bars, told, stated = sighting.bars, sighting.bars_contrast, sighting.site.spec.modulation
+def _bars_data(sighting: Sighting, stop: int, scale: int, common: tuple[float, float]) -> AmplitudeData:
+    """A set of bars, as transfer for the station's common print contrast, or for the print's own where it is stated."""
+    bars, stated = sighting.bars, sighting.site.spec.modulation
     assert bars is not None
-    value, u = bars.relative
-    unit, ln_u = SQUARE_WAVE * USUAL_PRINT, USUAL_PRINT_LN_U
-    if told is not None:
-        unit, ln_u = SQUARE_WAVE * told.ratio, told.ratio_u / told.ratio
-        value = float(np.copysign(value, told.contrast))
-    elif stated != 1.0:
-        unit, ln_u = SQUARE_WAVE * stated, 0.02
-    return AmplitudeData(
-        View(stop, sighting.site.target, bars.direction_deg),
-        np.array([bars.v_cy_px]),
-        np.array([value / unit]),
-        np.array([u / unit]),
-        scale,
-        0.0,
-        max(ln_u, 1e-3),
-    )
+    ratio, ratio_u = common if stated == 1.0 else (stated, PRINT_LN_U * stated)
+    value, u = (np.array([c / (SQUARE_WAVE * ratio)]) for c in bars.relative)
+    sign = -1.0 if sighting.bars_reversed else 1.0
+    view = View(stop, sighting.site.target, bars.direction_deg)
+    u = np.hypot(u, BARS_FLOOR * value)
+    ln_u = float(np.hypot(ratio_u / ratio, PRINT_LN_U))
+    return AmplitudeData(view, np.array([bars.v_cy_px]), sign * value, u, scale, 0.0, ln_u)
+
+
+BARS_FLOOR = 0.003
 
 
 def _ratio(sweep: Sweep, sighting: Sighting) -> float:
@@ -287,7 +287,8 @@ def _tone(sweep: Sweep, sighting: Sighting, fit: LensFit | None) -> float | None
     if sighting.star is not None and sighting.star.rings is not None and sighting.star_curve is not None:
         return float(np.median(sighting.star.rings.level)) * (1.0 + sighting.star_curve.ratio)
     if sighting.bars is not None and sighting.bars.ok:
-        contrast = sighting.bars_contrast.ratio if sighting.bars_contrast is not None else USUAL_PRINT
+        stated = sighting.site.spec.modulation
+        contrast = _print_contrast(sweep)[0] if stated == 1.0 else stated
         if fit is not None:
             scale = f"scale {_columns(sweep)[sighting.site.target, sighting.site.patch]}"
             contrast *= float(np.exp(fit.value(scale)[0])) if scale in fit.names else 1.0

@@ -414,7 +414,7 @@ def fit_lens(problem: Problem) -> LensFit:
     return replace(best, rivals=rivals)
 
 
-RIVAL_CHI2 = 60.0
+RIVAL_CHI2 = 25.0
 """A rough solution this much worse (in units of the best one's reduced chi-square) is not looked at again."""
 
 
@@ -447,8 +447,8 @@ def minimise(
     return np.asarray(found.x * scale)
 
 
-MOST_STEPS = 200
-ROUGH, FINE = 1e-3, 1e-7
+MOST_STEPS = 60
+ROUGH, FINE = 1e-3, 1e-6
 
 
 def _typical(problem: Problem) -> Floats:
@@ -477,7 +477,8 @@ def _finish(residuals: _Residuals, start: Floats) -> tuple[LensFit, float]:
             break
         residuals.widen = _widening(misfit, chi2)
         residuals.forget()
-        theta = minimise(residuals, residuals.jacobian, theta, _typical(problem), FINE)
+        last = turn > 0 or chi2 < 2.0
+        theta = minimise(residuals, residuals.jacobian, theta, _typical(problem), FINE if last else ROUGH)
     r, jacobian, blocks = residuals.evaluate(theta)
     data, prior = jacobian[:rows], jacobian[rows:]
     covariance = np.linalg.inv(data.T @ data + prior.T @ prior)
@@ -497,7 +498,7 @@ def _finish(residuals: _Residuals, start: Floats) -> tuple[LensFit, float]:
     return fitted, float(np.sum(r**2))
 
 
-TURNS = 4
+TURNS = 3
 
 
 def _misfit(r: Floats, blocks: Sequence[slice], widen: Floats, fitted: int) -> tuple[Floats, float]:

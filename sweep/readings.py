@@ -75,6 +75,7 @@ class Sighting:
     star_curve: StarCurve | None = None
     bars: BarsMeasure | None = None
     bars_contrast: BarsContrast | None = None
+    bars_reversed: bool = False
     noise: tuple[NoisePoint, ...] = ()
 
     @property
@@ -406,8 +407,12 @@ def _with_bars_contrasts(sightings: list[Sighting]) -> list[Sighting]:
     out = list(sightings)
     for site in {id(s.site): s.site for s in sightings if s.kind == "bars"}.values():
         places = [i for i, s in enumerate(out) if s.site is site]
+        seen = [b for i in places if (b := out[i].bars) is not None and b.ok]
+        upright = max(seen, key=lambda b: b.relative[0]).phase_rad if seen else 0.0
         for i, told in zip(places, bars_contrasts([out[i].bars for i in places], site.spec.modulation), strict=True):
-            out[i] = replace(out[i], bars_contrast=told)
+            bars = out[i].bars
+            turned = bars is not None and np.cos(bars.phase_rad - upright) < 0
+            out[i] = replace(out[i], bars_contrast=told, bars_reversed=bool(turned))
     return out
 
 
