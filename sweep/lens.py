@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from sweep.measure.linear import Floats
-from sweep.optics import otf
+from sweep.optics import cutoff_cy_mm, defocus_waves, otf, working_f_number
 from sweep.station import Station
 
 SPECTRUM_NODES = 5
@@ -59,30 +59,28 @@ class Bench:
     @property
     def working(self) -> float:
         """Working f-number over f-number, 1 + m / P."""
-        return 1.0 + self.magnification / self.pupil_magnification
+        return float(working_f_number(1.0, self.magnification, self.pupil_magnification))
 
     def of_one_wavelength(self) -> "Bench":
         """The same bench in light of the reference wavelength alone."""
         return replace(self, wavelengths_nm=np.array([self.wavelength_nm]), weights=np.array([1.0]), spread=np.zeros(1))
 
     def cutoff_cy_px(self, f_number: float | Floats) -> Floats:
-        """Diffraction cutoff of the longest wavelength, cycles per pixel."""
+        """Diffraction cutoff at the shortest wavelength, cycles per pixel."""
         shortest = float(self.wavelengths_nm.min())
-        return np.asarray(self.pixel_pitch_um * 1e3 / (shortest * f_number * self.working))
+        return np.asarray(cutoff_cy_mm(f_number * self.working, shortest) * self.pixel_pitch_um * 1e-3)
 
-    def image_vergence(self, depth_mm: Floats | float) -> Floats:
-        """1 / z_i (1/mm): z_i the distance from the exit pupil to the image of an object at `depth_mm`."""
-        f, m = self.focal_length_mm, self.magnification
-        object_distance = f * (1.0 + 1.0 / m) + np.asarray(depth_mm, dtype=float)
-        image = f * object_distance / (object_distance - f)
-        exit_pupil_to_sensor = f * (m + self.pupil_magnification)
-        return np.asarray(1.0 / (exit_pupil_to_sensor + image - f * (1.0 + m)))
-
-    def w020_waves(self, f_number: Floats, depth_mm: Floats, focus_mm: Floats | float) -> Floats:
+    def w020_waves(self, f_number: Floats, depth_mm: Floats | float, focus_mm: Floats | float) -> Floats:
         """Defocus at the pupil's edge, waves of `wavelength_nm`; negative for an object beyond the focus."""
-        radius_mm = self.focal_length_mm * self.pupil_magnification / (2.0 * f_number)
-        path_mm = 0.5 * radius_mm**2 * (self.image_vergence(focus_mm) - self.image_vergence(depth_mm))
-        return np.asarray(path_mm * 1e6 / self.wavelength_nm)
+        return defocus_waves(
+            depth_mm,
+            f_number,
+            best_focus_mm=focus_mm,
+            focal_length_mm=self.focal_length_mm,
+            magnification=self.magnification,
+            pupil_magnification=self.pupil_magnification,
+            wavelength_nm=self.wavelength_nm,
+        )
 
 
 _FWHM_PER_RMS = 2.3548200450309493
