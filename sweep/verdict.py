@@ -48,7 +48,8 @@ def setting(exposure_ms: float | None, gain_db: float | None) -> str:
     """Exposure and gain: `3.9 ms, 0 dB`."""
     if exposure_ms is None:
         return "exposure unknown"
-    return f"{number(exposure_ms)} ms, {gain_db or 0.0:.1f} dB".replace(" 0.0 dB", " 0 dB").replace("-0 dB", "0 dB")
+    gain = f"{gain_db or 0.0:.1f}".removeprefix("-")
+    return f"{number(exposure_ms)} ms, {'0' if gain == '0.0' else gain} dB"
 
 
 def with_u(value: float | None, u: float | None, digits: int = 3) -> str:

@@ -221,7 +221,7 @@ def _readings(result: Result, station: Station) -> dict[str, Any]:
     return {
         "head": head[:width],
         "left": [1, 3, 8],
-        "wide": [8] if width == len(head) else [1],
+        "wide": [8] if width == len(head) else [],
         "rows": [{"cells": row[:width], "bold": False} for row in rows],
         "note": f"± is twice the standard uncertainty. Contrast: of a {number(station.need.feature_um)} um feature, by "
         "the pixels alone; with model: the best estimate from all readings together. Half-modulation frequency: where "
