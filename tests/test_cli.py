@@ -9,6 +9,7 @@ from dataclasses import replace
 from pathlib import Path
 
 import pytest
+from folders import HEADER, STATION_TEXT, a_folder, noise, write
 from results import a_result, a_station
 
 import sweep.analyse
@@ -129,6 +130,82 @@ def test_bad_usage_is_told_in_one_message_that_names_it(folder, asked, words, na
     assert named in printed.err
     assert printed.err.count("\n") <= 4
     assert asked.answered is None
+    assert sorted(tmp_path.rglob("*")) == before
+
+
+def test_frames_without_any_sound_reading_end_in_an_answer(tmp_path, capsys):
+    folder = a_folder(tmp_path / "sweep")
+    (folder / "station.toml").write_text(STATION_TEXT, encoding="utf-8")
+    assert cli.main(["replay", str(folder), "--json"]) == 1
+    assert json.loads(capsys.readouterr().out)["recommendation"]["stop"] is None
+
+
+def station_text(old: str, new: str):
+    def change(folder: Path) -> None:
+        assert old in STATION_TEXT
+        (folder / "station.toml").write_text(STATION_TEXT.replace(old, new), encoding="utf-8")
+
+    return change
+
+
+def table(*rows: str, header: str = HEADER):
+    def change(folder: Path) -> None:
+        (folder / "shots.csv").write_text("\n".join([header, *rows]) + "\n", encoding="utf-8")
+
+    return change
+
+
+def file(name: str, data: bytes):
+    def change(folder: Path) -> None:
+        (folder / name).write_bytes(data)
+
+    return change
+
+
+def truncated(folder: Path) -> None:
+    data = (folder / "1.png").read_bytes()
+    (folder / "1.png").write_bytes(data[: len(data) // 2])
+
+
+@pytest.mark.parametrize(
+    ("change", "named"),
+    [
+        (lambda folder: (folder / "station.toml").unlink(), "station.toml"),
+        (station_text("[need]", "[need"), "station.toml"),
+        (station_text("feature_um", "feature_mu"), "feature_um"),
+        (station_text("focal_length_mm = 16", "focal_length_mm = -16"), "lens.focal_length_mm"),
+        (station_text("contrast = 0.2", "contrast = nan"), "need.contrast"),
+        (station_text("level = 0.7", 'level = "much"'), "need.level"),
+        (station_text("region = [4, 4, 30, 30]", "region = [4, 4, 300, 30]"), "targets[0].patches[0].region"),
+        (table("0.png,2,1,0,target", "1.png,5.6,1,0,target"), "5.6"),
+        (table("0.png,2,0,target", "1.png,2.8,0,target", header="file,stop,gain_db,role"), "exposure_ms"),
+        (table("0.png,2,1,0,target", "1.png,2.8,one,0,target"), "one"),
+        (table("0.png,2,1,0,target", "1.png,2.8,nan,0,target"), "nan"),
+        (table("0.png,2,1,0,target", "1.png,2.8,-1,0,target"), "-1"),
+        (table("0.png,2,1,0,target", "../1.png,2.8,1,0,target"), "../1.png"),
+        (table("0.png,2,1,0,target", "/etc/hostname,2.8,1,0,target"), "/etc/hostname"),
+        (table("0.png,,1,0,dark", "1.png,,1,0,dark"), "target"),
+        (table("0.png,2,1,0,target", "1.png,2,1,0,target"), "two"),
+        (file("shots.csv", b""), "shots.csv"),
+        (file("shots.csv", bytes(range(256))), "shots.csv"),
+        (lambda folder: (folder / "shots.csv").unlink(), "shots.csv"),
+        (lambda folder: (folder / "1.png").unlink(), "1.png"),
+        (truncated, "1.png"),
+        (file("1.png", b"no image"), "1.png"),
+        (lambda folder: write(folder / "1.png", noise(1, shape=(48, 60))), "1.png"),
+    ],
+)
+def test_bad_input_is_told_in_one_message_and_leaves_nothing_behind(tmp_path, change, named, capsys):
+    folder = a_folder(tmp_path / "sweep")
+    (folder / "station.toml").write_text(STATION_TEXT, encoding="utf-8")
+    change(folder)
+    before = sorted(tmp_path.rglob("*"))
+    assert cli.main(["replay", str(folder), "--out", str(tmp_path / "answer")]) == 2
+    printed = capsys.readouterr()
+    assert printed.out == ""
+    assert named in printed.err
+    assert 1 <= printed.err.count("\n") <= 4
+    assert "Traceback" not in printed.err
     assert sorted(tmp_path.rglob("*")) == before
 
 
