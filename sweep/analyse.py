@@ -100,7 +100,7 @@ PRINT_LN_U = 0.02
 
 
 def _print_contrast(sweep: Sweep) -> tuple[float, float]:
-    """Light-dark half difference over mean level of the station's prints, and u: from all stars and bars that tell it."""
+    """Light-dark half difference over mean level of the station's prints, and u: by all stars and bars that tell it."""
     told = {}
     for s in sweep.sightings:
         if s.star_curve is not None and s.star_curve.surround:
@@ -114,7 +114,9 @@ def _print_contrast(sweep: Sweep) -> tuple[float, float]:
 
 def _star_data(sighting: Sighting, stop: int, scale: int, common: tuple[float, float]) -> AmplitudeData:
     """A star's rings, as transfer by its own level at zero frequency; the error of that level is the scale's."""
-    assert sighting.star is not None and sighting.star.rings is not None and sighting.star_curve is not None
+    assert sighting.star is not None
+    assert sighting.star.rings is not None
+    assert sighting.star_curve is not None
     rings, curve = sighting.star.rings, sighting.star_curve
     ratio, ratio_u = (curve.ratio, curve.ratio_u) if curve.surround else common
     unit = SQUARE_WAVE * ratio * float(np.median(rings.level))
@@ -247,7 +249,7 @@ def _evidence(sweep: Sweep, light: Light, fit: LensFit | None, station: Station)
 
 
 def _snr_swept_db(here: Sequence[Sighting], tone: float | None) -> float | None:
-    """Signal to noise of one pixel at the light tone as swept, from the brightest even area, by the square root of light."""
+    """Signal to noise of one pixel at the light tone as swept: the brightest even area's, by root of light."""
     points = [
         (p, s)
         for s in here
@@ -263,7 +265,7 @@ def _snr_swept_db(here: Sequence[Sighting], tone: float | None) -> float | None:
 
 
 def _tones(sweep: Sweep, light: Light, fit: LensFit | None, station: Station) -> list[float | None]:
-    """The light tone per ms (linear DN) at each stop: the brightest of its unclipped patches, else by the light's ratio."""
+    """The light tone per ms (linear DN) at each stop: its brightest unclipped patch's, else by the light's ratio."""
     direct: list[float | None] = []
     for stop in sweep.stops:
         here = [(s, _tone(sweep, s, fit)) for s in sweep.at(stop)]

@@ -1,10 +1,9 @@
 """Readings -> lens model: one least-squares fit over the profiles of all stops, targets and patches.
 
 Edges enter with their spread functions, stars and bars with their amplitudes, the light with each ring position's
-f-number. Levels, position and light gradient of an edge are linear and are projected out (variable projection, Golub and
-Pereyra, SIAM J. Numer. Anal. 10, 413-432, 1973); the scale of a star or bar print is a parameter of its own. Weak priors
-keep small what is small in a sound lens. The solver is MINPACK's
-Levenberg-Marquardt with the derivatives given.
+f-number. Levels, position and light gradient of an edge are linear and are projected out (variable projection, Golub
+and Pereyra, SIAM J. Numer. Anal. 10, 413-432, 1973); the scale of a star or bar print is a parameter of its own. Weak
+priors keep small what is small in a sound lens. The solver is MINPACK's Levenberg-Marquardt with the derivatives given.
 """
 
 from collections.abc import Callable, Sequence
@@ -71,7 +70,7 @@ class AmplitudeData:
 
 @dataclass(frozen=True, slots=True)
 class StopLight:
-    """What the light says of the stops, (k,): f-numbers on the scale where the reference stop is as engraved, and u of ln N."""
+    """What the light says of the stops, (k,): f-numbers, the reference stop as engraved, and u of ln N."""
 
     f_number: Floats
     ln_u: Floats
@@ -92,8 +91,8 @@ class LensFit:
     """The fitted lens.
 
     `theta`: parameters by `names`, `covariance` of them (already widened where the model does not describe the data),
-    `reduced_chi2` of the data, `misfit`: reduced chi-square of each data block, in the order of `views`; `rivals`: other
-    solutions that fit nearly as well, each with how much its chi-square is higher.
+    `reduced_chi2` of the data, `misfit`: reduced chi-square of each data block, in the order of `views`; `rivals`:
+    other solutions that fit nearly as well, each with how much its chi-square is higher.
     """
 
     bench: Bench
@@ -122,9 +121,9 @@ class Problem:
     """All data of one sweep. `names` and `prior` (mean, standard deviation) give the parameters in their order.
 
     focus: depth (mm) of paraxial focus; w040, w060: waves at the widest stop; blur2: sensor blur squared (px^2); mark:
-    ln of the true over the engraved f-number of the reference stop; colour: waves of defocus at the widest stop for each
-    standard deviation of the spectrum; ring K: what remains of ln N at stop K beside the light; shift T, astigmatism T:
-    of target T's focus (mm); scale S: ln of a print's scale.
+    ln of the true over the engraved f-number of the reference stop; colour: waves of defocus at the widest stop for
+    each standard deviation of the spectrum; ring K: what remains of ln N at stop K beside the light; shift T,
+    astigmatism T: of target T's focus (mm); scale S: ln of a print's scale.
     """
 
     bench: Bench
@@ -144,7 +143,7 @@ class Problem:
         edges: Sequence[EdgeData],
         amplitudes: Sequence[AmplitudeData],
     ) -> "Problem":
-        """The problem with its parameters and priors; a target's own focus may wander by a part of a wave, wide open."""
+        """The problem with its parameters and priors; a target's focus may wander by a part of a wave, wide open."""
         widest = float(light.f_number.min())
         step = 1e-3 * bench.focal_length_mm / bench.magnification
         at = float(np.mean(depths_mm))
@@ -268,7 +267,7 @@ class Nodes(Frequencies):
         self.to_coefficients = np.linalg.inv(basis)
 
     def interpolation(self, row: int, v: Floats) -> Floats:
-        """Matrix (m, nodes) that gives values at frequencies v from those at view `row`'s nodes; nothing beyond the last."""
+        """Matrix (m, nodes): values at frequencies v from those at view `row`'s nodes; nothing beyond the last."""
         inside = np.clip(2.0 * v / self.top[row] - 1.0, -1.0, 1.0)
         matrix = np.polynomial.chebyshev.chebvander(inside, self.v.shape[1] - 1) @ self.to_coefficients
         return np.asarray(np.where((v <= self.top[row])[:, None], matrix, 0.0))
@@ -313,7 +312,7 @@ class _Residuals:
         self._kept: tuple[Floats, Floats, list[slice]] = (np.zeros(0), np.zeros((0, 0)), [])
 
     def _edge_matrix(self, row: int, edge: EdgeData) -> Floats:
-        """Matrix (m, nodes) from the transfer to the spread function less one half: the integral of M sin(2 pi v d) / (pi v)."""
+        """Matrix (m, nodes), transfer to spread function less one half: the integral of M sin(2 pi v d) / (pi v)."""
         reach = float(np.abs(edge.distance_px).max())
         x, w = _panels(int(np.ceil(4.0 + 0.4 * self.nodes.top[row] * reach)))
         v = x * self.nodes.top[row]
@@ -434,17 +433,25 @@ def minimise(
     residuals: (p,) -> (m,), m >= p; jacobian: (p,) -> (m, p); scale: (p,) typical size of each parameter; tolerance:
     relative change of the sum and of the parameters at which it stops.
     """
+
+    def scaled(x: Floats) -> Floats:
+        return residuals(x * scale)
+
+    def slopes(x: Floats) -> Floats:
+        return jacobian(x * scale) * scale
+
     found = least_squares(
-        lambda x: residuals(x * scale),
+        scaled,
         start / scale,
-        jac=lambda x: jacobian(x * scale) * scale,
+        jac=slopes,
         method="lm",
         ftol=tolerance,
         xtol=tolerance,
         gtol=1e-12,
         max_nfev=MOST_STEPS,
     )
-    return np.asarray(found.x * scale)
+    solved: Floats = np.asarray(found.x * scale, dtype=np.float64)
+    return solved
 
 
 MOST_STEPS = 60
@@ -452,7 +459,7 @@ ROUGH, FINE = 1e-3, 1e-6
 
 
 def _typical(problem: Problem) -> Floats:
-    return np.minimum(np.array(problem.prior)[:, 1], 1.0)
+    return np.asarray(np.minimum(np.array(problem.prior)[:, 1], 1.0))
 
 
 def _rough(residuals: _Residuals, start: Floats) -> tuple[float, Floats]:
@@ -481,7 +488,7 @@ def _finish(residuals: _Residuals, start: Floats) -> tuple[LensFit, float]:
         theta = minimise(residuals, residuals.jacobian, theta, _typical(problem), FINE if last else ROUGH)
     r, jacobian, blocks = residuals.evaluate(theta)
     data, prior = jacobian[:rows], jacobian[rows:]
-    covariance = np.linalg.inv(data.T @ data + prior.T @ prior)
+    covariance = np.asarray(np.linalg.inv(data.T @ data + prior.T @ prior), dtype=np.float64)
     steps = _focus_steps(residuals, theta, r, jacobian)
     fitted = LensFit(
         problem.bench,
@@ -539,7 +546,7 @@ def _focus_steps(residuals: _Residuals, theta: Floats, r: Floats, jacobian: Floa
 
 
 def _starts(problem: Problem) -> list[Floats]:
-    """Starting points: the best minima of a grid over focus and spherical aberration, by a coarse look at the readings."""
+    """Starting points: the best minima of a grid over focus and spherical aberration, by a coarse look."""
     theta = np.array([mean for mean, _ in problem.prior])
     views, v, value, weight, scale = _coarse_look(problem)
     optics = Optics(problem, views)
@@ -581,7 +588,7 @@ START_COLOUR = 0.1
 
 
 def _coarse_look(problem: Problem) -> tuple[list[View], Floats, Floats, Floats, NDArray[np.intp]]:
-    """A few frequencies of every reading: views, frequencies, values, weights (views, 6), and the print's scale or -1."""
+    """A few frequencies of every reading: views, frequencies, values, weights (views, 6), print's scale or -1."""
     part = np.array([0.06, 0.12, 0.2, 0.3, 0.42, 0.6])
     views: list[View] = []
     rows: list[tuple[Floats, Floats, Floats, int]] = []

@@ -77,8 +77,9 @@ def _assumed_lens(station: Station) -> LensFit:
 def _assumptions(fit: LensFit, station: Station) -> tuple[str, ...]:
     waves, blur = abs(fit.value("w040")[0]), float(np.sqrt(fit.value("blur2")[0]))
     return (
-        f"Assumed: a usual lens with {waves:.1f} waves of spherical aberration at f/{min(station.lens.stops):g} that goes as the fourth "
-        f"power of the aperture, {blur:.1f} px of sensor blur, focused at depth 0. A sweep measures yours.",
+        f"Assumed: a usual lens with {waves:.1f} waves of spherical aberration at f/{min(station.lens.stops):g} that "
+        f"goes as the fourth power of the aperture, {blur:.1f} px of sensor blur, focused at depth 0. A sweep "
+        "measures yours.",
     )
 
 

@@ -1,6 +1,7 @@
 """The lens in front of the sensor: from stop, depth and a few coefficients to the transfer of lens and camera.
 
-    M(v) = sum over wavelengths w_l OTF(v l N_w / p; W020, W040, W060) x sinc(v cos t) sinc(v sin t) x exp(-2 pi^2 s^2 v^2)
+    M(v) = sum over wavelengths w_l OTF(v l N_w / p; W020, W040, W060)
+           x sinc(v cos t) sinc(v sin t) x exp(-2 pi^2 s^2 v^2)
 
 with v in cycles per pixel along direction t, the pixel pitch p, the working f-number N_w = N (1 + m / P), and the
 sensor's blur s. W020 comes from the distances behind the exit pupil, W040 scales with aperture^4, W060 with
@@ -18,7 +19,7 @@ from sweep.station import Station
 
 SPECTRUM_NODES = 5
 UNSTATED_RMS_SHARE = 0.02
-"""Relative rms width of the light where the station file states none: that of a coloured LED (common practice, no source)."""
+"""Relative rms width of the light where none is stated: that of a coloured LED (common practice, no source)."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -2,8 +2,9 @@
 
     ln L(frame, patch) = A(patch) + E(stop) - V(stop) r(patch)^2 + D time(frame) + lamp noise
 
-L is the patch's light per millisecond at 0 dB, r its distance from the frame's middle, V the vignetting, which is taken to
-be none at the smallest stop. Light goes as 1 / N^2 (ISO 517), so N(stop) = N(reference) exp(-(E(stop) - E(reference)) / 2).
+L is the patch's light per millisecond at 0 dB, r its distance from the frame's middle, V the vignetting, which is
+taken to be none at the smallest stop. Light goes as 1 / N^2 (ISO 517), so
+N(stop) = N(reference) exp(-(E(stop) - E(reference)) / 2).
 """
 
 from collections.abc import Sequence
@@ -62,8 +63,8 @@ class Light:
 def light_of(sweep: Sweep) -> Light:
     """Fit the light of all frames at once.
 
-    A stop of which every patch is clipped is left out; the reference is the widest stop with at most 1 % clipped in every
-    patch.
+    A stop of which every patch is clipped is left out; the reference is the widest stop with at most 1 % clipped in
+    every patch.
     """
     stops = len(sweep.stops)
     nothing = np.full(stops, np.nan)
@@ -101,7 +102,7 @@ def _reference(sweep: Sweep) -> int | None:
 
 @dataclass(frozen=True, slots=True)
 class _Rows:
-    """One row for each frame and patch: indices of stop, patch and frame, ln light, time (-1/2 to 1/2), r^2 (corner = 1)."""
+    """One row for each frame and patch: indices, ln light, time (-1/2 to 1/2), r^2 (corner = 1)."""
 
     stop: NDArray[np.intp]
     patch: NDArray[np.intp]
@@ -169,7 +170,7 @@ def _solve(rows: _Rows, stops: int) -> tuple[Floats, Floats, tuple[FrameLight, .
         precision[frame_slots] = 1.0 / lamp_noise**2
         precision[pair_slots] = 1.0 / pair_noise**2
         normal = design.T @ design / noise**2 + np.diag(precision)
-        covariance = np.linalg.inv(normal)
+        covariance = np.asarray(np.linalg.inv(normal), dtype=np.float64)
         solved = covariance @ (design.T @ ln_light / noise**2)
         rest = ln_light - design @ solved
         used = every - float(np.sum(precision * np.diag(covariance)))

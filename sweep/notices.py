@@ -1,7 +1,7 @@
 """What a careful person would notice in a sweep: each code of `result.NOTE_CODES` that pixels, light and fit can tell.
 
-Every test has a threshold that a sound sweep passes with room to spare: at least five of its own standard uncertainties and
-a size that matters to the answer. docs/outputs.md lists what to do about each.
+Every test has a threshold that a sound sweep passes with room to spare: at least five of its own standard uncertainties
+and a size that matters to the answer. docs/outputs.md lists what to do about each.
 """
 
 import itertools
@@ -112,8 +112,8 @@ def _frames(sweep: Sweep, station: Station) -> list[Note]:
         out.append(
             Note(
                 "bit-depth",
-                f"The lowest {sweep.idle_bits} of {station.camera.bit_depth} bits never change: the camera delivers {used} bits. "
-                "Set camera.bit_depth, or the camera's pixel format, accordingly.",
+                f"The lowest {sweep.idle_bits} of {station.camera.bit_depth} bits never change: the camera delivers "
+                f"{used} bits. Set camera.bit_depth, or the camera's pixel format, accordingly.",
             )
         )
     return out
@@ -134,8 +134,8 @@ def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
             out.append(
                 Note(
                     "stop-order",
-                    f"{_f(sweep.stops[b])} let more light through than {_f(sweep.stops[a])}: the labels are not in the order of the "
-                    "light. Check the stop column of shots.csv against the ring.",
+                    f"{_f(sweep.stops[b])} let more light through than {_f(sweep.stops[a])}: the labels are not in "
+                    "the order of the light. Check the stop column of shots.csv against the ring.",
                 )
             )
         elif abs(step) < min(SAME_LIGHT_LN_N, 0.3 * wanted):
@@ -143,8 +143,8 @@ def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
             out.append(
                 Note(
                     "light-unchanged",
-                    f"{_f(sweep.stops[a])} and {_f(sweep.stops[b])} let the same light through (within {200 * abs(step):.1f} %): the "
-                    "ring was not turned, or files were mixed up. Take both again.",
+                    f"{_f(sweep.stops[a])} and {_f(sweep.stops[b])} let the same light through (within "
+                    f"{200 * abs(step):.1f} %): the ring was not turned, or files were mixed up. Take both again.",
                 )
             )
     middle = float(np.median(list(off.values()))) if off else 0.0
@@ -156,8 +156,8 @@ def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
             out.append(
                 Note(
                     "ring-off",
-                    f"{_f(sweep.stops[k])}: by the light the ring stood at f/{sweep.stops[k] * np.exp(away):.3g}. Come to the mark "
-                    "from the wide side and take this stop again.",
+                    f"{_f(sweep.stops[k])}: by the light the ring stood at f/{sweep.stops[k] * np.exp(away):.3g}. "
+                    "Come to the mark from the wide side and take this stop again.",
                 )
             )
     noise = max(light.lamp_noise, 1e-4)
@@ -170,8 +170,9 @@ def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
                 out.append(
                     Note(
                         "ring-off",
-                        f"{_f(sweep.stops[frame.stop])}: one frame caught {100 * np.expm1(away):+.0f} % light against the others of "
-                        "this stop: the ring moved between frames. Take this stop again with the ring at rest.",
+                        f"{_f(sweep.stops[frame.stop])}: one frame caught {100 * np.expm1(away):+.0f} % light against "
+                        "the others of this stop: the ring moved between frames. Take this stop again with the ring "
+                        "at rest.",
                     )
                 )
     return out
@@ -184,15 +185,16 @@ def _lamp(sweep: Sweep, light: Light) -> list[Note]:
         out.append(
             Note(
                 "light-drift",
-                f"The lamp changed by {100 * light.drift:+.1f} % over the sweep. Warm it up, and visit the first stop once more at the end.",
+                f"The lamp changed by {100 * light.drift:+.1f} % over the sweep. Warm it up, and visit the first stop "
+                "once more at the end.",
             )
         )
     if light.lamp_noise > LAMP_RIPPLE and len(light.frames) >= 6:
         out.append(
             Note(
                 "flicker",
-                f"The light differs by {100 * light.lamp_noise:.1f} % (rms) from frame to frame. Use a steady lamp, or whole periods of its "
-                "ripple as exposure, and set need.flicker_hz.",
+                f"The light differs by {100 * light.lamp_noise:.1f} % (rms) from frame to frame. Use a steady lamp, "
+                "or whole periods of its ripple as exposure, and set need.flicker_hz.",
             )
         )
     bands = row_ripple(sweep.row_light)
@@ -200,8 +202,8 @@ def _lamp(sweep: Sweep, light: Light) -> list[Note]:
         out.append(
             Note(
                 "flicker",
-                f"Bands of {100 * bands[0]:.1f} % cross the frames, {bands[1]:.0f} rows apart: a rolling shutter under a rippling lamp. "
-                "Use a steady lamp, or whole periods of its ripple as exposure.",
+                f"Bands of {100 * bands[0]:.1f} % cross the frames, {bands[1]:.0f} rows apart: a rolling shutter "
+                "under a rippling lamp. Use a steady lamp, or whole periods of its ripple as exposure.",
             )
         )
     return out
@@ -210,8 +212,8 @@ def _lamp(sweep: Sweep, light: Light) -> list[Note]:
 def row_ripple(row_light: Sequence[Floats]) -> tuple[float, float] | None:
     """Amplitude and period (rows) of bands common to the frames; None where no single frequency stands out.
 
-    row_light: for each stop, (n, rows), ratios to the stop's mean frame. The power spectra of all frames are averaged; a band
-    is a line at 30 times the median power that holds a quarter of all, of an amplitude that matters.
+    row_light: for each stop, (n, rows), ratios to the stop's mean frame. The power spectra of all frames are averaged;
+    a band is a line at 30 times the median power that holds a quarter of all, of an amplitude that matters.
     """
     spectra = [np.abs(np.fft.rfft(r - r.mean(axis=1, keepdims=True), axis=1)) ** 2 for r in row_light if len(r) >= 2]
     if not spectra:
@@ -249,8 +251,8 @@ def _movement(sweep: Sweep, station: Station) -> list[Note]:
             out.append(
                 Note(
                     "vibration",
-                    f"The image moves by {rms:.2f} px (rms) between frames of one stop, most at {_f(worst)}. Hold camera and parts firmly "
-                    "and take the hand off the ring before a frame is taken.",
+                    f"The image moves by {rms:.2f} px (rms) between frames of one stop, most at {_f(worst)}. Hold "
+                    "camera and parts firmly and take the hand off the ring before a frame is taken.",
                 )
             )
     return out + _moved_targets(sweep, station, rms)
@@ -277,8 +279,8 @@ def _moved_targets(sweep: Sweep, station: Station, rms: float) -> list[Note]:
         out.append(
             Note(
                 "target-moved",
-                f"{_f(stop)}: {what} {max(targets.values()):.1f} px from where it is at the other stops: {cause}. Fix it and take this "
-                "stop again.",
+                f"{_f(stop)}: {what} {max(targets.values()):.1f} px from where it is at the other stops: {cause}. Fix "
+                "it and take this stop again.",
             )
         )
     return out
@@ -312,8 +314,8 @@ def _patches(sweep: Sweep, readings: Sequence[Reading], station: Station) -> lis
             out.append(
                 Note(
                     "edge-not-straight",
-                    f"{station.targets[target].name}, patch {patch}: the edge wanders by {sharp.ragged_px:.2f} px and bows by "
-                    f"{sharp.bend_px:.1f} px. {NOTE_CODES['edge-not-straight'].remedy}",
+                    f"{station.targets[target].name}, patch {patch}: the edge wanders by {sharp.ragged_px:.2f} px and "
+                    f"bows by {sharp.bend_px:.1f} px. {NOTE_CODES['edge-not-straight'].remedy}",
                 )
             )
     beyond = [r.target for r in readings if "beyond-nyquist" in r.why_not]
@@ -351,14 +353,14 @@ def _processing(sweep: Sweep) -> list[Note]:
     return [
         Note(
             "processed-image",
-            f"The camera sharpens, smooths or interpolates its images: {' and '.join(told)}. Turn these off and take the sweep again; the "
-            "readings are those of lens and processing together.",
+            f"The camera sharpens, smooths or interpolates its images: {' and '.join(told)}. Turn these off and take "
+            "the sweep again; the readings are those of lens and processing together.",
         )
     ]
 
 
 def _response(sweep: Sweep, station: Station) -> list[Note]:
-    """Frames of one stop at several exposures whose light does not follow the exposure; noise that does not follow the light."""
+    """Frames of one stop whose light does not follow their exposures; noise that does not follow the light."""
     ratios = []
     for s in sweep.sightings:
         if s.ok and len(s.exposures) == len(s.frame_light) and np.ptp(s.exposures) > 0.3 * s.exposures.max():
@@ -368,8 +370,9 @@ def _response(sweep: Sweep, station: Station) -> list[Note]:
         return [
             Note(
                 "response-not-linear",
-                f"Longer exposures give {100 * (np.median(ratios) - 1.0):+.0f} % light for the same time: the pixel values do not follow the "
-                f"light as camera.response = {station.camera.response!r} says. Set the camera's gamma to 1, or state its response.",
+                f"Longer exposures give {100 * (np.median(ratios) - 1.0):+.0f} % light for the same time: the pixel "
+                f"values do not follow the light as camera.response = {station.camera.response!r} says. Set the "
+                "camera's gamma to 1, or state its response.",
             )
         ]
     transfer = sweep.photon_transfer
@@ -378,8 +381,8 @@ def _response(sweep: Sweep, station: Station) -> list[Note]:
         return [
             Note(
                 "response-not-linear",
-                f"The noise does not follow the light as camera.response = {station.camera.response!r} says (photon transfer is bent by "
-                f"{100 * bend[0]:+.0f} %). Set the camera's gamma to 1, or state its response.",
+                f"The noise does not follow the light as camera.response = {station.camera.response!r} says (photon "
+                f"transfer is bent by {100 * bend[0]:+.0f} %). Set the camera's gamma to 1, or state its response.",
             )
         ]
     return []
@@ -397,8 +400,8 @@ def _model(
         return [
             Note(
                 "focus-moved",
-                f"From {_f(sweep.stops[step.stop])} on the focus lies {step.shift_mm:+.2g} mm elsewhere: the focus ring was touched. Lock it "
-                "and take the sweep again.",
+                f"From {_f(sweep.stops[step.stop])} on the focus lies {step.shift_mm:+.2g} mm elsewhere: the focus "
+                "ring was touched. Lock it and take the sweep again.",
             )
         ]
     off = float(np.sqrt(np.mean(discrepancy.deviation**2))) if discrepancy.readings else 0.0
@@ -409,8 +412,8 @@ def _model(
     return [
         Note(
             "model-misfit",
-            f"The lens model is off the readings by {off:.3f} in contrast (reduced chi-square {fit.reduced_chi2:.1f}), most at "
-            f"{_f(sweep.stops[view.stop])}, {station.targets[view.target].name}. Readings count for more than the model there; look for "
-            "tilt, dirt, movement or processing.",
+            f"The lens model is off the readings by {off:.3f} in contrast (reduced chi-square "
+            f"{fit.reduced_chi2:.1f}), most at {_f(sweep.stops[view.stop])}, {station.targets[view.target].name}. "
+            "Readings count for more than the model there; look for tilt, dirt, movement or processing.",
         )
     ]

@@ -1,8 +1,9 @@
 """Readings and lens model together: the best estimate of the contrast at every stop and place, with draws.
 
-A reading is the model's value plus a discrepancy plus its own error. The discrepancy's size is estimated from the readings
-themselves: where the model describes them it is nothing and the model decides; where not, the readings take over by degrees.
-The draws (n, stops, places) come from the fit's covariance, linearised, and from what the discrepancy leaves open.
+A reading is the model's value plus a discrepancy plus its own error. The discrepancy's size is estimated from the
+readings themselves: where the model describes them it is nothing and the model decides; where not, the readings take
+over by degrees. The draws (n, stops, places) come from the fit's covariance, linearised, and from what the discrepancy
+leaves open.
 """
 
 from collections.abc import Sequence
@@ -23,7 +24,7 @@ NYQUIST_CY_PX = 0.5
 
 @dataclass(frozen=True, slots=True)
 class Discrepancy:
-    """How far the model is off the readings beyond their uncertainty: `deviation` (stops,) and the chi-square that says so."""
+    """How far the model is off the readings beyond their uncertainty: `deviation` (stops,), and its chi-square."""
 
     deviation: Floats
     chi2: float
@@ -219,7 +220,7 @@ V_CY_PX = np.linspace(0.0, 1.0, 201)
 
 
 def half_modulation(fit: LensFit, views: Sequence[View], depths_mm: Floats) -> list[tuple[float, float] | None]:
-    """The model's half-modulation frequency (cycles/pixel) of each view, and its u; None where it does not fall so far."""
+    """The model's half-modulation frequency (cycles/pixel) of each view, and u; None where it doesn't fall so far."""
     optics = Optics(fit, views, depths_mm)
     curves = transfer(optics, Frequencies(views, np.tile(V_CY_PX, (len(views), 1))), fit.theta)
     below = curves <= 0.5
@@ -229,5 +230,6 @@ def half_modulation(fit: LensFit, views: Sequence[View], depths_mm: Floats) -> l
     step = V_CY_PX[1]
     v = V_CY_PX[first] - step * (0.5 - after) / np.where(before > after, before - after, 1.0)
     _, slopes = transfer_slopes(optics, Frequencies(views, v[:, None]), fit.theta)
-    u = np.sqrt(np.einsum("pv,pq,qv->v", slopes[:, :, 0], fit.covariance, slopes[:, :, 0])) * step / np.abs(before - after)
+    value_u = np.sqrt(np.einsum("pv,pq,qv->v", slopes[:, :, 0], fit.covariance, slopes[:, :, 0]))
+    u = value_u * step / np.abs(before - after)
     return [(float(v[i]), float(u[i])) if below[i].any() else None for i in row]

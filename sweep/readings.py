@@ -56,7 +56,8 @@ class Sighting:
 
     `light_per_ms`: mean linear light of the patch (DN per ms at 0 dB); `frame_light`: the same frame by frame, with the
     frames' place in time in `frame_order`; `tone_per_ms`: the light tone in the brightest channel, None where the kind
-    has none; `exposures`: of the frames, ms at 0 dB; `noise`: of its even areas; `saturated_fraction`: over the frames used; `frames`: how many were used.
+    has none; `exposures`: of the frames, ms at 0 dB; `noise`: of its even areas; `saturated_fraction`: over the
+    frames used; `frames`: how many were used.
     """
 
     stop: float
@@ -214,7 +215,7 @@ class _Slot:
     @property
     def light_unit(self) -> float:
         """Milliseconds x gain: what turns DN into light."""
-        return self.exposure_ms * 10.0 ** (self.gain_db / 20.0)
+        return float(self.exposure_ms * 10.0 ** (self.gain_db / 20.0))
 
 
 class _Pass:
@@ -233,7 +234,7 @@ class _Pass:
         pixels = self.source.read(shot)
         self.shape = pixels.shape
         if shot.role == "target":
-            self._hashes.setdefault(blake2b(np.ascontiguousarray(pixels)).digest(), []).append(shot.file)
+            self._hashes.setdefault(blake2b(np.ascontiguousarray(pixels).data).digest(), []).append(shot.file)
             self._bits |= int(np.bitwise_or.reduce(pixels, axis=None))
         self.done += 1
         if self.progress is not None:
@@ -249,7 +250,7 @@ class _Pass:
         return (self._bits & -self._bits).bit_length() - 1 if self._bits else 0
 
     def black(self, shots: Sequence[Shot]) -> Black:
-        """Black level and dark noise from the dark frames; by the station file where there are none, or they clip at zero."""
+        """Black level and dark noise from the dark frames; as stated without any, or where they clip at zero."""
         stated = Black(self.station.camera.black_level_dn, False, ())
         if not shots:
             return stated
@@ -291,7 +292,7 @@ class _Pass:
         return seen
 
     def look_again(self, sightings: list[Sighting]) -> list[Sighting]:
-        """Measure stars and bars that were too soft to be found by themselves where they stand at their sharpest stop."""
+        """Measure stars and bars that were too soft to be found where they stand at their sharpest stop."""
         out = list(sightings)
         for stop, site, slots, scale in self._unfound:
             same = [s for s in sightings if s.site is site and s.ok]
@@ -308,7 +309,7 @@ def _row_means(pixels: Pixels) -> Floats:
 
 
 def _row_ratios(rows: Floats) -> Floats:
-    """Each frame's rows against the stop's mean frame, level and small shifts apart, (n, rows); 1 where nothing ripples."""
+    """Each frame's rows against the stop's mean frame, level and small shifts apart, (n, rows); 1 without ripple."""
     level = rows.mean(axis=1, keepdims=True)
     even = rows / np.where(level > 0, level, 1.0)
     middle = even.mean(axis=0)
@@ -425,7 +426,7 @@ def _tone(full: Floats, site: PatchSite, edge: EdgeMeasure | None, station: Stat
     elif edge is not None and edge.ok and edge.curve is not None:
         rows, columns = np.mgrid[0:height, 0:width]
         light = edge.curve.distance(columns.astype(float), rows.astype(float)) > 2.0 * edge.spread_px
-        own = sharpness_values(full, site.sites)  # type: ignore[arg-type]
+        own = sharpness_values(full, site.sites)
         own_light = light.reshape(-1)[site.sites.flat_index]
         if not own_light.any():
             return None

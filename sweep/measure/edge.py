@@ -86,7 +86,8 @@ class EdgeMeasure:
     `dark`, `light`: levels far from the edge, unit of the samples; `angle_deg`: tilt from the nearest axis;
     `spread_px`: 10 to 90 % width; `shift_px`: (n,) of each frame along the normal, each with `shift_u_px`;
     `ragged_px`: rms wander of the print's edge beyond the curve; `bend_px`: how far the curve bows from end to end;
-    `frame_level`: (n,) of each frame against the mean level of its samples; `overshoot`: by which the spread function leaves its levels near the edge, part of the step, dark and light.
+    `frame_level`: (n,) of each frame against the mean level of its samples; `overshoot`: by which the spread function
+    leaves its levels near the edge, part of the step, dark and light.
     """
 
     ok: bool
@@ -204,7 +205,7 @@ def _box3(image: Floats) -> Floats:
 
 
 def _row_crossings(rows: Floats, middle: float) -> Floats:
-    """Where each row, smoothed over its neighbours, rises through `middle`; NaN where it does not just once in effect."""
+    """Where each row, smoothed over its neighbours, rises through `middle` once in effect; else NaN."""
     kernel = np.ones(3) / 3.0
     smooth = np.apply_along_axis(lambda r: np.convolve(np.pad(r, 1, mode="edge"), kernel, "valid"), 1, rows)
     step = np.cumsum(smooth - middle, axis=1)
@@ -218,7 +219,7 @@ def _row_crossings(rows: Floats, middle: float) -> Floats:
 
 @dataclass(frozen=True, slots=True)
 class _Spread:
-    """A fitted spread function: knots of its core, coefficients of the columns of `_tables`, covariance, light gradient."""
+    """A fitted spread function: knots of its core, coefficients of `_tables`' columns, covariance, light gradient."""
 
     knots: tuple[float, ...]
     coefficients: Floats
@@ -241,7 +242,7 @@ class _Spread:
 
 
 def _soft(knots: tuple[float, ...]) -> tuple[float, float]:
-    """Deviation of the step column's Gaussian and softening of the tail column (px): wide enough for the knots to follow."""
+    """Deviation of the step column's Gaussian and softening of the tail column (px): the knots can follow them."""
     fine = knots[len(knots) // 2] - knots[len(knots) // 2 - 1]
     return 2.4 * fine, 2.1 * fine
 
@@ -393,7 +394,7 @@ def _refit(state: _State, d: Floats, t: Floats, light: Floats, there: Bools) -> 
     state.keep = there & (np.abs(residual) < 5.0 * np.hypot(state.deviation, 0.15 * np.abs(slope)))
     weight = state.keep / state.deviation**2
     state.along_gradient += float(np.sum(weight * residual * t * model) / np.sum(weight * (t * model) ** 2))
-    return state.keep.mean() > 0.5
+    return bool(state.keep.mean() > 0.5)
 
 
 def _move_curve(state: _State, d: Floats, t: Floats, light: Floats, bend: bool) -> None:
@@ -450,7 +451,7 @@ def _binned(d: Floats, columns: list[Floats], weight: Floats) -> tuple[Floats, l
     total = np.bincount(index, weights=weight)
     filled = total > 0
     means = [np.bincount(index, weights=weight * c)[filled] / total[filled] for c in [d, *columns]]
-    return means[0], means[1:], total[filled]
+    return means[0], means[1:], np.asarray(total[filled], dtype=np.float64)
 
 
 def _fit_spread(
@@ -472,7 +473,7 @@ def _fit_spread(
 
 
 def _noise_deviation(d: Floats, residual: Floats, model: Floats, fitted: _Spread, width: float, keep: Bools) -> Floats:
-    """Standard deviation of one sample, (k,): from the residuals of either side, a straight line in variance between."""
+    """Standard deviation of one sample, (k,): from the residuals of either side, variance linear in between."""
     side = max(1.0, 0.7 * width)
     dark, bright = fitted.levels
     spread = []
@@ -505,7 +506,8 @@ def _align_frames(
 ) -> tuple[Floats, Floats, Floats, _State]:
     """All frames' samples side by side, each at its distance from its own edge.
 
-    The deviation of each is such that all frames together weigh what their mean weighed: pattern noise is common to them.
+    The deviation of each is such that all frames together weigh what their mean weighed: pattern noise is common to
+    them.
     """
     n = len(frames)
     moved = replace(state, keep=(good & state.keep).ravel(), deviation=np.tile(state.deviation, n) * np.sqrt(n))
@@ -563,7 +565,7 @@ def _cut_short(state: _State) -> float:
 
 
 def _transfer(fitted: _Spread, step_u: float) -> Transfer:
-    """Signed transfer at V_CY_PX: the transform's modulus, noise bias taken off, with the sign about the edge's own middle."""
+    """Signed transfer at V_CY_PX: the transform's modulus, noise bias off, signed about the edge's own middle."""
     matrix = _transform(fitted.knots)
     step = float(fitted.coefficients[1])
     matrix = matrix / np.sinc(V_CY_PX / BINS_PER_PX)[:, None]

@@ -4,6 +4,7 @@ Raw mosaics are measured on their green sites only, where they lie: nothing is i
 """
 
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,7 @@ from sweep.station import Layout, Region
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
+Sample = TypeVar("Sample", bound=np.generic)
 
 COLOUR_SITES: dict[Layout, tuple[str, str]] = {
     "rggb": ("rg", "gb"),
@@ -111,7 +113,7 @@ def crop(pixels: Pixels, region: Region) -> Pixels:
     return pixels[top : top + height, left : left + width]
 
 
-def sharpness_values(patch: Pixels, sites: Sites) -> Pixels:
-    """Stored values at the sites, (k,); from the green channel where there are three."""
+def sharpness_values(patch: NDArray[Sample], sites: Sites) -> NDArray[Sample]:
+    """Values at the sites, (k,); from the green channel where there are three."""
     plane = patch[..., 1] if patch.ndim == 3 else patch
     return plane.reshape(-1)[sites.flat_index]

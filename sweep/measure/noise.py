@@ -65,7 +65,8 @@ class PhotonTransfer:
     def variance(self, mean_dn: float, gain_db: float, rounding_dn2: float) -> float:
         """Temporal variance of one pixel (linear DN^2) at a mean level and gain."""
         g = 10.0 ** (gain_db / 20.0)
-        return max(g * self.dn_per_electron * mean_dn + g * g * max(self.dark_variance_dn2, 0.0), 0.0) + rounding_dn2
+        photons = g * self.dn_per_electron * mean_dn
+        return max(float(photons + g * g * max(self.dark_variance_dn2, 0.0)), 0.0) + rounding_dn2
 
 
 def area_noise(
@@ -99,7 +100,7 @@ def area_noise(
 
 
 def _neighbour_correlation(rest: Floats, grid: tuple[Floats, Floats]) -> tuple[float, float]:
-    """Correlation of the temporal noise with the next sample along x, and along y (the next one there is: 1 or 2 px)."""
+    """Correlation of the temporal noise with the next sample along x, and along y (the next there is: 1 or 2 px)."""
     x, y = (g.astype(int) for g in grid)
     x, y = x - x.min(), y - y.min()
     image = np.full((len(rest), int(y.max()) + 1, int(x.max()) + 1), np.nan)
