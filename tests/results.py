@@ -129,7 +129,9 @@ def _reading(
 
 def _stop(station: Station, stop: float, ms_at_f4: float, sharpness: float, snr_db: float, clipped: bool) -> Stop:
     need = station.need
-    values = {t.name: _contrast(station, t.depth_mm, _by_light(stop), sharpness) for t in station.targets}
+    depths = {t.name: t.depth_mm for t in station.targets}
+    depths |= {f"{depth_mm:+.3g} mm": depth_mm for depth_mm in need.depth_range_mm or ()}
+    values = {name: _contrast(station, depth_mm, _by_light(stop), sharpness) for name, depth_mm in depths.items()}
     worst = min(values, key=lambda n: values[n])
     total = ms_at_f4 * (stop / 4) ** 2
     limit = need.max_exposure_ms or math.inf
@@ -205,8 +207,11 @@ def _recommendation(station: Station, stops: Sequence[Stop]) -> Recommendation:
 def _curve(station: Station, sharpness: float) -> tuple[CurvePoint, ...]:
     low, high = station.lens.stops[0] / 1.19, station.lens.stops[-1] * 1.19
     n = 49
+    depths = [(t.name, t.depth_mm) for t in station.targets]
+    if station.need.depth_range_mm is not None:
+        depths += [(f"{depth_mm:+.3g} mm", depth_mm) for depth_mm in station.need.depth_range_mm]
     return tuple(
-        CurvePoint(t.name, f, _contrast(station, t.depth_mm, f, sharpness), 0.004)
-        for t in station.targets
+        CurvePoint(name, f, _contrast(station, depth_mm, f, sharpness), 0.004)
+        for name, depth_mm in depths
         for f in (low * (high / low) ** (i / (n - 1)) for i in range(n))
     )

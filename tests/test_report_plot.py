@@ -46,7 +46,7 @@ def _cases() -> dict[str, tuple[Result, Station]]:
         "names": a_station(LONG),
         "alike": a_station([("left", 1.0), ("right", 1.1), ("top", 0.9)]),
         "moving": a_station(speed_mm_s=200.0, blur_px=0.5),
-        "depths": a_station(depth_range_mm=[-8.0, 6.0]),
+        "depths": a_station(depth_range_mm=[-9.0, 12.0]),
     }
     found = {name: (a_result(station), station) for name, station in stations.items()}
     three = stations["three"]
@@ -141,6 +141,7 @@ def test_it_says_what_to_set_what_is_needed_and_why_not() -> None:
         ("no light", "The light could not be measured."),
         ("ruled out", "too little light"),
         ("names", "$x_1$ & <b>"),
+        ("depths", "worst depth from −9 to +12 mm"),
     ],
 )
 def test_each_case_says_what_is_special_about_it(name: str, words: str) -> None:
@@ -172,6 +173,14 @@ def test_no_word_covers_another_or_leaves_the_picture(name: str, monkeypatch: py
         wide = min(box_a.x1, box_b.x1) - max(box_a.x0, box_b.x0)
         high = min(box_a.y1, box_b.y1) - max(box_a.y0, box_b.y0)
         assert min(wide, high) <= 2, (a, b)
+
+
+def test_a_forecast_has_lines_without_readings() -> None:
+    result, station = CASES["three"]
+    forecast = replace(result, readings=())
+    said = " ".join(_texts(draw(forecast, station)))
+    assert "Lines: lens model, bands ± 2 standard uncertainties." in said
+    assert "Markers" not in said
 
 
 def test_targets_differ_in_grey_by_dash_or_marker() -> None:

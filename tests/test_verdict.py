@@ -26,7 +26,7 @@ def test_every_code_has_its_words() -> None:
         (2, {}, "f/4, 2 ms, 0 dB: meets the need at both targets"),
         (3, {}, "f/4, 2 ms, 0 dB: meets the need at all three targets"),
         (12, {}, "f/4, 2 ms, 0 dB: meets the need at all 12 targets"),
-        (1, {"depth_range_mm": [0, 12]}, "f/4, 2 ms, 0 dB: meets the need at all depths from 0 to 12 mm"),
+        (1, {"depth_range_mm": [0, 12]}, "f/5.6, 3.92 ms, 0 dB: meets the need at all depths from 0 to 12 mm"),
         (1, {"contrast": 0.9}, "No stop meets the need; the best is f/4, 2 ms, 0 dB (too little contrast)"),
     ],
 )

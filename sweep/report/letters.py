@@ -1,5 +1,6 @@
 """Names as the fonts at hand can show them."""
 
+import re
 from functools import cache
 from pathlib import Path
 
@@ -16,6 +17,12 @@ def drawable(text: str) -> str:
     page by PDF/A may not hold. `result.json` keeps every name as it is.
     """
     return "".join(c if ord(c) in _letters() else MISSING for c in text if c.isprintable())
+
+
+def typeset(text: str) -> str:
+    """A sentence with true micro and minus signs, drawable."""
+    text = re.sub(r"(?<=\d) um\b", " \N{MICRO SIGN}m", text)
+    return drawable(re.sub(r"(?<![\w\N{MINUS SIGN}-])-(?=\d)", "\N{MINUS SIGN}", text))
 
 
 @cache

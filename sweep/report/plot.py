@@ -20,7 +20,7 @@ from matplotlib.ticker import FixedLocator, FuncFormatter, LogLocator, NullForma
 from sweep.choose.settings import exposure_limit_ms
 from sweep.choose.wording import number
 from sweep.report.labels import Label, label_free, label_right
-from sweep.report.letters import drawable
+from sweep.report.letters import drawable, typeset
 from sweep.report.lines import Line, draw_line, height, lines_of, place
 from sweep.result import Result, Stop
 from sweep.station import Station
@@ -77,10 +77,18 @@ def headroom(result: Result, station: Station) -> float:
 
 def explanation(result: Result) -> str:
     """What markers and lines of the picture mean."""
-    text = "Markers: readings, bars of ± 2 standard uncertainties."
+    told = []
+    if any(r.contrast_at_feature is not None for r in result.readings):
+        told.append("Markers: readings, bars ± 2 standard uncertainties.")
     if any(r.reversed for r in result.readings):
-        text += " Hollow: reversed, counts as 0."
-    return text + (" Lines: lens model, with a band likewise." if result.curve else "")
+        told.append("Hollow: reversed, counts as 0.")
+    if result.curve:
+        told.append(
+            "Lines: lens model, with a band likewise."
+            if told
+            else "Lines: lens model, bands ± 2 standard uncertainties."
+        )
+    return " ".join(told)
 
 
 def _saved(result: Result, station: Station, kind: str, metadata: dict[str, str | None]) -> bytes:
@@ -119,7 +127,7 @@ def _figure(result: Result, station: Station) -> Figure:
 
 
 def _title(result: Result, station: Station) -> list[str]:
-    return textwrap.wrap(drawable(headline(result, station)), _TITLE_LETTERS)
+    return textwrap.wrap(typeset(headline(result, station)), _TITLE_LETTERS)
 
 
 def _explained(result: Result, station: Station) -> list[str]:

@@ -17,7 +17,7 @@ import typst
 from sweep import __version__
 from sweep.choose.settings import exposure_limit_ms
 from sweep.choose.wording import number
-from sweep.report.letters import MISSING, drawable
+from sweep.report.letters import MISSING, drawable, typeset
 from sweep.report.plot import explanation, headroom
 from sweep.result import Reading, Result, Stop
 from sweep.station import Station
@@ -73,7 +73,7 @@ _DASH = "–"
 
 def record_pdf(result: Result, station: Station, plot_svg: bytes) -> bytes:
     """The record as PDF/A-2b, with the plot as vectors; the same bytes each time with the same libraries."""
-    data = _typeset(_content(result, station))
+    data = _set_in_type(_content(result, station))
     pages: bytes = typst.compile(
         files("sweep.report").joinpath("record.typ").read_bytes(),
         format="pdf",
@@ -90,18 +90,13 @@ def _fonts() -> typst.Fonts:
     return typst.Fonts(include_system_fonts=False)
 
 
-def _typeset(value: Any) -> Any:
-    """Every text with true micro and minus signs, and with only letters that the fonts have."""
+def _set_in_type(value: Any) -> Any:
+    """Every text within, line by line, as the fonts can show it."""
     if isinstance(value, dict):
-        return {key: _typeset(v) for key, v in value.items()}
+        return {key: _set_in_type(v) for key, v in value.items()}
     if isinstance(value, list | tuple):
-        return [_typeset(v) for v in value]
-    if not isinstance(value, str):
-        return value
-    if "\n" in value:
-        return "\n".join(_typeset(line) for line in value.split("\n"))
-    text = re.sub(r"(?<=\d) um\b", " \N{MICRO SIGN}m", value)
-    return drawable(re.sub(r"(?<![\w\N{MINUS SIGN}-])-(?=\d)", "\N{MINUS SIGN}", text))
+        return [_set_in_type(v) for v in value]
+    return "\n".join(map(typeset, value.split("\n"))) if isinstance(value, str) else value
 
 
 def _content(result: Result, station: Station) -> dict[str, Any]:
