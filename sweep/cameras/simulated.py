@@ -229,7 +229,7 @@ class Scene:
                 electrons += sim.sharpening * (electrons - gaussian_filter(electrons, SHARPEN_SIGMA_PX))
             linear = np.asarray(electrons * (10 ** (gain_db / 20) / sim.electrons_per_dn), dtype=np.float32)
             dn = _answer(linear, full_dn - camera.black_level_dn, camera.response) + np.float32(camera.black_level_dn)
-            return np.clip(np.rint(dn), 0, full_dn)
+            return np.asarray(np.clip(np.rint(dn), 0, full_dn), dtype=np.float32)
 
         if camera.layout == "bgr":
             frame = np.stack([read_out(np.float32(share)) for share in sim.colour_bgr], axis=2)
