@@ -6,7 +6,7 @@ Codes and keys stay in the files; people read these words. Pure: records in, tex
 import re
 
 from sweep.choose.wording import chance, number
-from sweep.result import NOTE_CODES, Note, Recommendation, Result, Stop
+from sweep.result import NOTE_CODES, Note, Result, Stop
 from sweep.station import Station
 
 WHY_NOT = {
@@ -64,13 +64,26 @@ def chosen_stop(result: Result) -> Stop | None:
     return next((s for s in result.stops if s.stop == result.recommendation.stop), None)
 
 
+def is_forecast(result: Result) -> bool:
+    """Whether nothing has been measured: the result of a plan."""
+    return result.source.frames == 0
+
+
 def headline(result: Result, station: Station) -> str:
     """The answer in one sentence, without its full stop."""
     chosen = chosen_stop(result)
     if chosen is None:
         return "No stop can be recommended: none has a sound reading at every target"
-    use = _use(result.recommendation)
-    if result.recommendation.meets_need:
+    meets = result.recommendation.meets_need
+    if is_forecast(result):
+        name = stop_name(chosen.stop)
+        if meets:
+            return f"Forecast, nothing measured yet: {name} should meet the need {_where(station)}"
+        return (
+            f"Forecast, nothing measured yet: no stop should meet the need; the best is {name} ({stop_verdict(chosen)})"
+        )
+    use = f"{stop_name(chosen.stop)}, {setting(result.recommendation.exposure_ms, result.recommendation.gain_db)}"
+    if meets:
         return f"{use}: meets the need {_where(station)}"
     if set(chosen.why_not) == {"unproven"}:
         return f"{use}: not proven to meet the need"
@@ -106,10 +119,6 @@ def told(note: Note) -> str:
     remedy = NOTE_CODES[note.code].remedy
     words, said = (set(re.findall(r"[a-z]{4,}", text.lower())) for text in (remedy, note.text))
     return note.text if 2 * len(words & said) >= len(words) else f"{note.text} {remedy}"
-
-
-def _use(recommendation: Recommendation) -> str:
-    return f"{stop_name(recommendation.stop or 0.0)}, {setting(recommendation.exposure_ms, recommendation.gain_db)}"
 
 
 def _where(station: Station) -> str:

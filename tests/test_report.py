@@ -2,12 +2,14 @@
 
 import errno
 import os
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
 from results import a_result, a_station
 
-import sweep.report
+import sweep.report.record
 from sweep.errors import InputError
 from sweep.report import FILES, check_out, write_report
 from sweep.result import Result
@@ -82,11 +84,16 @@ def test_without_the_right_to_write_it_says_so(tmp_path: Path, monkeypatch: pyte
             check_out(place)
 
 
+def test_checking_a_folder_loads_nothing_that_draws() -> None:
+    program = "import sys, sweep.report; sys.exit(any(m in sys.modules for m in ('matplotlib', 'typst')))"
+    assert subprocess.run([sys.executable, "-c", program], cwd=Path(__file__).parents[1], check=False).returncode == 0
+
+
 def test_a_fault_while_drawing_leaves_the_disk_untouched(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     def fault(result: Result, station: Station, picture: bytes) -> bytes:
         raise RuntimeError("no page")
 
-    monkeypatch.setattr(sweep.report, "record_pdf", fault)
+    monkeypatch.setattr(sweep.report.record, "record_pdf", fault)
     with pytest.raises(RuntimeError, match="no page"):
         write_report(tmp_path / "new" / "out", RESULT, STATION)
     assert list(tmp_path.iterdir()) == []

@@ -10,7 +10,7 @@ from results import STOPS, a_result, a_station
 from sweep.report.letters import _letters, drawable
 from sweep.report.plot import svg
 from sweep.report.record import _content, _value, record_pdf
-from sweep.result import Note, Result
+from sweep.result import Note, Result, SourceFacts
 from sweep.station import Station
 
 NOTES = [Note("frames-saturated", "f/1.4: 31 % clipped."), Note("gain-spent", "f/8 takes 6 dB.")]
@@ -102,6 +102,17 @@ def test_nothing_is_to_be_set_that_does_not_serve(clipped: tuple[float, ...], sh
     result = a_result(station, clipped=clipped, sharpness=sharpness)
     assert _content(result, station)["set_title"] == title
     assert _pdf(result, station).startswith(b"%PDF")
+
+
+def test_a_forecast_claims_no_measurement() -> None:
+    station = a_station()
+    forecast = replace(a_result(station), readings=(), source=SourceFacts(0, ""))
+    page = _content(forecast, station)
+    assert page["title"] == "Forecast for an aperture sweep"
+    assert page["footer"].endswith("a forecast")
+    assert page["readings"]["rows"] == []
+    assert ("Frames used", "none: a forecast") in page["source"]
+    assert _pdf(forecast, station).startswith(b"%PDF")
 
 
 def test_a_long_sweep_flows_over_pages() -> None:

@@ -5,7 +5,7 @@ from dataclasses import replace
 import pytest
 from results import STOPS, a_result, a_station
 
-from sweep.result import NOTE_CODES, Note
+from sweep.result import NOTE_CODES, Note, SourceFacts
 from sweep.verdict import LIMITED_BY, WHY_NOT, chance_line, headline, setting, stop_verdict, told, with_u
 
 # The codes of the documented file format (docs/outputs.md, stops and recommendation).
@@ -42,6 +42,19 @@ def test_an_unproven_stop_is_not_said_to_fail() -> None:
     found = replace(result, stops=stops, recommendation=replace(result.recommendation, meets_need=False))
     assert headline(found, station) == "f/4, 2 ms, 0 dB: not proven to meet the need"
     assert stop_verdict(stops[0]) == "not proven"
+
+
+@pytest.mark.parametrize(
+    ("contrast", "words"),
+    [
+        (0.3, "Forecast, nothing measured yet: f/4 should meet the need at cap"),
+        (0.9, "Forecast, nothing measured yet: no stop should meet the need; the best is f/4 (too little contrast)"),
+    ],
+)
+def test_a_forecast_is_called_one(contrast: float, words: str) -> None:
+    station = a_station([("cap", 1.0)], contrast=contrast)
+    result = replace(a_result(station), readings=(), source=SourceFacts(0, ""))
+    assert headline(result, station) == words
 
 
 def test_without_a_stop_there_is_no_chance_to_state() -> None:

@@ -10,16 +10,13 @@ import tempfile
 from pathlib import Path
 
 from sweep.errors import InputError
-from sweep.report.plot import png, svg
-from sweep.report.record import record_pdf
 from sweep.report.tables import read_result, readings_csv, result_json, stops_csv
 from sweep.result import Result
 from sweep.station import Station
 
 FILES = ("result.json", "readings.csv", "stops.csv", "plot.png", "plot.svg", "record.pdf")
 
-__all__ = ["FILES", "check_out", "png", "read_result", "readings_csv", "record_pdf", "result_json", "stops_csv", "svg"]
-__all__ += ["write_report"]
+__all__ = ["FILES", "check_out", "read_result", "readings_csv", "result_json", "stops_csv", "write_report"]
 
 
 def write_report(out_dir: Path, result: Result, station: Station) -> tuple[Path, ...]:
@@ -29,6 +26,10 @@ def write_report(out_dir: Path, result: Result, station: Station) -> tuple[Path,
     Raises InputError where the folder holds anything else or can't be written.
     """
     check_out(out_dir)
+    # What draws is heavy, and not needed by those who only check a folder or print the JSON.
+    from sweep.report.plot import png, svg
+    from sweep.report.record import record_pdf
+
     picture = svg(result, station)
     made = (
         result_json(result),

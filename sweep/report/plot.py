@@ -24,7 +24,7 @@ from sweep.report.letters import drawable, typeset
 from sweep.report.lines import Line, draw_line, height, lines_of, place
 from sweep.result import Result, Stop
 from sweep.station import Station
-from sweep.verdict import WHY_NOT, chosen_stop, headline, setting, stop_name, with_u
+from sweep.verdict import WHY_NOT, chosen_stop, headline, is_forecast, setting, stop_name, with_u
 
 SIZE_IN = (9.0, 6.6)
 DPI = 150
@@ -246,7 +246,9 @@ def _mark_chosen(axes: Axes, result: Result, lines: Sequence[Line], need: float)
             drawn = (line.x, line.y) if len(line.x) else (points[:, 0], points[:, 1])
             taken.append(np.column_stack([grid, np.interp(grid, *drawn)]))
     use = f"use {stop_name(chosen.stop)}\n" if chosen.meets_need else f"{stop_name(chosen.stop)}\n"
-    use += f"{setting(chosen.exposure_ms, chosen.gain_db)}\ncontrast {with_u(y, chosen.worst_contrast_u)}"
+    if not is_forecast(result):
+        use += f"{setting(chosen.exposure_ms, chosen.gain_db)}\n"
+    use += f"contrast {with_u(y, chosen.worst_contrast_u)}"
     label_free(axes, (x, y), use, 8.5, np.vstack(taken))
 
 
@@ -280,7 +282,9 @@ def _exposure(axes: Axes, result: Result, station: Station) -> None:
     ):
         mine = [(x, v) for x, v in known if low * _WITHIN < v <= high * _WITHIN]
         axes.plot([x for x, _ in mine], [v for _, v in mine], marker, ms=5.5, mfc=face, mec="black", mew=1.2)
-    told = "●  within the limit     ○  with gain     ×  out of reach" if known else "The light could not be measured."
+    told = "●  within the limit     ○  with gain     ×  out of reach"
+    if not known:
+        told = "Not known before light is measured." if is_forecast(result) else "The light could not be measured."
     axes.text(0.012, 0.94, told, transform=axes.transAxes, va="top", fontsize=7.5, color="0.25")
     chosen = chosen_stop(result)
     if chosen is not None:

@@ -27,6 +27,7 @@ from sweep.verdict import (
     chosen_stop,
     contrast_line,
     headline,
+    is_forecast,
     stop_name,
     stop_verdict,
     told,
@@ -34,6 +35,7 @@ from sweep.verdict import (
 )
 
 TITLE = "Record of an aperture sweep"
+FORECAST = "Forecast for an aperture sweep"
 EPOCH = 0
 """The pages carry no date of their own (the one beside the signature counts); PDF/A wants one, so it is always this."""
 
@@ -102,15 +104,16 @@ def _set_in_type(value: Any) -> Any:
 def _content(result: Result, station: Station) -> dict[str, Any]:
     names = [station.station.name, *(t.name for t in station.targets)]
     lacking = any(drawable(name) != name for name in names)
-    footer = f"Aperture Sweep {__version__}, source {result.source.sha256[:16]}"
+    forecast = is_forecast(result)
+    footer = f"Aperture Sweep {__version__}, {'a forecast' if forecast else f'source {result.source.sha256[:16]}'}"
     return {
-        "title": TITLE,
+        "title": FORECAST if forecast else TITLE,
         "station": station.station.name,
         "footer": footer + (f". {MISSING} stands for a letter that this page can't show" if lacking else ""),
         "words": _WORDS,
         "headline": headline(result, station),
         "verdict": [line for line in _verdict(result, station) if line],
-        "set_title": "To be set" if result.recommendation.meets_need else "The best found",
+        "set_title": "To be set" if result.recommendation.meets_need and not forecast else "The best found",
         "set": _to_set(result),
         "need": _need(station),
         "shortfalls": result.recommendation.shortfalls,
@@ -251,12 +254,15 @@ def _numbers(result: Result) -> list[tuple[str, str]]:
 
 def _source(result: Result, station: Station) -> list[tuple[str, str]]:
     lens, scene = station.lens, station.scene
+    measured = [
+        ("Frames used", str(result.source.frames)),
+        ("SHA-256 of all", "\n".join(re.findall(".{1,32}", result.source.sha256))),
+    ]
     return [
         ("Lens", f"{lens.focal_length_mm:g} mm, pupil magnification {lens.pupil_magnification:g}"),
         ("Pixel", f"{station.camera.pixel_pitch_um:g} um; {scene.object_um_per_px:g} um at the object"),
         ("Wavelength", f"{scene.wavelength_nm:g} nm, bandwidth {scene.bandwidth_nm:g} nm"),
-        ("Frames used", str(result.source.frames)),
-        ("SHA-256 of all", "\n".join(re.findall(".{1,32}", result.source.sha256))),
+        *([("Frames used", "none: a forecast")] if is_forecast(result) else measured),
         ("Made by", f"Aperture Sweep {__version__}"),
     ]
 
