@@ -17,6 +17,10 @@ import click
 from sweep import __version__
 from sweep.errors import InputError, Interrupted, SourceError, StationError, SweepError
 
+os.environ.setdefault(
+    "OPENBLAS_NUM_THREADS", "1"
+)  # small matrices: more threads cost time, and bytes must not depend on them
+
 if TYPE_CHECKING:
     from sweep.result import Result
     from sweep.station import Station

@@ -33,6 +33,8 @@ OVERSHOOT = 0.03
 MISFIT_CONTRAST = 0.008
 MISFIT_CHI2 = 1.6
 FOCUS_STEP_WAVES = 0.15
+EXPOSURE_MISMATCH = 0.05
+BENT_TRANSFER = 0.35
 CERTAIN = 5.0
 
 
@@ -47,14 +49,16 @@ def notices(
     compressed: bool,
 ) -> list[Note]:
     """All notices of a sweep, in the order of the table of codes."""
+    processed = [] if compressed else _processing(sweep)
+    bent = _exposure_response(sweep, station)
     found = [
         *_frames(sweep, station),
         *_stops_by_light(sweep, light),
-        *_lamp(sweep, light),
+        *([] if bent else _lamp(sweep, light)),
         *_movement(sweep, station),
         *_patches(sweep, readings, station),
-        *([] if compressed else _processing(sweep)),
-        *([] if compressed else _response(sweep, station)),
+        *processed,
+        *(bent if bent or compressed or processed else _noise_response(sweep, station)),
         *_model(fit, discrepancy, focus_steps, sweep, station),
     ]
     order = list(NOTE_CODES)
@@ -359,33 +363,38 @@ def _processing(sweep: Sweep) -> list[Note]:
     ]
 
 
-def _response(sweep: Sweep, station: Station) -> list[Note]:
-    """Frames of one stop whose light does not follow their exposures; noise that does not follow the light."""
+def _exposure_response(sweep: Sweep, station: Station) -> list[Note]:
+    """Frames of one stop whose light does not follow their exposures."""
     ratios = []
     for s in sweep.sightings:
         if s.ok and len(s.exposures) == len(s.frame_light) and np.ptp(s.exposures) > 0.3 * s.exposures.max():
             order = np.argsort(s.exposures)
             ratios.append(float(s.frame_light[order[-1]] / s.frame_light[order[0]]))
-    if ratios and abs(np.median(ratios) - 1.0) > 0.05:
-        return [
-            Note(
-                "response-not-linear",
-                f"Longer exposures give {100 * (np.median(ratios) - 1.0):+.0f} % light for the same time: the pixel "
-                f"values do not follow the light as camera.response = {station.camera.response!r} says. Set the "
-                "camera's gamma to 1, or state its response.",
-            )
-        ]
+    if not ratios or abs(np.median(ratios) - 1.0) <= EXPOSURE_MISMATCH:
+        return []
+    return [
+        Note(
+            "response-not-linear",
+            f"Longer exposures give {100 * (np.median(ratios) - 1.0):+.0f} % light for the same time: the pixel "
+            f"values do not follow the light as camera.response = {station.camera.response!r} says. Set the "
+            "camera's gamma to 1, or state its response.",
+        )
+    ]
+
+
+def _noise_response(sweep: Sweep, station: Station) -> list[Note]:
+    """Noise that does not follow the light."""
     transfer = sweep.photon_transfer
     bend = transfer.bend if transfer is not None else None
-    if bend is not None and abs(bend[0]) > max(0.35, CERTAIN * bend[1]):
-        return [
-            Note(
-                "response-not-linear",
-                f"The noise does not follow the light as camera.response = {station.camera.response!r} says (photon "
-                f"transfer is bent by {100 * bend[0]:+.0f} %). Set the camera's gamma to 1, or state its response.",
-            )
-        ]
-    return []
+    if bend is None or abs(bend[0]) <= max(BENT_TRANSFER, CERTAIN * bend[1]):
+        return []
+    return [
+        Note(
+            "response-not-linear",
+            f"The noise does not follow the light as camera.response = {station.camera.response!r} says (photon "
+            f"transfer is bent by {100 * bend[0]:+.0f} %). Set the camera's gamma to 1, or state its response.",
+        )
+    ]
 
 
 def _model(

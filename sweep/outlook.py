@@ -19,7 +19,8 @@ from sweep.measure.linear import Floats
 DRAWS = 400
 CURVE_POINTS = 49
 CURVE_MARGIN = 1.19
-NYQUIST_CY_PX = 0.5
+MODEL_FLOOR = 0.0005
+"""Contrast that the model's own simplifications may be off by (thin lens, round pupil; our trials)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,7 +61,7 @@ def estimate(
     model, slopes = lens.at_stops(places, len(reading))
     steps = _parameter_draws(fit, rng)
     spread = np.einsum("np,pks->nks", steps, slopes)
-    model_u = np.sqrt(np.einsum("pks,pq,qks->ks", slopes, fit.covariance, slopes))
+    model_u = np.sqrt(np.einsum("pks,pq,qks->ks", slopes, fit.covariance, slopes) + MODEL_FLOOR**2)
     discrepancy = _discrepancy(reading - model, np.hypot(reading_u, 0.3 * model_u))
     tau2 = discrepancy.deviation[:, None] ** 2
     there = np.isfinite(reading)
@@ -68,7 +69,7 @@ def estimate(
     weight = np.where(there, tau2 / np.maximum(tau2 + safe_u**2, 1e-12), 0.0)
     best = model + weight * np.where(there, reading - model, 0.0)
     left = np.sqrt(np.where(there, weight * safe_u**2, tau2))
-    own = left * rng.standard_normal((DRAWS, *model.shape))
+    own = np.hypot(left, MODEL_FLOOR) * rng.standard_normal((DRAWS, *model.shape))
     draws = best + (1.0 - weight) * spread + own
     draws = _with_rivals(draws, fit, lens, places, model, rng)
     f_numbers = np.geomspace(

@@ -289,7 +289,7 @@ def _basis(knots: tuple[float, ...]) -> BSpline:
 @lru_cache(maxsize=256)
 def _knots(spread_px: float, reach_px: float) -> tuple[float, ...]:
     """Knots of the core: fine over the edge, wider apart outward, ending at `reach_px` (all pixels)."""
-    fine = float(np.clip(spread_px / 6.0, 0.25, 2.0))
+    fine = float(np.clip(spread_px / 6.0, 0.25, 1.2))
     points = [0.5 * fine]
     while points[-1] < reach_px:
         points.append(points[-1] + max(fine, 0.3 * (points[-1] - spread_px)))
@@ -353,13 +353,37 @@ def _fit_edge(x: Floats, y: Floats, frames: Floats, good: Bools, mean: Floats, c
     angle = float(np.degrees(np.arccos(state.curve.tilt)))
     if not ANGLE_RANGE_DEG[0] <= angle <= ANGLE_RANGE_DEG[1]:
         return EdgeMeasure(False, ("edge-angle",), angle_deg=angle, curve=state.curve)
+    clumping = _clumping(state, x, y, (light - state.model(d, t)) / state.deviation, np.abs(d) > state.spread_px)
     levels = _side_levels(state, d, t, frames, good)
     frames = frames / levels[:, None]
     shift, shift_u = _frame_shifts(state, d, t, frames, good)
     if np.abs(shift).max() > _SHIFT_MATTERS_PX:
         d, t, light, state = _align_frames(state, d, t, frames, good, shift)
         _refit(state, d, t, light, state.keep)
-    return replace(_finish(state, d, t, light, (shift, shift_u)), frame_level=levels)
+    return replace(_finish(state, d, t, light, (shift, shift_u), clumping), frame_level=levels)
+
+
+_CORRELATION_MATTERS = 0.05
+_MOST_CLUMPING = 8.0
+
+
+def _clumping(state: _State, x: Floats, y: Floats, noise: Floats, away: Bools) -> float:
+    """By what factor neighbours that share their noise raise the variance of a mean: (1 + r) / (1 - r) along x and y.
+
+    r: correlation of the fit's residuals between neighbours away from the edge, where it is more than chance.
+    """
+    columns, rows = (np.rint(c).astype(np.intp) for c in (x, y))
+    image = np.full((int(rows.max()) + 1, int(columns.max()) + 1), np.nan)
+    use = state.keep & away
+    image[rows[use], columns[use]] = noise[use]
+    total = float(np.nanmean(image**2)) if use.any() else 0.0
+    factor = 1.0
+    for pair in (image[:, 1:] * image[:, :-1], image[1:] * image[:-1]):
+        there = np.isfinite(pair)
+        if there.sum() > 200 and total > 0:
+            r = min(float(pair[there].mean()) / total, 0.6)
+            factor *= (1.0 + r) / (1.0 - r) if r > _CORRELATION_MATTERS else 1.0
+    return min(factor, _MOST_CLUMPING)
 
 
 def _side_levels(state: _State, d: Floats, t: Floats, frames: Floats, good: Bools) -> Floats:
@@ -514,10 +538,12 @@ def _align_frames(
     return (d[None, :] - shift[:, None]).ravel(), np.tile(t, n), np.where(good, frames, 0.0).ravel(), moved
 
 
-def _finish(state: _State, d: Floats, t: Floats, light: Floats, shifts: tuple[Floats, float]) -> EdgeMeasure:
+def _finish(
+    state: _State, d: Floats, t: Floats, light: Floats, shifts: tuple[Floats, float], clumping: float
+) -> EdgeMeasure:
     """Transfer, profile and side figures from the final state."""
-    fitted = state.fitted
-    assert fitted is not None
+    assert state.fitted is not None
+    fitted = replace(state.fitted, covariance=state.fitted.covariance * clumping)
     ragged = _ragged(state, d, t, light)
     flat = light / (1.0 + state.along_gradient * t)
     weight = state.keep / np.hypot(state.deviation, ragged * np.abs(fitted.slope(d))) ** 2
@@ -528,7 +554,9 @@ def _finish(state: _State, d: Floats, t: Floats, light: Floats, shifts: tuple[Fl
     return EdgeMeasure(
         ok=True,
         transfer=_transfer(fitted, _cut_short(state)),
-        profile=EdgeProfile(centre, value - fitted.gradient * gradient_column, 1.0 / np.sqrt(total), gradient_column),
+        profile=EdgeProfile(
+            centre, value - fitted.gradient * gradient_column, np.sqrt(clumping / total), gradient_column
+        ),
         dark=dark,
         light=bright,
         angle_deg=float(np.degrees(np.arccos(state.curve.tilt))),
