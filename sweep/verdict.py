@@ -53,10 +53,12 @@ def setting(exposure_ms: float | None, gain_db: float | None) -> str:
 
 
 def with_u(value: float | None, u: float | None, digits: int = 3) -> str:
-    """A value with its expanded uncertainty, k = 2: `0.412 ± 0.008`; a dash where there is none."""
+    """A value with its expanded uncertainty, k = 2, never rounded to none: `0.412 ± 0.008`; a dash for no value."""
     if value is None:
         return "–"
-    return f"{value:.{digits}f}" if u is None else f"{value:.{digits}f} ± {2 * u:.{digits}f}"
+    if not u:
+        return f"{value:.{digits}f}"
+    return f"{value:.{digits}f} ± {max(2 * u, 10**-digits):.{digits}f}"
 
 
 def chosen_stop(result: Result) -> Stop | None:

@@ -111,6 +111,8 @@ def test_a_forecast_claims_no_measurement() -> None:
     assert page["title"] == "Forecast for an aperture sweep"
     assert page["footer"].endswith("a forecast")
     assert page["readings"]["rows"] == []
+    assert page["sign"] == ()
+    assert "measured" not in " ".join(page["cautions"])
     assert ("Frames used", "none: a forecast") in page["source"]
     assert _pdf(forecast, station).startswith(b"%PDF")
 

@@ -73,6 +73,8 @@ def test_settings_are_short_and_never_minus_zero() -> None:
 
 def test_uncertainty_is_shown_with_k_2() -> None:
     assert with_u(0.4412, 0.0041) == "0.441 ± 0.008"
+    assert with_u(0.4412, 0.0001) == "0.441 ± 0.001"
+    assert with_u(2.0, 0.0, 2) == "2.00"
     assert with_u(5.626, None, 2) == "5.63"
     assert with_u(None, None) == "–"
 

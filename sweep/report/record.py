@@ -70,6 +70,8 @@ _CAUTIONS = (
     "This record says what was measured at one time in one place: measure again when lens, camera, light or distance "
     "change. Local rules and licensed practice prevail.",
 )
+_NO_PROOF = "A forecast proves nothing: take a sweep before relying on it. Local rules and licensed practice prevail."
+_SIGN = (("Set by", "Date", "Signature"), ("Checked by", "Date", "Signature"))
 _DASH = "–"
 
 
@@ -110,7 +112,7 @@ def _content(result: Result, station: Station) -> dict[str, Any]:
         "title": FORECAST if forecast else TITLE,
         "station": station.station.name,
         "footer": footer + (f". {MISSING} stands for a letter that this page can't show" if lacking else ""),
-        "words": _WORDS,
+        "words": _WORDS | {"numbers": "Camera and lens, as assumed"} if forecast else _WORDS,
         "headline": headline(result, station),
         "verdict": [line for line in _verdict(result, station) if line],
         "set_title": "To be set" if result.recommendation.meets_need and not forecast else "The best found",
@@ -126,8 +128,8 @@ def _content(result: Result, station: Station) -> dict[str, Any]:
         "numbers": _numbers(result),
         "source": _source(result, station),
         "method": _METHOD,
-        "cautions": _CAUTIONS,
-        "sign": [["Set by", "Date", "Signature"], ["Checked by", "Date", "Signature"]],
+        "cautions": (*_CAUTIONS[:-1], _NO_PROOF) if forecast else _CAUTIONS,
+        "sign": () if forecast else _SIGN,
     }
 
 
