@@ -91,6 +91,12 @@ class Sighting:
         return None
 
     @property
+    def half_found(self) -> bool:
+        """Whether a sharper view of the same patch could help: no pattern was found, or a star without its rim."""
+        rimless = self.star is not None and self.star.ok and self.star.rim_px is None
+        return rimless or "pattern-not-found" in self.why_not
+
+    @property
     def strength(self) -> float:
         """How clearly a star or bars stand out: amplitude over level."""
         if self.star is not None and self.star.rings is not None:
@@ -287,17 +293,18 @@ class _Pass:
             if mine:
                 sighting = measure_patch(stop, site, mine, self.station, scale)
                 seen.append(sighting)
-                if "pattern-not-found" in sighting.why_not:
+                if sighting.half_found:
                     self._unfound.append((stop, site, mine, scale))
         return seen
 
     def look_again(self, sightings: list[Sighting]) -> list[Sighting]:
-        """Measure stars and bars that were too soft to be found where they stand at their sharpest stop."""
+        """Measure stars and bars that were too soft to be found, or whose rim was, where they stand at a sharper stop."""
         out = list(sightings)
         for stop, site, slots, scale in self._unfound:
             same = [s for s in sightings if s.site is site and s.ok]
+            rimmed = [s for s in same if s.star is not None and s.star.rim_px is not None]
             if same:
-                near = max(same, key=lambda s: s.strength)
+                near = max(rimmed or same, key=lambda s: s.strength)
                 i = next(i for i, s in enumerate(out) if s.site is site and s.stop == stop)
                 out[i] = measure_patch(stop, site, slots, self.station, scale, near)
         return out

@@ -101,7 +101,7 @@ def read_star(
 
     x, y: (k,) sample positions in pixels from the region's first; values: (n, k) linear light; valid: (n, k), False
     where a sample must not count; region_size: (width, height) in pixels; near: the same star as seen at another
-    stop, which tells where a star is that is too soft to be found by itself.
+    stop, which tells where a star, or its rim, is that is too soft to be found by itself.
     Returns levels in the unit of `values`, frequencies in cycles per pixel. Valid for 4 cycles and more and a star
     whose rings outside of the Nyquist radius cycles / pi lie inside the region.
     """
@@ -116,10 +116,10 @@ def read_star(
     known = near if near is not None and near.ok and near.cycles == cycles else None
     centre = find_centre(frames, cycles)
     if centre is None and known is not None and room(known.centre_px, region_size) > inner_radius(cycles):
-        return _measure(frames, cycles, known.centre_px, known)
+        return _measure(frames, cycles, known.centre_px, known, known.rim_px)
     if centre is None:
         return StarMeasure(False, ("low-signal",) if _mostly_noise(frames) else ("pattern-not-found",))
-    return _measure(frames, cycles, centre, None)
+    return _measure(frames, cycles, centre, None, known.rim_px if known is not None else None)
 
 
 def _mostly_noise(frames: Frames) -> bool:
@@ -128,10 +128,18 @@ def _mostly_noise(frames: Frames) -> bool:
     return float(frames.mean.std()) > 1.5 or between > 0.5
 
 
-def _measure(frames: Frames, cycles: int, centre: Point, known: StarMeasure | None) -> StarMeasure:
+SOFT_RIM_PX = 6.0
+"""Width of a rim that is too soft to be found by itself."""
+
+
+def _measure(
+    frames: Frames, cycles: int, centre: Point, known: StarMeasure | None, known_rim_px: float | None
+) -> StarMeasure:
     """Rim, shift of each frame, then the rings over all frames, each about its own centre."""
     frames = flatten(frames, centre)
     rim, width = find_rim(frames, cycles, centre)
+    if rim is None and known_rim_px is not None:
+        rim, width = known_rim_px, SOFT_RIM_PX
     outer = room(centre, frames.size) - 1.0 if rim is None else rim - _rim_margin(cycles, rim, width)
     edges = _ring_edges(inner_radius(cycles), outer, frames.density)
     if len(edges) <= LEAST_RINGS:
