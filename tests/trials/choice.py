@@ -13,11 +13,12 @@ import pandas as pd
 
 from sweep.analyse import analyse
 from sweep.cameras.simulated import TrueStop
-from sweep.cameras.simulated_draw import Kind, draw
+from sweep.cameras.simulated_draw import Kind
 from sweep.result import Result
 from sweep.station import Station
 from tests.trials.effects import EFFECTS, Case, draw_case, take_sweep, usable
 from tests.trials.rules import RULES, chosen_by_rules
+from tests.trials.stations import draw_station
 from tests.trials.tables import bounds, rms, share, table
 
 KINDS: tuple[Kind, ...] = ("edge", "star", "bars")
@@ -29,7 +30,7 @@ BINS = (0.0, 0.6, 0.8, 0.95, 0.995, 1.0)
 def trial(rng: np.random.Generator) -> Sequence[Mapping[str, object]]:
     """One sweep, analysed, and judged by the truth; the rules beside it."""
     kind = KINDS[int(rng.choice(3, p=[0.7, 0.2, 0.1]))]
-    station, sim = draw(rng, kind, "mono", int(rng.choice([8, 10, 12])))
+    station, sim = draw_station(rng, kind, "mono", int(rng.choice([8, 10, 12])))
     case = draw_case(_stated_prints(station, sim.prints), sim, kind, rng)
     frames = int(rng.integers(2, 9))
     sweep = take_sweep(case, frames, rng)

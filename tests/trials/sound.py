@@ -7,8 +7,8 @@ import pandas as pd
 
 from sweep.analyse import analyse
 from sweep.cameras.simulated import render_sweep, station_truth
-from sweep.cameras.simulated_draw import draw
 from sweep.result import NOTE_CODES
+from tests.trials.stations import draw_station
 from tests.trials.tables import share, table
 
 LAYOUTS = ("mono", "bgr", "rggb", "grbg", "gbrg", "bggr")
@@ -21,7 +21,7 @@ def trial(rng: np.random.Generator) -> Sequence[Mapping[str, object]]:
     bit_depth = int(rng.choice([8, 10, 12]))
     response = ["linear", "srgb", 2.2][int(rng.choice(3, p=[0.7, 0.15, 0.15]))]
     frames = int(rng.integers(2, 9))
-    station, sim = draw(rng, "edge", layout, bit_depth)  # type: ignore[arg-type]
+    station, sim = draw_station(rng, "edge", layout, bit_depth)  # type: ignore[arg-type]
     station = station.model_copy(update={"camera": station.camera.model_copy(update={"response": response})})
     truth = station_truth(station, sim)
     result = analyse(render_sweep(station, sim, rng, frames), station)
@@ -39,13 +39,8 @@ def trial(rng: np.random.Generator) -> Sequence[Mapping[str, object]]:
         "best_at_end": best in (0, len(worst) - 1),
         "stop": result.recommendation.stop,
         "chi2": result.model.reduced_chi2,
-        "loss": _loss(result.recommendation.stop, station.lens.stops, worst),
     }
     return [row]
-
-
-def _loss(stop: float | None, stops: Sequence[float], worst: Sequence[float]) -> float | None:
-    return None if stop is None else max(worst) - worst[stops.index(stop)]
 
 
 TRUE_OR_SAID = {
