@@ -454,8 +454,8 @@ def minimise(
     return solved
 
 
-MOST_STEPS = 60
-ROUGH, FINE = 1e-3, 1e-6
+MOST_STEPS = 40
+ROUGH, FINE = 1e-3, 1e-5
 
 
 def _typical(problem: Problem) -> Floats:
