@@ -108,7 +108,7 @@ class SimulatedHand:
 
     def _turn(self, stop: float) -> None:
         goal = stop
-        if stop == SLIP_AT and not self.slipped:
+        if stop == SLIP_AT and not self.slipped and not self.confirm:  # at its word, a slip would go unseen
             self.slipped = True
             goal = self.stops[min(self.stops.index(stop) + 1, len(self.stops) - 1)]
         self.turning = True
