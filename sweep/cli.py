@@ -162,6 +162,8 @@ def demo(folder: Path | None) -> int:
     from sweep.screens.terminal import Terminal
 
     folder = folder or _free(DEMO_FOLDER)
+    if folder.exists():
+        raise InputError(f"{folder} is there already: the demo wants a new folder. Name another with --into DIR.")
     station = demo_station()
     camera, hand = demo_camera(DEMO_SEED)
     with camera, Terminal(station) as screen:

@@ -33,4 +33,4 @@ def record(camera: Camera, station: Station, station_text: str, folder: Path, sh
 
 
 def _interrupted(folder: Path) -> Interrupted:
-    return Interrupted(f"The run was ended early; its frames are kept in {folder}. The same command takes it up again.")
+    return Interrupted(f"The run was ended early; its frames are kept in {folder}. Record into it again to go on.")

@@ -117,6 +117,7 @@ def test_debug_shows_where_a_fault_arose(folder, asked, capsys):
         (["replay", "{source}", "--set", "need.contrast=much"], "need.contrast"),
         (["record", "{source}/station.toml"], "--into"),
         (["record", "{source}/station.toml", "--into", "{other}/new"], "names no camera"),
+        (["demo", "--into", "{other}"], "new folder"),
     ],
 )
 def test_bad_usage_is_told_in_one_message_that_names_it(folder, asked, words, named, capsys, tmp_path):
