@@ -243,7 +243,13 @@ def _progress_bar() -> Iterator[Callable[[int, int], None] | None]:
 
     with Progress(console=Console(stderr=True), transient=True) as bar:
         task = bar.add_task("Measuring frames", total=None)
-        yield lambda done, total: bar.update(task, completed=done, total=total)
+
+        def show(done: int, total: int) -> None:
+            bar.update(task, completed=done, total=total)
+            if done == total:
+                bar.update(task, description="Fitting the lens")
+
+        yield show
 
 
 def _answer(result: "Result", station: "Station", out: Path | None, as_json: bool) -> int:

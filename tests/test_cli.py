@@ -236,6 +236,7 @@ def test_progress_bar_on_a_terminal(folder, asked, monkeypatch):
     monkeypatch.setattr(sys.stderr, "isatty", lambda: True, raising=False)
     assert cli.main(["replay", str(folder)]) == 0
     asked.progress(3, 8)
+    asked.progress(8, 8)
 
 
 def test_set_changes_keys_of_the_station(folder, asked):
