@@ -284,3 +284,27 @@ def test_derivatives_are_those_of_the_otf(s, w020, w040, w060):
     value, *slopes, by_s = optics.otf(*point, derivatives=True)
     assert_allclose(value, optics.otf(*point), atol=1e-9)
     assert_allclose([by_s, *slopes], slope, atol=5e-5)
+
+
+# Times, to be compared within one run: pytest tests/test_optics.py --benchmark-only
+
+
+@pytest.fixture
+def a_fit_s_points():
+    """What one step of a fit asks: 72 views, 5 wavelengths, 48 frequencies, up to 2 waves."""
+    rng = np.random.default_rng(1)
+    w020, w040 = rng.uniform(-2.0, 2.0, (72, 5, 1)), rng.uniform(0.0, 1.0, (72, 5, 1))
+    return np.linspace(0.01, 0.6, 48), w020, w040
+
+
+@pytest.mark.benchmark(group="otf")
+def test_time_of_the_otf_with_derivatives(benchmark, a_fit_s_points):
+    value, *slopes = benchmark(optics.otf, *a_fit_s_points, derivatives=True)
+    assert all(np.isfinite(v).all() for v in (value, *slopes))
+
+
+@pytest.mark.benchmark(group="otf")
+def test_time_of_one_cosine_a_node_by_numpy(benchmark, a_fit_s_points):
+    # For comparison: the cosines alone of some 12 x 6 nodes a point.
+    phases = np.broadcast_to(a_fit_s_points[1], (72, 5, 48))[..., None] + np.linspace(0.0, 6.0, 72)
+    assert np.isfinite(benchmark(np.cos, phases)).all()
