@@ -51,10 +51,13 @@ def notices(
     """All notices of a sweep, in the order of the table of codes."""
     processed = [] if compressed else _processing(sweep)
     bent = _exposure_response(sweep, station)
+    lamp = [] if bent else _lamp(sweep, light)
+    rippling = station.need.flicker_hz > 0 or any(note.code == "flicker" for note in lamp)
     found = [
         *_frames(sweep, station),
         *_stops_by_light(sweep, light),
-        *([] if bent else _lamp(sweep, light)),
+        *lamp,
+        *([] if rippling or bent else _stray_frames(sweep, light)),
         *_movement(sweep, station),
         *_patches(sweep, readings, station),
         *processed,
@@ -108,7 +111,7 @@ def _frames(sweep: Sweep, station: Station) -> list[Note]:
         out.append(
             Note(
                 "frames-identical",
-                f"{_listed(group)} are the same bit for bit; they count as one measurement. Take the stop again.",
+                f"{_same_frames(group)} the same bit for bit, so they are one measurement. Take the stop again.",
             )
         )
     if sweep.idle_bits and station.camera.bit_depth is not None:
@@ -121,6 +124,12 @@ def _frames(sweep: Sweep, station: Station) -> list[Note]:
             )
         )
     return out
+
+
+def _same_frames(files: Sequence[str]) -> str:
+    """Who is the same: several files, or one that is listed more than once."""
+    names = list(dict.fromkeys(files))
+    return f"{_listed(names)} are" if len(names) > 1 else f"{names[0]} is listed {len(files)} times:"
 
 
 def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
@@ -164,21 +173,34 @@ def _stops_by_light(sweep: Sweep, light: Light) -> list[Note]:
                     "Come to the mark from the wide side and take this stop again.",
                 )
             )
-    noise = max(light.lamp_noise, 1e-4)
-    for frame in light.frames:
-        same = [f.ln_off for f in light.frames if f.stop == frame.stop and f is not frame]
-        if len(same) >= 2 and frame.stop not in named:
-            away = frame.ln_off - float(np.median(same))
-            others = float(np.ptp(same))
-            if abs(away) > max(FRAME_OFF_LN_LIGHT, 3.0 * others, 3.0 * noise):
-                out.append(
-                    Note(
-                        "ring-off",
-                        f"{_f(sweep.stops[frame.stop])}: one frame caught {100 * np.expm1(away):+.0f} % light against "
-                        "the others of this stop: the ring moved between frames. Take this stop again with the ring "
-                        "at rest.",
-                    )
+    return out
+
+
+def _usual_ripple(light: Light) -> float:
+    """What frames usually differ by in light (ln, deviation), a few stray ones apart."""
+    off = np.array([f.ln_off for f in light.frames])
+    return 1.4826 * float(np.median(np.abs(off))) if off.size else 0.0
+
+
+def _stray_frames(sweep: Sweep, light: Light) -> list[Note]:
+    """Stops of which one frame caught another light than the rest: the ring moved in between."""
+    usual = _usual_ripple(light)
+    out: list[Note] = []
+    for k, stop in enumerate(sweep.stops):
+        off = np.array([f.ln_off for f in light.frames if f.stop == k])
+        if len(off) < 2:
+            continue
+        away = off - np.median(off) if len(off) > 2 else np.array([off[1] - off[0]])
+        worst = float(away[np.argmax(np.abs(away))])
+        rest = np.delete(off, int(np.argmax(np.abs(off - np.median(off))))) if len(off) > 2 else off[:1]
+        if abs(worst) > max(FRAME_OFF_LN_LIGHT, 3.0 * float(np.ptp(rest)), 2.0 * CERTAIN * usual):
+            out.append(
+                Note(
+                    "ring-off",
+                    f"{_f(stop)}: one frame caught {100 * np.expm1(worst):+.0f} % light against the others of this "
+                    "stop: the ring moved between frames. Take this stop again with the ring at rest.",
                 )
+            )
     return out
 
 
@@ -193,11 +215,12 @@ def _lamp(sweep: Sweep, light: Light) -> list[Note]:
                 "once more at the end.",
             )
         )
-    if light.lamp_noise > LAMP_RIPPLE and len(light.frames) >= 6:
+    ripple = _usual_ripple(light)
+    if ripple > LAMP_RIPPLE and len(light.frames) >= 6:
         out.append(
             Note(
                 "flicker",
-                f"The light differs by {100 * light.lamp_noise:.1f} % (rms) from frame to frame. Use a steady lamp, "
+                f"The light differs by {100 * ripple:.1f} % (rms) from frame to frame. Use a steady lamp, "
                 "or whole periods of its ripple as exposure, and set need.flicker_hz.",
             )
         )
