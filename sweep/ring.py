@@ -36,6 +36,7 @@ NEAR_STOPS = (0.14, 0.22, math.inf)  # how near the mark a rest must be, to be b
 LEFT_STOPS = 0.08  # the least move that ends a rest
 SHAKING_STOPS = 0.02
 SHAKING_OVER_REST = 3.0
+SHAKING_SAMPLES = 5  # in a row, before it is told
 ARRIVED_STOPS = 0.25
 ARRIVED_OF_GAP = 0.35  # where marks lie closer than full stops
 UNTURNED_STOPS = 0.12
@@ -67,6 +68,7 @@ class Ring:
         self._seen: deque[tuple[float, float]] = deque(maxlen=400)
         self._constants: dict[float, float] = {}
         self._rest_spread: float | None = None
+        self._shaken = 0
         self._left: float | None = None
         self._rest_level: float | None = None
 
@@ -76,6 +78,11 @@ class Ring:
         self._left = self._level(WINDOWS_S[0])
         self._seen.clear()
         self._rest_level = None
+
+    @property
+    def known(self) -> bool:
+        """Whether a stop has been taken, so that marks can be told."""
+        return bool(self._constants)
 
     def see(self, time_s: float, light: float) -> RingView:
         """One more frame: its arrival in seconds, and its light over exposure and gain (any unit, black taken off)."""
@@ -121,7 +128,9 @@ class Ring:
             if abs(slope) > 4 * slope_u:
                 break
         off = self._off(self._seen[-1][1])
-        if abs(slope) < REST_STOPS_S and spread > self._bearable():
+        shakes = abs(slope) < REST_STOPS_S and spread > self._bearable() and _goes_to_and_fro(times, levels)
+        self._shaken = self._shaken + 1 if shakes else 0
+        if self._shaken >= SHAKING_SAMPLES:
             return RingView("shaking", off, spread_stops=spread)
         return RingView("turning", off, spread_stops=spread)
 
@@ -217,3 +226,11 @@ def _line(times: NDArray[np.float64], levels: NDArray[np.float64]) -> tuple[floa
     rest = levels - levels.mean() - slope * centred
     spread = math.sqrt(float(rest @ rest) / max(1, times.size - 2))
     return slope, spread / math.sqrt(power), spread
+
+
+def _goes_to_and_fro(times: NDArray[np.float64], levels: NDArray[np.float64]) -> bool:
+    """Whether the levels keep crossing their own parabola and come back, as in a tremor; a turn's ends do neither."""
+    rest = levels - np.polyval(np.polyfit(times - times[0], levels, 2), times - times[0])
+    crossings = int(np.count_nonzero(np.diff(np.sign(rest))))
+    gone = abs(float(np.median(levels[-3:]) - np.median(levels[:3])))
+    return crossings >= times.size // 4 and gone < 1.5 * float(levels.std())

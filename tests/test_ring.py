@@ -103,8 +103,8 @@ def primed(rng: np.random.Generator, at: np.ndarray, place: int, lit: dict[str, 
     ring = Ring(STOPS)
     for visited in range(place):
         ring.ask(STOPS[visited])
-        times = 3 * visited - 100 + np.cumsum(rng.normal(1 / RATE_HZ, 0.002, 30))
-        for t, value in zip(times, light(rng, times, np.full(30, at[visited]), lit), strict=True):
+        times = 3 * visited - 100 + np.cumsum(rng.normal(1 / RATE_HZ, 0.002, 16))
+        for t, value in zip(times, light(rng, times, np.full(16, at[visited]), lit), strict=True):
             ring.see(t, value)
         ring.taken(STOPS[visited])
     return ring

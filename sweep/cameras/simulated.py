@@ -211,10 +211,14 @@ class Scene:
         rng: np.random.Generator,
         lamp: float = 1.0,
         shift_px: tuple[float, float] = (0.0, 0.0),
+        drawn_at: float | None = None,
     ) -> Pixels:
-        """One frame, as the camera would hand it over; `lamp` = 0 is a capped lens."""
+        """One frame, as the camera would hand it over; `lamp` = 0 is a capped lens.
+
+        drawn_at: the f-number whose sharpness is shown, where it is another than that of the light.
+        """
         sim, camera = self.sim, self.station.camera
-        light = self.picture(f_number, *shift_px) if lamp > 0 else np.zeros(self._pattern.shape, np.float32)
+        light = self.picture(drawn_at or f_number, *shift_px) if lamp > 0 else np.zeros(self._pattern.shape, np.float32)
         per_share = self._pattern * np.float32(sim.light_e_ms * exposure_ms / f_number**2 * lamp)
         full_dn = full_scale_dn(self.station)
 

@@ -20,7 +20,7 @@ from sweep.station import Station
 
 SEED = 20
 READ_OUT_MS = 1.0
-MOVING_STEPS_A_STOP = 4  # pictures are drawn for so many ring positions a stop while it turns
+MOVING_STEPS_A_STOP = 3  # while the ring turns, sharpness follows in steps, the light without
 FULL_WELL_E = 10_000.0
 WIDE_OPEN_MS = 0.28  # exposure that fills the wells with the light tone at the widest stop
 
@@ -73,14 +73,12 @@ class SimulatedCamera:
         if self._started_s is not None:
             time.sleep(max(0.0, self._started_s + self._time_s - time.monotonic()))
         lamp = 0.0 if self._capped else lamp_at(self._sim, begins_s, self._exposure_ms)
-        shift = self._sim.vibration_px * self._rng.standard_normal(2)
+        dx, dy = (float(v) for v in self._sim.vibration_px * self._rng.standard_normal(2))
+        stops = self._move.at(begins_s + self._exposure_ms / 2000)
+        moving = self._move.start_s < begins_s < self._move.start_s + self._move.lasts_s
+        drawn_at = round(stops * MOVING_STEPS_A_STOP) / MOVING_STEPS_A_STOP if moving else stops
         pixels = self._scene.expose(
-            self._f_number(begins_s),
-            self._exposure_ms,
-            self._gain_db,
-            self._rng,
-            lamp,
-            (float(shift[0]), float(shift[1])),
+            2 ** (stops / 2), self._exposure_ms, self._gain_db, self._rng, lamp, (dx, dy), 2 ** (drawn_at / 2)
         )
         return Grab(pixels, self._time_s)
 
@@ -111,12 +109,6 @@ class SimulatedCamera:
     def cap(self, on: bool) -> None:
         """Put the lens cap on, or take it off."""
         self._capped = on
-
-    def _f_number(self, time_s: float) -> float:
-        stops = self._move.at(time_s + self._exposure_ms / 2000)
-        if self._move.start_s < time_s < self._move.start_s + self._move.lasts_s:
-            stops = round(stops * MOVING_STEPS_A_STOP) / MOVING_STEPS_A_STOP
-        return float(2 ** (stops / 2))
 
 
 def open_simulated(station: Station) -> SimulatedCamera:

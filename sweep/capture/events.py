@@ -93,9 +93,10 @@ class StepDone:
 
 @dataclass(frozen=True, slots=True)
 class Trouble:
-    """Something is wrong; the run goes on by itself once it is mended."""
+    """Something is wrong; the run goes on once it is mended. `lost`: the camera is away until a frame comes."""
 
     text: str
+    lost: bool = False
 
 
 @dataclass(frozen=True, slots=True)

@@ -5,8 +5,10 @@ named, waited for, and set again as it was.
 """
 
 import math
-from collections.abc import Generator
+from collections.abc import Generator, Sequence
 from dataclasses import dataclass
+
+import numpy as np
 
 from sweep.cameras import Camera, Grab, Settings
 from sweep.capture.events import Action, Event, Exposed, Score, Seen, Trouble
@@ -22,6 +24,7 @@ LONGEST_MS = 1000.0
 SEARCH_STEPS = 8
 SETTLED_FRAMES = 3
 SETTLED_SHARE = 0.03
+UNSETTLED_FRAMES = 30
 FIRST_TIMEOUT_S = 10.0
 GRAB_TIMEOUT_S = 2.0
 LOST_LIMIT_S = 120.0
@@ -63,6 +66,7 @@ class Live:
         self._last_s = -math.inf
         self._period_s = 0.05
         self._lost = False
+        self.unrest_stops = 0.0  # of the light at rest, rms, as last settled
         self.exposure_ms, self.gain_db = fixed_ms or 10.0, 0.0
         self._settings = self._apply(self.exposure_ms)
         self.meter.light(camera.grab(FIRST_TIMEOUT_S).pixels)
@@ -97,9 +101,10 @@ class Live:
             if not self._paused:
                 return Frame(grab, light, view, action)
 
-    def follow(self, light: Light) -> Generator[Event, Action, None]:
+    def follow(self, frame: Frame) -> Generator[Event, Action, None]:
         """Keep the light in range while the ring turns, without waiting for it to settle."""
-        if self._fixed_ms is not None or self._last_s < self._fresh_s():
+        light = frame.light
+        if self._fixed_ms is not None or self._last_s < self._fresh_s() or frame.view.state == "dark":
             return
         if light.clipped or light.tone > GUIDE_RANGE[1]:
             yield from self._expose(self.exposure_ms / 4)
@@ -115,26 +120,42 @@ class Live:
         for _ in range(SEARCH_STEPS):
             light = frame.light
             if not light.clipped and TONE_RANGE[0] <= light.tone <= TONE_RANGE[1]:
-                return frame
+                break
             aim_ms = self.exposure_ms / 4 if light.clipped else self.exposure_ms * WANTED_TONE / max(light.tone, 0.02)
+            aim_ms = self._whole_periods(min(LONGEST_MS, aim_ms))
+            if self._fixed_ms is None and aim_ms == self.exposure_ms and not light.clipped:
+                break  # as near as whole periods of the ripple come
             before_ms = self.exposure_ms
             if self._fixed_ms is None:
-                yield from self._expose(self._whole_periods(min(LONGEST_MS, aim_ms)))
+                yield from self._expose(aim_ms)
             if math.isclose(self.exposure_ms, before_ms, rel_tol=1e-3):
                 yield Trouble(_out_of_reach(light, self.exposure_ms))
-                return frame
+                break
             frame = yield from self.settled()
         return frame
 
     def settled(self) -> Generator[Event, Action, Frame]:
-        """The first frame after the last change of settings at which a few in a row agree."""
+        """The first frame after the last change of settings at which a few in a row agree.
+
+        A lamp that flickers never settles: after some frames its unrest is taken as it is, and told.
+        """
         row: list[float] = []
         while True:
             frame = yield from self.frame()
             if frame.grab.arrived_s <= self._fresh_s():
                 continue
-            row = [*row[1 - SETTLED_FRAMES :], frame.light.mean]
-            if len(row) == SETTLED_FRAMES and max(row) - min(row) <= SETTLED_SHARE * max(*row, 0.02):
+            row.append(frame.light.mean)
+            last = row[-SETTLED_FRAMES:]
+            if len(last) == SETTLED_FRAMES and max(last) - min(last) <= SETTLED_SHARE * max(*last, 0.02):
+                self.unrest_stops = _unrest(last)
+                return frame
+            if len(row) >= UNSETTLED_FRAMES and frame.view.state != "turning":
+                self.unrest_stops = _unrest(row[-UNSETTLED_FRAMES:])
+                unrest = max(row) / max(min(row), 1e-6) - 1
+                yield Trouble(
+                    f"The light goes up and down by {unrest:.0%} from frame to frame. Use a steady lamp, or state "
+                    "need.flicker_hz."
+                )
                 return frame
 
     def _fresh_s(self) -> float:
@@ -159,7 +180,7 @@ class Live:
                     raise CaptureError(
                         f"{error} It stayed away for {LOST_LIMIT_S:.0f} s; the run stops here."
                     ) from None
-                _obeyed((yield Trouble(str(error))))
+                _obeyed((yield Trouble(str(error), lost=True)))
                 continue
             if self._last_s > -math.inf:
                 self._period_s += 0.2 * (min(grab.arrived_s - self._last_s, 1.0) - self._period_s)
@@ -200,3 +221,8 @@ def _out_of_reach(light: Light, exposure_ms: float) -> str:
     if light.clipped or light.tone > TONE_RANGE[1]:
         return f"Too bright: the light tone is at {light.tone:.0%} at {exposure_ms:g} ms. Dim the lamp."
     return f"Dim: the light tone reaches only {light.tone:.0%} of full scale at {exposure_ms:g} ms. More light helps."
+
+
+def _unrest(means: Sequence[float]) -> float:
+    """The rms of some light levels, in stops."""
+    return float(np.std(np.log2(np.maximum(means, 1e-6))))

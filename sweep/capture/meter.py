@@ -2,6 +2,7 @@
 
 from dataclasses import dataclass
 
+import cv2
 import numpy as np
 from numpy.typing import NDArray
 
@@ -14,6 +15,9 @@ from sweep.station import Station, check_regions
 
 LIGHT_QUANTILE = 0.9  # above the dark side of an edge, inside the brightest channel of a mosaic
 CLIPPED_SHARE = 0.001
+
+
+SHIFT_KINDS = ("edge", "star", "tribar")
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,6 +52,32 @@ class Meter:
             clipped.append(float(np.mean(codes >= curve.size - 1)))
         return Light(max(tones), float(np.mean(means)), max(clipped) > CLIPPED_SHARE)
 
+    def shift_px(self, pixels: Pixels, reference: Pixels) -> float:
+        """How far the whole picture has moved since another frame, px; good for less than about a pixel.
+
+        One step of least squares on brightness differences over all patches with edges (B. D. Lucas and T. Kanade, An
+        iterative image registration technique, IJCAI 1981).
+        """
+        normal, side = np.zeros((2, 2)), np.zeros(2)
+        for _, patch in self._patches:
+            if patch.kind not in SHIFT_KINDS:
+                continue
+            now, then = (self._even(crop(frame, patch.region)) for frame in (pixels, reference))
+            then *= now.mean() / max(1e-9, float(then.mean()))
+            both = (now + then) / 2
+            slopes = np.stack([np.gradient(both, axis=axis)[1:-1, 1:-1].ravel() for axis in (1, 0)])
+            normal += slopes @ slopes.T
+            side += slopes @ (then - now)[1:-1, 1:-1].ravel()
+        if np.linalg.cond(normal) > 1e6:
+            return 0.0
+        across, down = np.linalg.solve(normal, side)
+        return float(np.hypot(across, down))
+
+    def _even(self, patch: Pixels) -> NDArray[np.float64]:
+        """A patch as one channel, smoothed: mosaics lose their pattern, noise most of its slope."""
+        grey = patch.mean(axis=2) if patch.ndim == 3 else patch
+        return np.asarray(cv2.blur(np.asarray(grey, dtype=np.float64), (4, 4)), dtype=np.float64)
+
     def score(self, place: int, pixels: Pixels) -> Score:
         """Contrast at the feature of one target's first edge (by its place in the list), read as in the analysis."""
         target, camera = self._station.targets[place], self._station.camera
@@ -55,7 +85,7 @@ class Meter:
         if edge is None:
             return Score(target.name, None)
         sites = sharpness_sites(camera.layout, edge.region)
-        values = self._scale.linear(sharpness_values(crop(pixels, edge.region), sites) >> self._shift)
+        values = self._scale.linear(np.right_shift(sharpness_values(crop(pixels, edge.region), sites), self._shift))
         measure = read_edge(sites.x, sites.y, values[None, :])
         at = None if measure.transfer is None else measure.transfer.at(self._station.feature_cy_px_at(target.depth_mm))
         return Score(target.name, None if at is None else max(0.0, at[0]))

@@ -14,6 +14,8 @@ from sweep.frames import Pixels, Shot
 from sweep.station import Station
 
 MOVED_STOPS = 0.06
+SHAKEN_PX = 0.2
+SHAKEN_TRIES = 2  # after that, the station shakes by itself: the analysis says so
 CAP_SHARE = 0.02
 CAPPED_FRAMES = 6
 
@@ -66,7 +68,7 @@ class _Run:
         self._plan = plan
         self._skipped: list[float] = []
         self._leaving: float | None = None
-        self._known = False  # whether the ring has been seen at a stop in this run
+        self._shaken = 0  # how often the present stop was taken again for its picture's unrest
         self._offset_s = 1.0 + max((shot.time_s or 0.0 for shot in recorder.shots), default=-1.0)
         self._start_s: float | None = None
         self._of = len(self._stops) + (1 if plan.darks else 0)
@@ -117,7 +119,7 @@ class _Run:
         """One stop, from asking for it to its last frame."""
         self._drop(stop)
         self._live.ring.ask(stop)
-        yield Ask(stop, place + 1, self._of, not self._known, self._leaving)
+        yield Ask(stop, place + 1, self._of, not self._live.ring.known, self._leaving)
         while True:
             action = yield from self._arrival()
             if action in (Action.SKIP, Action.BACK):
@@ -135,30 +137,40 @@ class _Run:
                 return frame.action
             if frame.view.state == "arrived":
                 return Action.NONE
-            yield from self._live.follow(frame.light)
+            yield from self._live.follow(frame)
 
     def _frames(self, stop: float, settled: Frame) -> Steps:
         """All frames of a stop; those of a stop that moves meanwhile are dropped, and it is waited for again."""
-        means: list[float] = []
+        tones: list[float] = []
         for number in range(self._plan.frames):
             frame = yield from self._live.frame()
-            action = frame.action
-            if action in (Action.BACK, Action.SKIP):
+            if frame.action in (Action.BACK, Action.SKIP):
                 self._drop(stop)
-                return "again" if action is Action.BACK else "skip"
-            moved = abs(math.log2(max(frame.light.mean, 1e-6) / max(settled.light.mean, 1e-6))) > MOVED_STOPS
-            if moved or (frame.light.clipped and not settled.light.clipped):
-                yield Trouble(
-                    "The light changed while frames were taken: this stop is taken again. Leave the ring alone."
-                )
+                return "again" if frame.action is Action.BACK else "skip"
+            trouble = self._unfit(frame, settled)
+            if trouble is not None:
+                yield from self._told(Trouble(trouble))
                 return "again"
             self._keep(frame, stop)
-            means.append(frame.light.tone)
+            tones.append(frame.light.tone)
             yield from self._told(Taken(stop, number + 1, self._plan.frames))
         self._live.ring.taken(stop)
-        self._known = True
-        yield from self._told(StepDone(stop, self._live.exposure_ms, float(np.mean(means))))
+        self._shaken = 0
+        yield from self._told(StepDone(stop, self._live.exposure_ms, float(np.mean(tones))))
         return "done"
+
+    def _unfit(self, frame: Frame, settled: Frame) -> str | None:
+        """Why a frame must not be kept, None where nothing is wrong with it."""
+        changed = abs(math.log2(max(frame.light.mean, 1e-6) / max(settled.light.mean, 1e-6)))
+        if changed > max(MOVED_STOPS, 4 * self._live.unrest_stops):
+            return "The light changed while frames were taken. Leave the ring alone; this stop is taken again."
+        if frame.light.clipped and not settled.light.clipped:
+            return "The light tone clips now. This stop is taken again."
+        shift_px = self._live.meter.shift_px(frame.grab.pixels, settled.grab.pixels)
+        if shift_px > SHAKEN_PX and self._shaken < SHAKEN_TRIES:
+            self._shaken += 1
+            return f"The picture moved by {shift_px:.1f} px. Hold camera and parts still; this stop is taken again."
+        return None
 
     def _darks(self) -> Generator[Event, Action, None]:
         """Frames with the lens capped; SKIP leaves them out."""

@@ -10,7 +10,10 @@ CAUTIONS_TITLE = "Before you begin"
 
 @dataclass(frozen=True, slots=True)
 class Board:
-    """The state of the run as shown; `do` and `hint` are what to do now, large and small."""
+    """The state of the run as shown; `do` and `hint` are what to do now, large and small.
+
+    `take`, `go_on`: what to press for these.
+    """
 
     title: str
     stops: tuple[float, ...]
@@ -20,21 +23,30 @@ class Board:
     taken: Taken | None = None
     done: tuple[float, ...] = ()
     trouble: str = ""
+    lost: bool = False
     finished: Finished | None = None
+    take: str = "SPACE"
+    go_on: str = "p"
 
     def after(self, event: Event) -> "Board":
         """The board with one more event on it."""
         match event:
-            case Begin() | Ask():
-                return replace(self, step=event, taken=None)
+            case Begin():
+                return replace(self, step=event)
+            case Ask(stop=stop):
+                # A stop that is asked for again is so because of its trouble.
+                trouble = self.trouble if stop == self.stop else ""
+                # Nor has it any frames.
+                done = tuple(other for other in self.done if other != stop)
+                return replace(self, step=event, taken=None, trouble=trouble, done=done)
             case Seen():
-                return replace(self, seen=event, trouble="" if event.view.state == "arrived" else self.trouble)
+                return replace(self, seen=event, trouble="" if self.lost else self.trouble, lost=False)
             case Taken():
-                return replace(self, taken=event, trouble="")
+                return replace(self, taken=event)
             case StepDone(stop=stop):
                 return replace(self, taken=None, done=self.done if stop is None else (*self.done, stop))
-            case Trouble(text=text):
-                return replace(self, trouble=text, taken=None)
+            case Trouble(text=text, lost=lost):
+                return replace(self, trouble=text, lost=lost, taken=None)
             case Finished():
                 return replace(self, finished=event, step=None)
             case Exposed():
@@ -61,22 +73,20 @@ class Board:
 
     def hint(self) -> str:
         """How it goes, in a line."""
-        if self.trouble:
-            return self.trouble
         if self.seen is not None and self.seen.paused:
-            return "Paused. Press p to go on."
+            return f"Paused. Press {self.go_on} to go on."
         if self.taken is not None:
             return f"Taking frames: {self.taken.number} of {self.taken.of}. Hands off."
         if isinstance(self.step, Ask) and self.seen is not None:
             if self.step.stop is None:
                 return "Waiting for the dark. The frames without light tell the camera's black level."
             if self.step.confirm:
-                return "Take your hand off, then press SPACE."
-            return hint_for(self.seen.view, self.step.stop)
+                return f"Take your hand off, then press {self.take}."
+            return hint_for(self.seen.view, self.step.stop, self.take)
         return ""
 
 
-def hint_for(view: RingView, stop: float) -> str:
+def hint_for(view: RingView, stop: float, take: str) -> str:
     """One line on where the ring stands, for the hand."""
     off = view.off_stops or 0.0
     there = f"f/{stop:g}"
@@ -90,7 +100,7 @@ def hint_for(view: RingView, stop: float) -> str:
         case "shaking":
             return "The light is unsteady. Take your hand off the ring."
         case "resting":
-            return f"At rest. Press SPACE if this is {there}."
+            return f"At rest. Press {take} if this is {there}."
         case "arrived":
             return f"There: {there}. Hands off the ring."
         case "not turned":
@@ -98,7 +108,8 @@ def hint_for(view: RingView, stop: float) -> str:
         case "wrong way":
             return f"Wrong way. {'Close' if off < 0 else 'Open'} the ring: {_away(off)}."
         case "past":
-            return f"Too far{f', at f/{view.at:g}' if view.at else ''}. Turn back {abs(off):.1f} stop."
+            where = f"Too far, at f/{view.at:g}" if view.at else f"Too far by {abs(off):.1f} stop"
+            return f"{where}. Turn back beyond {there}, then come to it again."
         case "between":
             return f"Not there yet: {_away(off)}."
 

@@ -130,8 +130,8 @@ def picture(board: Board, console: Console) -> RenderableType:
     rows.append(Text(board.do(), style="bold"))
     if board.stop is not None:
         rows += [Text(""), *(_inked(line, full) for line in _large(f"f/{board.stop:g}")), Text("")]
-    rows.append(Text(board.hint(), style="bold reverse" if board.trouble else "bold", overflow="fold"))
-    rows.append(Text(""))
+    rows.append(Text(board.hint(), style="bold", overflow="fold"))
+    rows.append(Text(board.trouble, style="bold reverse"))
     if board.seen is not None:
         rows += list(_gauges(board, board.seen, full))
     return Group(*rows, Text(""), _progress(board, full), Text(KEY_LINE, style="dim", no_wrap=True, overflow="crop"))
