@@ -16,7 +16,7 @@ LEVELS = (
     ("readings", "choose", "fit"),
     ("light", "figures", "outlook"),
     ("notices", "verdict"),
-    ("analyse", "compare", "capture"),
+    ("analyse", "compare", "capture", "framing"),
     ("forecast", "report", "screens", "demo", "record"),
     ("cli",),
     ("__main__",),
