@@ -17,7 +17,7 @@ LEVELS = (
     ("light", "figures", "outlook"),
     ("notices", "verdict"),
     ("analyse", "compare", "capture", "framing"),
-    ("forecast", "report", "screens", "demo", "record"),
+    ("forecast", "report", "screens", "demo", "record", "frame"),
     ("cli",),
     ("__main__",),
 )
