@@ -229,7 +229,6 @@ def _evidence(sweep: Sweep, light: Light, fit: LensFit | None, station: Station)
     out = []
     for k, stop in enumerate(sweep.stops):
         here = sweep.at(stop)
-        told = {s.site.target for s in here if s.ok and s.kind != "flat"}
         known = bool(np.isfinite(light.f_number[k]))
         tone = tones[k]
         swept = max((s for s in here if s.ok), key=lambda s: float(s.exposures.max()), default=None)
@@ -239,13 +238,25 @@ def _evidence(sweep: Sweep, light: Light, fit: LensFit | None, station: Station)
                 f_number_by_light=float(light.f_number[k]) if known else None,
                 f_number_by_light_u=float(light.u[k]) if known else None,
                 tone_per_ms=tone / sweep.scale.span_dn if tone is not None else None,
-                sound=told == set(range(len(station.targets))),
+                sound=_sound(here, fit, station),
                 snr_swept_db=_snr_swept_db(here, tone),
                 exposure_swept_ms=float(swept.exposures.max()) if swept is not None else None,
                 frames=max((s.frames for s in here), default=0),
             )
         )
     return out
+
+
+def _sound(here: Sequence[Sighting], fit: LensFit | None, station: Station) -> bool:
+    """Whether a stop may be recommended: nothing clipped or too dark, and each target read, or told by the model.
+
+    A target that is blurred beyond its region can't be read, however often it is taken again; there the model speaks.
+    """
+    sharp = [s for s in here if s.kind in SHARPNESS_KINDS]
+    if any(code in s.why_not for s in sharp for code in ("frames-saturated", "low-signal")):
+        return False
+    told = {s.site.target for s in sharp if s.ok}
+    return bool(told) and (fit is not None or told == set(range(len(station.targets))))
 
 
 def _snr_swept_db(here: Sequence[Sighting], tone: float | None) -> float | None:

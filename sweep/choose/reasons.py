@@ -172,15 +172,13 @@ def _motion(best: Candidate, station: Station) -> list[str]:
 
 
 def _retakes(picked: Pick | None, candidates: Sequence[Candidate], station: Station, camera: CameraNoise) -> list[Note]:
-    """Stops without a sound reading that the model thinks would win."""
+    """Stops without a sound reading: all of them in one note where none has one, else those that would win."""
+    unread = [c for c in candidates if not c.readable]
+    if picked is None:
+        return [_nothing_read(unread, candidates)] if unread else []
     found = []
-    for c in candidates:
-        if c.readable:
-            continue
+    for c in unread:
         tone = _tone_by_marks(c, candidates)
-        if picked is None:
-            found.append(Note("no-reading", f"{c.name} has no sound reading at every target.{_how_again(c, tone)}"))
-            continue
         lit = setting_for(replace(c.evidence, tone_per_ms=tone), station, camera)
         if lit.fails and not picked.best.setting.fails:
             continue
@@ -194,6 +192,17 @@ def _retakes(picked: Pick | None, candidates: Sequence[Candidate], station: Stat
                 )
             )
     return found
+
+
+def _nothing_read(unread: Sequence[Candidate], candidates: Sequence[Candidate]) -> Note:
+    """One note for a sweep of which no stop could be read."""
+    names = ", ".join(c.name for c in unread)
+    text = (
+        f"No sound reading at {names}. Where patches are clipped or dark, take the stops again; where they are blurred "
+        "beyond their region, enlarge the regions, move the focus, or sweep smaller stops."
+    )
+    first = unread[0]
+    return Note("no-reading", text + _how_again(first, _tone_by_marks(first, candidates)))
 
 
 def _how_again(candidate: Candidate, tone_per_ms: float | None) -> str:
