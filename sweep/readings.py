@@ -184,7 +184,9 @@ def measure_sweep(source: Source, station: Station, progress: Progress | None = 
         stops.append(stop)
         sightings += pass_.stop(stop, list(group), sites, scale)
     sightings = _with_bars_contrasts(_with_star_curves(pass_.look_again(sightings)))
-    points = [p for s in sightings for p in s.noise if s.saturated_fraction < CLIPPED_SHARE] + list(black.noise)
+    lit = [p for s in sightings for p in s.noise if s.saturated_fraction < CLIPPED_SHARE]
+    sightings = _with_shared_noise(sightings, lit)
+    points = lit + list(black.noise)
     return Sweep(
         tuple(stops),
         tuple(sightings),
@@ -408,6 +410,30 @@ def _with_star_curves(sightings: list[Sighting]) -> list[Sighting]:
         for i, curve in zip(places, star_curves([out[i].star for i in places], site.spec.modulation), strict=True):
             out[i] = replace(out[i], star_curve=curve)
     return out
+
+
+_CORRELATION_MATTERS = 0.03
+
+
+def _with_shared_noise(sightings: list[Sighting], points: Sequence[NoisePoint]) -> list[Sighting]:
+    """The stars with the u that noise shared between neighbours leaves: its variance grows by (1 + r) / (1 - r)."""
+    if not points:
+        return sightings
+    shared = np.average([p.correlation for p in points], axis=0, weights=[p.dof for p in points])
+    shared = np.where(shared > _CORRELATION_MATTERS, np.minimum(shared, 0.6), 0.0)
+    factor = float(np.sqrt(np.prod((1.0 + shared) / (1.0 - shared))))
+    if factor == 1.0:
+        return sightings
+    return [_less_sure_star(s, factor) for s in sightings]
+
+
+def _less_sure_star(sighting: Sighting, factor: float) -> Sighting:
+    star, curve = sighting.star, sighting.star_curve
+    if star is None or star.rings is None or curve is None:
+        return sighting
+    rings = replace(star.rings, u=star.rings.u * factor, astigmatic_u=star.rings.astigmatic_u * factor)
+    transfer = replace(curve.transfer, u=curve.transfer.u * factor)
+    return replace(sighting, star=replace(star, rings=rings), star_curve=replace(curve, transfer=transfer))
 
 
 def _with_bars_contrasts(sightings: list[Sighting]) -> list[Sighting]:
