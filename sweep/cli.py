@@ -8,7 +8,7 @@ import sys
 import tomllib
 import traceback
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import ExitStack, contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -23,9 +23,12 @@ os.environ.setdefault(
 
 if TYPE_CHECKING:
     from sweep.result import Result
+    from sweep.screens import Screen
+    from sweep.screens.page import Door
     from sweep.station import Station
 
 NEED_NOT_MET = 1
+LOOPBACK = "127.0.0.1"
 PATH = click.Path(path_type=Path)
 DEMO_SEED = 1
 DEMO_FOLDER = "sweep-demo"
@@ -71,6 +74,13 @@ def sweep() -> None:
 
 
 out_option = click.option("--out", type=PATH, metavar="DIR", help="Write record, plot, result.json and tables to DIR.")
+camera_option = click.option(
+    "--camera", "camera_name", metavar="SOURCE", help="Camera, if not camera.source of the station file."
+)
+page_option = click.option("--page", is_flag=True, help="Show it in browsers too, as on a tablet beside the lens.")
+bind_option = click.option(
+    "--bind", metavar="ADDRESS", help=f"Where the page listens, if not at {LOOPBACK} (this computer only); asks for it."
+)
 json_option = click.option("--json", "as_json", is_flag=True, help="Print result.json instead of the answer in words.")
 
 
@@ -111,31 +121,71 @@ def replay(
     required=True,
     help="New folder for the recording, or one to take up again.",
 )
-@click.option("--camera", "camera_name", metavar="SOURCE", help="Camera, if not camera.source of the station file.")
+@camera_option
 @click.option(
     "--out",
     type=PATH,
     metavar="DIR",
     help=f"Write record, plot and tables to DIR instead of {RESULT_FOLDER} in --into.",
 )
-def record(station_file: Path, folder: Path, camera_name: str | None, out: Path | None) -> int:
+@page_option
+@bind_option
+def record(
+    station_file: Path, folder: Path, camera_name: str | None, out: Path | None, page: bool, bind: str | None
+) -> int:
     """Guide through all stops at the camera, keep the frames, then answer as replay does.
 
     SOURCE: a device number, a URL, a video file, folder:PATH, genicam:ADDRESS or simulated.
     """
     station = _load(station_file)
-    source = camera_name or station.camera.source
-    if source is None:
-        raise StationError(f"{station_file} names no camera. Add camera.source, or --camera SOURCE.")
+    source = _camera_source(camera_name, station, station_file)
     out = out or folder / RESULT_FOLDER
     _see_that_results_fit(out)
     from sweep.cameras import open_camera
     from sweep.record import record as run
     from sweep.screens.terminal import Terminal
 
-    with open_camera(source, station) as camera, Terminal(station) as screen:
-        run(camera, station, station_file.read_text(encoding="utf-8-sig"), folder, screen)
-    return _replay(folder, station, out)
+    with ExitStack() as stack:
+        screen: Screen = Terminal(station)
+        tell = None
+        if page or bind:
+            from sweep.screens.page import Beside, RunPage
+
+            run_page = stack.enter_context(RunPage(station, _door(bind)))
+            screen, tell = Beside(run_page, screen, has_keys=sys.stdin.isatty()), run_page.show_answer
+        with open_camera(source, station) as camera, screen:
+            run(camera, station, station_file.read_text(encoding="utf-8-sig"), folder, screen)
+        return _replay(folder, station, out, tell=tell)
+
+
+@sweep.command()
+@click.argument("station_file", type=PATH, metavar="STATION.toml")
+@camera_option
+@page_option
+@bind_option
+def frame(station_file: Path, camera_name: str | None, page: bool, bind: str | None) -> int:
+    """Point the camera and place the patches: say what each patch shows, and what to do about it.
+
+    With --page the patches can be moved in a browser, and saved in the station file. Status 1: a patch cannot be read.
+    """
+    station = _load(station_file)
+    source = _camera_source(camera_name, station, station_file)
+    from rich.console import Console
+
+    from sweep.cameras import open_camera
+    from sweep.frame import look, set_up
+    from sweep.screens.frame_table import frame_table
+
+    with ExitStack() as stack:
+        if page or bind:
+            from sweep.screens.page import FramePage
+
+            frame_page = stack.enter_context(FramePage(_door(bind)))
+            sight = set_up(stack.enter_context(open_camera(source, station)), station_file, frame_page)
+        else:
+            sight = look(stack.enter_context(open_camera(source, station)), station_file)
+    Console().print(frame_table(sight))
+    return NEED_NOT_MET if any(check.status == "bad" for check in sight.checks) else 0
 
 
 @sweep.command()
@@ -169,6 +219,25 @@ def demo(folder: Path | None) -> int:
     with camera, Terminal(station) as screen:
         run(camera, station, DEMO_STATION, folder, with_hand(hand, screen))
     return _replay(folder, station, folder / RESULT_FOLDER)
+
+
+def _camera_source(name: str | None, station: "Station", station_file: Path) -> str:
+    source = name or station.camera.source
+    if source is None:
+        raise StationError(f"{station_file} names no camera. Add camera.source, or --camera SOURCE.")
+    return source
+
+
+def _door(bind: str | None) -> "Door":
+    """Listen for browsers, and say where."""
+    from rich.console import Console
+
+    from sweep.screens.page import invitation, open_door
+
+    door = open_door(bind or LOOPBACK)
+    console = Console()
+    console.print(invitation(door, console))
+    return door
 
 
 def _load(station_file: Path) -> "Station":
@@ -222,13 +291,23 @@ def _see_that_results_fit(out: Path | None) -> None:
         check_out(out)
 
 
-def _replay(source: Path, station: "Station", out: Path | None, as_json: bool = False, leave_out: bool = False) -> int:
+def _replay(
+    source: Path,
+    station: "Station",
+    out: Path | None,
+    as_json: bool = False,
+    leave_out: bool = False,
+    tell: "Callable[[Result, Station], None] | None" = None,
+) -> int:
+    """Analyse, answer, and `tell` it elsewhere too."""
     from sweep.analyse import analyse
     from sweep.recording import open_source
 
     frames = open_source(source, leave_out_bad_frames=leave_out, station=station)
     with _progress_bar() as progress:
         result = analyse(frames, station, progress)
+    if tell is not None:
+        tell(result, station)
     return _answer(result, station, out, as_json)
 
 
