@@ -118,14 +118,80 @@ class Bars:
         return self.light + (self.dark - self.light) * dark
 
 
+@dataclass(frozen=True)
+class Tribar:
+    """Two groups of a 1951 tri-bar target: `width_px` is the bar width of element 1 of the larger one.
+
+    Elements 2 to 6 stand in a row, each set 8.6 of its bar widths from the next and 6.8 from its partner, element 1 at
+    the far side; the next group stands at half the size inside (proportions measured on a photograph of a target).
+    """
+
+    width_px: float = 9.0
+    turn_deg: float = 17.0
+    mirrored: bool = False
+    centre: tuple[float, float] = (150.0, 150.0)
+    light: float = 1000.0
+    dark: float = 200.0
+
+    def sets(self) -> list[tuple[int, bool, float, float, float]]:
+        """Of each set: number of its element from element 1 of the larger group; bars upright; x, y and bar width."""
+        out = []
+        for group, (ox, oy) in ((0, (0.0, 0.0)), (1, (-7.0, 6.0))):
+            shrink = self.width_px / 2**group
+            x = -14.0
+            for element in range(1, 6):
+                r = 2 ** (-element / 6)
+                out += [(6 * group + element, False, ox * self.width_px + x * shrink, oy * self.width_px, r * shrink)]
+                out += [
+                    (
+                        6 * group + element,
+                        True,
+                        ox * self.width_px + x * shrink,
+                        oy * self.width_px - 6.8 * r * shrink,
+                        r * shrink,
+                    )
+                ]
+                x += 8.6 * r
+            far, low = 12.0 * shrink + (ox + 3 * group) * self.width_px, (5.0 + oy) * self.width_px / (1 + group)
+            out += [(6 * group, False, far, low, shrink), (6 * group, True, far, low + 6.8 * shrink, shrink)]
+        return [(k, upright, *self.place(x, y), w) for k, upright, x, y, w in out]
+
+    def place(self, x: float, y: float) -> tuple[float, float]:
+        """From the target's own coordinates to pixels."""
+        t = np.radians(self.turn_deg)
+        x = -x if self.mirrored else x
+        return (
+            float(self.centre[0] + x * np.cos(t) - y * np.sin(t)),
+            float(self.centre[1] + x * np.sin(t) + y * np.cos(t)),
+        )
+
+    def print(self, x: Floats, y: Floats, step: float) -> Floats:
+        """Tone at points of a grid of that step."""
+        covered = np.zeros(np.broadcast_shapes(x.shape, y.shape))
+        for _, upright, cx, cy, w in self.sets():
+            t = np.radians(self.turn_deg + (90 if upright else 0))
+            near_x, near_y = np.abs(x[0] - cx) < 4 * w, np.abs(y[:, 0] - cy) < 4 * w
+            dx, dy = x[:, near_x] - cx, y[near_y] - cy
+            along, across = dx * np.cos(t) + dy * np.sin(t), -dx * np.sin(t) + dy * np.cos(t)
+            bars = sum(_covered(w / 2 - np.abs(across - k * w), step) for k in (-2, 0, 2))
+            covered[np.ix_(near_y, near_x)] += bars * _covered(2.5 * w - np.abs(along), step)
+        return self.light + (self.dark - self.light) * np.minimum(covered, 1)
+
+
 def _covered(distance: Floats, step: float) -> Floats:
     return np.clip(0.5 + distance / step, 0, 1)
 
 
-def render(pattern: Star | Bars, size: tuple[int, int], blur: Blur, shift: tuple[float, float] = (0.0, 0.0)) -> Floats:
-    """The image, (height, width), of a print; its surround goes on for half of its size beyond the borders."""
+def render(
+    pattern: Star | Bars | Tribar,
+    size: tuple[int, int],
+    blur: Blur,
+    shift: tuple[float, float] = (0.0, 0.0),
+    beyond: float = 0.5,
+) -> Floats:
+    """The image, (height, width), of a print, whose surround goes on `beyond` its borders by that part of its size."""
     width, height = size
-    pad = (width // 2 // 2 * 2, height // 2 // 2 * 2)
+    pad = (int(beyond * width), int(beyond * height))
     nx, ny = (width + 2 * pad[0]) * FINER, (height + 2 * pad[1]) * FINER
     x = (np.arange(nx) + 0.5) / FINER - 0.5 - pad[0] - shift[0]
     y = (np.arange(ny) + 0.5) / FINER - 0.5 - pad[1] - shift[1]
