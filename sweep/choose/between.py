@@ -72,6 +72,10 @@ def rises_outward(outlook: Outlook, f_number: float, narrower: bool) -> bool:
     return not len(outside) and at > inward
 
 
+LEAST_CONTRAST = 0.1
+"""Below it a comparison in percent says nothing to a person at the ring."""
+
+
 def between_marks(
     best: Candidate, candidates: Sequence[Candidate], station: Station, camera: CameraNoise, outlook: Outlook
 ) -> Between | None:
@@ -96,7 +100,7 @@ def between_marks(
     top = max(kept, key=lambda k: float(worst[k]))
     order = np.argsort(grid)
     at_mark = float(np.interp(best.f_number, grid[order], np.maximum(curve * best.blur, 0.0).min(axis=1)[order]))
-    if at_mark <= 0 or worst[top] <= (1 + TIE) * at_mark:
+    if at_mark < LEAST_CONTRAST or worst[top] <= (1 + TIE) * at_mark:
         return None
     f_number = float(grid[top])
     wider, narrower = (near[0], best) if f_number < best.f_number else (best, near[-1])
