@@ -103,10 +103,14 @@ def read_tribar(
         return TribarMeasure(False, ("pattern-not-found",))
     if np.mean(~good) > SATURATED_LIMIT:
         return TribarMeasure(False, ("frames-saturated",))
+    level = float(np.mean(values[good] / 1e3)) * 1e3 if good.any() else 0.0
+    if not 0 < level < np.inf:
+        return TribarMeasure(False, ("low-signal",))
+    values = values / level
     image = _image(x, y, values, good)
     if image is None:
         return TribarMeasure(False, ("low-signal",))
-    noise = _noise(values, good) / float(np.mean(values[good]))
+    noise = _noise(values, good)
     if near is not None and near.ok:
         places = [Place(s.number, s.across, *s.centre_px, s.width_px, s.seen) for s in near.sets]
         return _measure(image, np.radians(near.angle_deg), places, noise, near.um_per_px, near.light_bars)
@@ -126,14 +130,10 @@ def _measure(
 
 
 def _image(x: Floats, y: Floats, values: Floats, good: Bools) -> Floats | None:
-    """The mean frame on a grid, holes filled by their neighbours, as parts of its mean level; None without light."""
+    """The mean frame on a grid, holes filled by their neighbours; None where it is mostly noise."""
     counts = good.sum(axis=0)
     mean = np.where(good, values, 0.0).sum(axis=0) / np.maximum(counts, 1)
-    level = float(mean[counts > 0].mean())
-    if not np.isfinite(level) or level <= 0:
-        return None
-    mean = mean / level
-    if float(mean[counts > 0].std()) > 3:
+    if np.abs(mean).max() > 1e6 or float(mean[counts > 0].std()) > 3:
         return None
     rows, columns = np.rint(y).astype(int), np.rint(x).astype(int)
     image = np.zeros((int(rows.max()) + 1, int(columns.max()) + 1))
@@ -144,7 +144,7 @@ def _image(x: Floats, y: Floats, values: Floats, good: Bools) -> Floats | None:
 
 
 def _noise(values: Floats, good: Bools) -> float:
-    """Noise of a pixel of the mean frame, unit of the samples, from the differences of two frames; 0 for one frame."""
+    """Noise of a pixel of the mean frame, unit of the samples, from the difference of two frames; 0 for one frame."""
     both = good[0] & good[-1]
     if len(values) < 2 or both.sum() < 2:
         return 0.0
