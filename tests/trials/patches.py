@@ -78,23 +78,27 @@ def star(
     return _seen((size_px, size_px), drawn)
 
 
-def bars(
-    size: tuple[int, int], v_xy: tuple[float, float], phase: float, room_px: float | None
-) -> Callable[[Blur], Floats]:
-    """Bars of frequency vector `v_xy` (cycles/px); light around them from `room_px` within the border on, if given."""
+def bars(size: tuple[int, int], v_xy: tuple[float, float], dark_bars: int | None) -> Callable[[Blur], Floats]:
+    """Bars of frequency vector `v_xy` (cycles/px), a dark one in the middle: right across, or a set of an odd number.
+
+    The bars of a set are as long as it is wide; around it is the light of the gaps.
+    """
     v = math.hypot(*v_xy)
     width, height = size
+    across = (v_xy[0] / v, v_xy[1] / v)
+    reach_px = None if dark_bars is None else (2 * dark_bars - 1) / (4 * v)
 
     def drawn(x: Floats, y: Floats) -> Floats:
-        place = (x * v_xy[0] + y * v_xy[1]) + phase
-        nearest = np.round(2 * place)
-        ahead = (place - nearest / 2) / v * np.where(nearest % 2 == 0, 1, -1)
-        lit = _covered(ahead, v_xy[0] / v, v_xy[1] / v)
-        if room_px is None:
+        dx, dy = x - (width - 1) / 2, y - (height - 1) / 2
+        place = dx * across[0] + dy * across[1]
+        # Boundaries at every odd quarter of the period; the middle bar is dark.
+        nearest = np.round(2 * v * place + 0.5) - 0.5
+        ahead = (place - nearest / (2 * v)) * np.where(np.round(nearest + 0.5) % 2 == 0, -1, 1)
+        lit = _covered(ahead, *across)
+        if reach_px is None:
             return np.asarray(lit)
-        across = np.minimum(x + 0.5, width - 0.5 - x) - room_px
-        down = np.minimum(y + 0.5, height - 0.5 - y) - room_px
-        inside = _covered(across, 1.0, 0.0) * _covered(down, 0.0, 1.0)
+        length = dy * across[0] - dx * across[1]
+        inside = _covered(reach_px - np.abs(place), *across) * _covered(reach_px - np.abs(length), across[1], across[0])
         return np.asarray(1 - inside * (1 - lit))
 
     return _seen(size, drawn)

@@ -73,17 +73,26 @@ def _star(rng: np.random.Generator) -> list[Row]:
 def _bars(rng: np.random.Generator) -> list[Row]:
     blurs = [draw_blur(rng, float(half)) for half in (0.35, *np.exp(rng.uniform(math.log(0.08), math.log(0.4), 2)))]
     size = (int(rng.integers(50, 111)), int(rng.integers(50, 111)))
-    v = 1 / rng.uniform(4, min(size) / 5)
+    side_px = (min(size) - 8) / 1.2  # of a set that stays inside when turned
+    v = 1 / rng.uniform(4, side_px / 4.6)
     direction = math.radians(90 * int(rng.integers(2)) + float(rng.uniform(-12, 12)))
     look = draw_look(rng)
     modulation = (look.light_dn - look.dark_dn) / (look.light_dn + look.dark_dn)
-    room = rng.uniform(5, 8) if rng.integers(2) else None
-    draw = bars(size, (v * math.cos(direction), v * math.sin(direction)), rng.uniform(0, 1), room)
+    most = int(side_px * v + 0.5)
+    dark_bars = most - (most % 2 == 0) if rng.integers(2) else None
+    draw = bars(size, (v * math.cos(direction), v * math.sin(direction)), dark_bars)
     patch = Patch(kind="bars", region=(0, 0, *size), period_um=round(OBJECT_UM / v, 3), modulation=round(modulation, 4))
     curves = [blur.along(FINE, direction) for blur in blurs]
     rows = _read(patch, [draw(blur) for blur in blurs], blurs, curves, look, v, rng)
     return [
-        {**row, "room": None, "surround": room is not None, "stated": True, "across_px": size[0], "along_px": size[1]}
+        {
+            **row,
+            "room": None,
+            "surround": dark_bars is not None,
+            "stated": True,
+            "across_px": size[0],
+            "along_px": size[1],
+        }
         for row in rows
     ]
 
