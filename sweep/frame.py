@@ -32,8 +32,10 @@ SHORTEST_MS, LONGEST_MS = 0.001, 1000.0
 GRAB_S = 0.25  # wishes are heard at least so often
 PATIENCE_S = 3.0
 FIRST_S = 10.0
-CHECK_S = 0.3
+LATENCY_S = 0.1
 SETTLED_FRAMES = 2
+TOO_BRIGHT = "The picture is too bright. Dim the lamp, or set a shorter exposure on the camera."
+TOO_DARK = "The picture is too dark. Give it more light, open the ring, or set a longer exposure on the camera."
 LOOKS = 60
 
 
@@ -57,7 +59,8 @@ def set_up(camera: Camera, station_file: Path, show: Show) -> Sight:
                 trouble, light.lost = str(error), True
         else:
             pixels, waited_s = grab.pixels, 0.0
-            trouble = light.follow(grab)
+            light.follow(grab)
+            trouble = light.trouble
             # One patch a frame, so that no wish waits for all of them.
             turn = (turn + 1) % len(checks)
             checks[turn] = check_patch(pixels, desk.station, turn)
@@ -166,27 +169,28 @@ class _Light:
         self._settings: Settings = camera.set(exposure_ms=10.0, gain_db=0.0)
         self.exposure_ms = self._settings.exposure_ms
         self.tone: float | None = None
+        self.trouble = ""
         self.lost = False
 
-    def follow(self, grab: Grab) -> str:
-        """Look at one frame, and set the exposure anew where it asks for it; what is wrong with the light, if it is."""
+    def follow(self, grab: Grab) -> None:
+        """Look at one frame, and set the exposure anew where it asks for it; `trouble` is what cannot be helped so."""
         if self.lost:  # a camera that was opened again has forgotten its settings
             self.lost = not self._set(self.exposure_ms)
-            return ""
-        if grab.arrived_s <= self._settings.at_s + (self.exposure_ms or 0) / 1000 + 0.1:
-            return ""
+            return
+        if grab.arrived_s <= self._settings.at_s + (self.exposure_ms or 0) / 1000 + LATENCY_S:
+            return
         self.tone = light_tone(grab.pixels, self._station.camera)
+        self.trouble = ""
         if TONE_RANGE[0] <= self.tone <= TONE_RANGE[1]:
-            return ""
+            return
         before_ms = self.exposure_ms
         if before_ms is not None:
             factor = 0.25 if self.tone >= 1 else min(20.0, WANTED_TONE / max(self.tone, 0.01))
-            self._set(min(LONGEST_MS, max(SHORTEST_MS, before_ms * factor)))
-            if self.exposure_ms != before_ms:
-                return ""
-        if self.tone > TONE_RANGE[1]:
-            return "The picture is too bright. Dim the lamp, or set a shorter exposure on the camera."
-        return "The picture is too dark. Give it more light, open the ring, or set a longer exposure on the camera."
+            wanted_ms = min(LONGEST_MS, max(SHORTEST_MS, before_ms * factor))
+            if wanted_ms != before_ms and self._set(wanted_ms) and self.exposure_ms != before_ms:
+                return
+        bright = self.tone > TONE_RANGE[1]
+        self.trouble = TOO_BRIGHT if bright else TOO_DARK
 
     def _set(self, exposure_ms: float | None) -> bool:
         try:

@@ -97,6 +97,7 @@ class Tab:
 
     def go(self, address: str) -> None:
         self.call("Page.navigate", url=address)
+        self.wait(f"location.href.startsWith({json.dumps(address)}) && document.readyState === 'complete'")
 
     def close(self) -> None:
         self._browser.call("Target.closeTarget", targetId=self._target)

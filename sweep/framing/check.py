@@ -20,6 +20,7 @@ from sweep.measure.linear import Floats, Scale, Sites, crop, sharpness_sites, sh
 from sweep.measure.star import StarMeasure, read_star
 from sweep.measure.star_find import NYQUIST_CY_PX, inner_radius, room
 from sweep.measure.star_level import star_curves
+from sweep.measure.tribar import read_tribar
 from sweep.notices import BENT_PX, RAGGED_PX
 from sweep.result import NOTE_CODES
 from sweep.station import Camera, Patch, Station, Target
@@ -35,7 +36,7 @@ STAR_MARGIN_PX = 6.0
 OFF_CENTRE_SHARE = 0.1
 PERIODS_NEEDED, PERIODS_WANTED = 3.0, 5.0
 BARS_BORDER_PX = 3.0
-PERIOD_SHARE = 0.12
+SCALE_SHARE = 0.03  # neighbouring elements differ by 12 %, so that more than 6 % goes for another element
 LEAST_FLAT_PX = 1000  # pixels of an even area, common practice, no source
 UNEVEN_SHARE = 0.05
 BLOCK_PX = 8
@@ -97,7 +98,7 @@ def _check(pixels: Pixels, station: Station, target: Target, patch: Patch) -> Fi
     figures, work = _light(tone, clipped)
     if tone < LEAST_TONE and not clipped:
         return figures, work
-    more = {"edge": _edge, "star": _star, "bars": _bars, "flat": _flat}[patch.kind](
+    more = {"edge": _edge, "star": _star, "bars": _bars, "tribar": _tribar, "flat": _flat}[patch.kind](
         sites, values[None, :] / scale.span_dn, station, target, patch
     )
     return figures + more[0], work + more[1]
@@ -259,6 +260,36 @@ def _bars(sites: Sites, values: Floats, station: Station, target: Target, patch:
             Work(
                 f"Only {periods:.1f} bars with their gaps are in it. Make it larger: {PERIODS_WANTED:g} or more.",
                 periods < PERIODS_NEEDED,
+            )
+        )
+    return figures, work
+
+
+def _tribar(sites: Sites, values: Floats, station: Station, target: Target, patch: Patch) -> Findings:
+    size = Figure("size", _size(*patch.region[2:]))
+    pixel_um = station.object_um_per_px_at(target.depth_mm)
+    found = read_tribar(sites.x, sites.y, values, None, patch.group or 0, pixel_um)
+    if not found.ok:
+        return [size], [Work(f"No sets of three bars are found. {NOTE_CODES['pattern-not-found'].remedy}", True)]
+    smallest = found.smallest
+    told = (
+        "none" if smallest is None else f"group {smallest.group} element {smallest.element}, {smallest.line_um:.0f} µm"
+    )
+    off = abs(found.um_per_px / pixel_um - 1)
+    figures = [
+        size,
+        Figure("told apart", told, f"{station.need.feature_um:g} µm, at the stop to be found"),
+        Figure("pixel", f"{found.um_per_px:.3g} µm", f"{pixel_um:.3g} µm by the file", off <= SCALE_SHARE),
+    ]
+    work = []
+    if smallest is None:
+        work.append(Work("Its largest bars cannot be told apart. Focus, or use a larger target.", False))
+    if off > SCALE_SHARE:
+        work.append(
+            Work(
+                f"By its bars a pixel is {found.um_per_px:.3g} µm wide there, by the station file {pixel_um:.3g} µm. "
+                "Check object_um_per_px, depth_mm and group.",
+                False,
             )
         )
     return figures, work

@@ -130,10 +130,10 @@ class PageServer:
             sent, sent_s = None, time.monotonic()
             while True:
                 closing = self._closing
-                now = (self._subject.version, self._seats.acts(client), self._seats.taken)
+                now = (self._subject.version, *self._seats.seen_by(client))
                 if now != sent:
                     sent, sent_s = now, time.monotonic()
-                    you = json.dumps({"acting": now[1], "browsers": now[2]})
+                    you = json.dumps({"acting": now[1], "acted": now[2], "browsers": now[3]})
                     yield f'data: {{"you": {you}, "state": {self._state_text()}}}\n\n'
                 elif time.monotonic() - sent_s > BEAT_S:
                     sent_s = time.monotonic()
@@ -224,6 +224,10 @@ class _Seats:
 
     def acts(self, client: str) -> bool:
         return client == self._acting
+
+    def seen_by(self, client: str) -> tuple[bool, bool, int]:
+        """Whether this browser acts, whether the one that does is there, and how many there are."""
+        return client == self._acting, self._acting in self._present, self.taken
 
 
 async def _body(request: Request) -> bytes:

@@ -9,7 +9,7 @@ from sweep.screens.board import Board
 from sweep.station import Station
 
 RING_SPAN_STOPS = 1.5
-AT_MARK_STOPS = 0.1
+AT_MARK, AT_MARK_STOPS = "at the mark", 0.1
 CALM_S = 1.5  # between two words for the ear that come from the ring alone
 KEPT_SOUNDS = 4
 WRONG_STATES = ("past", "wrong way", "dark")
@@ -158,9 +158,14 @@ class Telling:
         seen, stop = self.board.seen, self.board.stop
         if seen is None or stop is None or seen.view.off_stops is None:
             return None
-        off = seen.view.off_stops
+        off, there = seen.view.off_stops, seen.view.state == "arrived"
         place = 0.5 + max(-RING_SPAN_STOPS, min(RING_SPAN_STOPS, off)) / (2 * RING_SPAN_STOPS)
-        return {"place": round(place, 4), "goal": f"f/{stop:g}", "words": way(off), "there": abs(off) < AT_MARK_STOPS}
+        return {
+            "place": round(place, 4),
+            "goal": f"f/{stop:g}",
+            "words": AT_MARK if there else way(off),
+            "there": there,
+        }
 
     def _light(self) -> dict[str, Any] | None:
         seen = self.board.seen
@@ -213,7 +218,7 @@ def way(off_stops: float) -> str:
     away = abs(off_stops)
     side = "open" if off_stops > 0 else "closed"
     if away < AT_MARK_STOPS:
-        return "at the mark"
+        return AT_MARK
     if away < 0.4:
         return f"a little more {side}"
     if away < 0.75:
