@@ -5,7 +5,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from sweep.choose import Place, StopEvidence, choose
+from sweep.choose import Place, StopEvidence, choose, depth_map
 from sweep.figures import reading_of
 from sweep.fit import AmplitudeData, EdgeData, LensFit, Problem, StopLight, View, fit_lens
 from sweep.frames import Source
@@ -42,7 +42,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
     found = estimate(places, contrast, contrast_u, fit, rng)
     evidence = _evidence(sweep, light, fit, station)
     camera = _camera(sweep)
-    lens = FittedLens(fit) if fit is not None else None
+    lens = FittedLens(fit, found.discrepancy.deviation) if fit is not None else None
     compressed = any(note.code == "compressed-source" for note in source.notes)
     noticed = notices(
         sweep, readings, light, fit, fit.focus_steps if fit is not None else (), found.discrepancy, station, compressed
@@ -57,6 +57,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
         (*source.notes, *noticed, *notes),
         SourceFacts(sweep.frames, source.sha256),
         model_curve(found),
+        depth_map(station, stops, lens, places) if lens is not None else None,
     )
 
 

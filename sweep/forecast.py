@@ -5,7 +5,7 @@ from dataclasses import replace
 import numpy as np
 
 from sweep.analyse import SEED, lens_model, model_curve, places_of
-from sweep.choose import StopEvidence, choose
+from sweep.choose import StopEvidence, choose, depth_map
 from sweep.fit import LensFit, Problem, StopLight
 from sweep.lens import Bench
 from sweep.measure.linear import Floats
@@ -30,9 +30,10 @@ def forecast(station: Station) -> Result:
     places = places_of(station, {})
     nothing = np.full((len(station.lens.stops), len(places)), np.nan)
     found = estimate(places, nothing, nothing, fit, np.random.default_rng(SEED))
+    lens = FittedLens(fit)
     evidence = [StopEvidence(stop, None, None, None, True) for stop in station.lens.stops]
     camera = CameraNoise(None, None, station.camera.black_level_dn, station.full_scale_dn())
-    recommendation, stops, notes = choose(station, evidence, camera, found.outlook, FittedLens(fit))
+    recommendation, stops, notes = choose(station, evidence, camera, found.outlook, lens)
     assumed = _assumptions(fit, station)
     stops = tuple(_by_contrast(s, station) for s in stops)
     best = next((s for s in stops if s.stop == recommendation.stop), None)
@@ -43,9 +44,19 @@ def forecast(station: Station) -> Result:
         shortfalls=() if meets else recommendation.shortfalls,
         reasons=(*recommendation.reasons, *assumed, *_light_between(station)),
     )
-    model = lens_model(fit, FittedLens(fit), places, recommendation.stop, station.lens.stops)
+    model = lens_model(fit, lens, places, recommendation.stop, station.lens.stops)
     kept: tuple[Note, ...] = tuple(n for n in notes if n.code not in ("no-reading", "optimum-outside"))
-    return Result(recommendation, stops, (), camera, model, kept, SourceFacts(0, ""), model_curve(found))
+    return Result(
+        recommendation,
+        stops,
+        (),
+        camera,
+        model,
+        kept,
+        SourceFacts(0, ""),
+        model_curve(found),
+        depth_map(station, stops, lens, places),
+    )
 
 
 def _by_contrast(stop: Stop, station: Station) -> Stop:

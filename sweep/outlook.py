@@ -91,13 +91,19 @@ def _with_rivals(
     draws: Floats, fit: LensFit, lens: "FittedLens", places: Sequence[Place], model: Floats, rng: np.random.Generator
 ) -> Floats:
     """Let other solutions that fit nearly as well have their share of the draws."""
-    shares = np.array([1.0, *(np.exp(-0.5 * cost) for cost, _ in fit.rivals)])
-    pick = rng.choice(len(shares), size=len(draws), p=shares / shares.sum())
+    shares = _shares(fit)
+    pick = rng.choice(len(shares), size=len(draws), p=shares)
     out = draws.copy()
     for i, (_, theta) in enumerate(fit.rivals, start=1):
         other, _ = FittedLens(replace(fit, theta=theta)).at_stops(places, len(model))
         out[pick == i] += other - model
     return out
+
+
+def _shares(fit: LensFit) -> Floats:
+    """What the fit and its rivals count for, by their likelihood."""
+    shares = np.array([1.0, *(np.exp(-0.5 * cost) for cost, _ in fit.rivals)])
+    return np.asarray(shares / shares.sum())
 
 
 def _discrepancy(off: Floats, u: Floats) -> Discrepancy:
@@ -134,10 +140,14 @@ def _moment(off: Floats, u: Floats) -> float:
 
 
 class FittedLens:
-    """The fitted lens as the choice asks it: contrasts at a place with one thing changed, and with slopes."""
+    """The fitted lens as the choice asks it: contrasts at a place with one thing changed, and with slopes.
 
-    def __init__(self, fit: LensFit) -> None:
+    `deviation` (stops,): how far the model is off the readings, for the u where there is no reading.
+    """
+
+    def __init__(self, fit: LensFit, deviation: Floats | None = None) -> None:
         self.fit = fit
+        self.deviation = np.zeros(len(fit.light.f_number)) if deviation is None else deviation
 
     def at_stops(self, places: Sequence[Place], stops: int) -> tuple[Floats, Floats]:
         """Signed contrast (stops, places) at the feature, and its slopes (parameters, stops, places)."""
@@ -190,6 +200,24 @@ class FittedLens:
             perfect = Pupil(pupil.f_number, nothing, nothing, nothing, nothing)
             lens /= max(float(lens_transfer(self.fit.bench, perfect, v)[0, 0]), 1e-6)
         return lens * camera
+
+    def over_frequency(self, stop_index: int, places: Sequence[Place], v_cy_px: Floats) -> Floats:
+        """See `DepthView.over_frequency`."""
+        views = [View(stop_index, p.target, p.direction_deg) for p in places]
+        optics = Optics(self.fit, views, np.array([p.depth_mm for p in places]))
+        return transfer(optics, Frequencies(views, np.tile(v_cy_px, (len(views), 1))), self.fit.theta)
+
+    def at_feature(self, stop_index: int, places: Sequence[Place]) -> tuple[Floats, Floats]:
+        """See `DepthView.at_feature`."""
+        views = [View(stop_index, p.target, p.direction_deg) for p in places]
+        value, slopes = (a[..., 0, :] for a in self._evaluate(views, places, 1, None))
+        variance = np.einsum("ps,pq,qs->s", slopes, self.fit.covariance, slopes)
+        variance += MODEL_FLOOR**2 + self.deviation[stop_index] ** 2
+        shares = _shares(self.fit)
+        for share, (_, theta) in zip(shares[1:], self.fit.rivals, strict=True):
+            other, _ = FittedLens(replace(self.fit, theta=theta))._evaluate(views, places, 1, None)
+            variance += share * (other[0] - value) ** 2
+        return value, np.sqrt(variance)
 
     def best_depth_mm(self, stop_index: int, places: Sequence[Place]) -> float:
         """The depth (mm) that is sharpest at a stop, by the mean over the feature's frequencies of all places."""

@@ -138,8 +138,47 @@ class SourceFacts:
 
 
 @dataclass(frozen=True, slots=True)
+class TargetDetail:
+    """The smallest features told apart at one target and stop, widths of a bar: detected, and at the needed contrast."""
+
+    target: str
+    smallest_detected_um: float | None
+    smallest_at_need_um: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class DepthStop:
+    """One stop over the depths of the map, at its own setting, by the lens model with motion blur.
+
+    `usable_mm`: from which to which depth the contrast need is kept with the wanted confidence, None for nowhere, an
+    end None where it lies farther out than the sweep can tell. Of the lists, one entry for each depth: contrast at the
+    feature with its u, and the smallest features told apart, None where there is none or the noise is unknown.
+    """
+
+    stop: float
+    usable_mm: tuple[float | None, float | None] | None
+    contrast: tuple[float, ...]
+    contrast_u: tuple[float, ...]
+    smallest_detected_um: tuple[float | None, ...]
+    smallest_at_need_um: tuple[float | None, ...]
+    targets: tuple[TargetDetail, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class DepthMap:
+    """Contrast and the smallest feature told apart over depth (from the plane of focus) and stop."""
+
+    part_contrast: float
+    depths_mm: tuple[float, ...]
+    stops: tuple[DepthStop, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class Result:
-    """All that the analysis says. `curve` feeds the plot and is not part of `result.json`."""
+    """All that the analysis says. `curve` feeds the plot and is not part of `result.json`.
+
+    `depth_map` is None where there is no lens model.
+    """
 
     recommendation: Recommendation
     stops: tuple[Stop, ...]
@@ -149,6 +188,7 @@ class Result:
     warnings: tuple[Note, ...]
     source: SourceFacts
     curve: tuple[CurvePoint, ...] = field(default=())
+    depth_map: DepthMap | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -69,6 +69,7 @@ class PlainLens:
     defocus: float = 0.1  # Gaussian exponent for one mm of defocus at f/1, at 0.1 cycles per pixel
     error: float = 1.5  # the lens error's exponent at f/1
     pitch_um: float = 3.45
+    u: float = 0.0  # of its transfer over depth
 
     def at(self, f_number, place, *, without=None, refocus_mm=0.0, pixel_scale=1.0):
         frequency = place.feature_cy_px
@@ -85,6 +86,12 @@ class PlainLens:
 
     def contrast(self, stop_index, place, *, without=None, refocus_mm=0.0, pixel_scale=1.0):
         return self.at(self.stops[stop_index], place, without=without, refocus_mm=refocus_mm, pixel_scale=pixel_scale)
+
+    def over_frequency(self, stop_index, places, v_cy_px):
+        return np.array([[self.contrast(stop_index, replace(p, feature_cy_px=v)) for v in v_cy_px] for p in places])
+
+    def at_feature(self, stop_index, places):
+        return np.array([self.contrast(stop_index, p) for p in places]), np.full(len(places), self.u)
 
     def outlook(self, station, u=0.002, grid=None):
         """What a sweep with this lens would know, with the curve between the stops on `grid`."""

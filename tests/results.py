@@ -11,6 +11,8 @@ from dataclasses import replace
 from sweep.result import (
     CameraNoise,
     CurvePoint,
+    DepthMap,
+    DepthStop,
     LensModel,
     Note,
     Reading,
@@ -18,6 +20,7 @@ from sweep.result import (
     Result,
     SourceFacts,
     Stop,
+    TargetDetail,
 )
 from sweep.station import Station, build_station
 
@@ -77,6 +80,7 @@ def a_result(
         warnings=tuple(warnings),
         source=SourceFacts(6 * len(stops), "3f0c" * 16),
         curve=_curve(station, sharpness) if model else (),
+        depth_map=_depth_map(station, sharpness) if model else None,
     )
 
 
@@ -215,3 +219,30 @@ def _curve(station: Station, sharpness: float) -> tuple[CurvePoint, ...]:
         for name, depth_mm in depths
         for f in (low * (high / low) ** (i / (n - 1)) for i in range(n))
     )
+
+
+def _depth_map(station: Station, sharpness: float) -> DepthMap:
+    depths = station.need.depth_range_mm or tuple(t.depth_mm for t in station.targets)
+    low, high = min(depths), max(depths)
+    margin = (high - low) / 4 or 20.0
+    mapped = tuple(low - margin + (high - low + 2 * margin) * i / 24 for i in range(25))
+    rows = []
+    for stop in station.lens.stops:
+        contrast = tuple(_contrast(station, depth_mm, _by_light(stop), sharpness) for depth_mm in mapped)
+        kept = [d for d, c in zip(mapped, contrast, strict=True) if c >= station.need.contrast]
+        ends = (
+            (None if kept[0] == mapped[0] else kept[0], None if kept[-1] == mapped[-1] else kept[-1]) if kept else None
+        )
+        finest = tuple(_finest(c) for c in contrast)
+        targets = tuple(
+            TargetDetail(t.name, fine and 0.6 * fine, fine)
+            for t in station.targets
+            for fine in [_finest(_contrast(station, t.depth_mm, _by_light(stop), sharpness))]
+        )
+        detected = tuple(f and 0.6 * f for f in finest)
+        rows.append(DepthStop(stop, ends, contrast, (0.004,) * 25, detected, finest, targets))
+    return DepthMap(station.need.part_contrast, mapped, tuple(rows))
+
+
+def _finest(contrast: float) -> float | None:
+    return 58.0 / (2 * (0.08 + 0.2 * contrast)) if contrast > 0.02 else None

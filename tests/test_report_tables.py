@@ -37,6 +37,7 @@ KEYS = {
     "model_mtf50_cy_px_u contrast_at_bars bars_cy_px saturated_fraction ok why_not",
     "camera": "electrons_per_dn read_noise_e black_level_dn full_scale_dn",
     "model": "best_focus_mm spherical_waves blur_px reduced_chi2",
+    "depth_map": "part_contrast depths_mm stops",
     "warnings": "code text",
     "source": "frames sha256",
 }
@@ -69,6 +70,30 @@ def test_every_key_of_the_file_stands_in_the_manual(document: dict[str, Any]) ->
         section = DOCS.split(f"### {part}\n")[1].split("\n#")[0]
         row = document[part][0] if isinstance(document[part], list) else document[part]
         assert set(row) == set(re.findall(r"`(\w+)`", section)) & set(row), part
+
+
+def test_the_map_is_the_same_in_every_stop_and_stands_in_the_manual(document: dict[str, Any]) -> None:
+    found, section = document["depth_map"], DOCS.split("### depth_map\n")[1].split("\n#")[0]
+    told = set(re.findall(r"`(\w+)`", section))
+    assert [row["stop"] for row in found["stops"]] == [stop["stop"] for stop in document["stops"]]
+    for row in found["stops"]:
+        assert set(row) <= told
+        assert all(set(target) <= told for target in row["targets"])
+        lists = ("contrast", "contrast_u", "smallest_detected_um", "smallest_at_need_um")
+        assert {len(row[key]) for key in lists} == {len(found["depths_mm"])}
+        assert [t["target"] for t in row["targets"]] == ['Größe, "Öl"', "瓶\N{BULLET}"]
+
+
+def test_without_a_lens_model_there_is_no_map() -> None:
+    assert json.loads(result_json(a_result(a_station(), model=False)))["depth_map"] is None
+
+
+def test_one_line_a_stop_reading_warning_and_stop_of_the_map(result: Result, document: dict[str, Any]) -> None:
+    text = result_json(result).decode().splitlines()
+    lines = [json.loads(line.strip().rstrip(",")) for line in text if line.strip().startswith('{"')]
+    assert lines == [
+        *document["stops"], *document["readings"], *document["depth_map"]["stops"], *document["warnings"]
+    ]  # fmt: skip
 
 
 def test_the_manual_has_one_line_for_each_code() -> None:

@@ -16,8 +16,8 @@ from sweep.choose.between import between_marks, optimum_f_number
 from sweep.choose.candidates import as_stop, candidates_of, pick
 from sweep.choose.causes import limited_by, losses_at_worst
 from sweep.choose.cures import shortfalls
-from sweep.choose.depths import DepthMap, depth_map
-from sweep.choose.evidence import Cause, LensView, Outlook, Place, StopEvidence
+from sweep.choose.depths import depth_map
+from sweep.choose.evidence import Cause, DepthView, LensView, Outlook, Place, StopEvidence
 from sweep.choose.focus import best_refocus
 from sweep.choose.reasons import notes, reasons
 from sweep.result import CameraNoise, Note, Recommendation, Stop
@@ -27,7 +27,7 @@ NOTHING_SOUND = (
     "No stop has a sound reading at every target, so none can be recommended; the warnings say what to take again."
 )
 
-__all__ = ["Cause", "DepthMap", "LensView", "Outlook", "Place", "StopEvidence", "choose", "depth_map"]
+__all__ = ["Cause", "DepthView", "LensView", "Outlook", "Place", "StopEvidence", "choose", "depth_map"]
 
 
 def choose(

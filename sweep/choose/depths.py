@@ -1,6 +1,7 @@
-"""Contrast and the smallest detectable feature over depth and stop: data for a map, and the usable range of depths.
+"""Contrast and the smallest feature told apart, over depth and stop: a map, and the usable range of depths.
 
-A feature is detected where its contrast-to-noise ratio over its own area reaches 5: the criterion of Rose (The
+Two criteria stand side by side. The fixed one is the contrast that the station file asks for. The other is detection:
+a feature is detected where its contrast-to-noise ratio over its own area reaches 5, the criterion of Rose (The
 sensitivity performance of the human eye on an absolute scale, J. Opt. Soc. Am. 38, 196-208, 1948; the value 5 is from
 memory). A bar of width w and of the part's own contrast c (Michelson) differs from its gap by 2 c T / (1 + c) of the
 light tone, T the transfer at 1 / (2 w); the noise of its w x w area is that of one pixel at the light tone over its
@@ -9,106 +10,201 @@ width in pixels.
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import ndtri
 
-from sweep.choose.chances import NYQUIST_CY_PX, motion_transfer
-from sweep.choose.evidence import LensView, Place
-from sweep.result import Stop
-from sweep.station import Need
+from sweep.choose.chances import NYQUIST_CY_PX
+from sweep.choose.evidence import DepthView, Place
+from sweep.choose.settings import exposure_limit_ms
+from sweep.result import DepthMap, DepthStop, Stop, TargetDetail
+from sweep.station import Station
+
+Floats = NDArray[np.float64]
 
 ROSE = 5.0
-_COARSEST = 0.005  # cycles per pixel: the largest feature looked at, 100 pixels wide
-_STEPS = 40
+DEPTHS = 25
+MARGIN = 0.25  # of the span of the depths in question, mapped beyond them on both sides
+WIDEST_MARGIN = 1.0  # likewise, looked at for the ends of the usable range: farther than that no sweep speaks for
+NEAREST = -0.9  # of the way from the plane of focus to the entrance pupil
+_STEP = 0.05  # of the defocus that takes all contrast: the grid of the usable range
+_FREQUENCIES = np.geomspace(0.005, NYQUIST_CY_PX, 64)  # cycles per pixel; the largest feature is 100 pixels wide
+
+
+def depth_map(station: Station, stops: Sequence[Stop], lens: DepthView, places: Sequence[Place]) -> DepthMap:
+    """The lens model over depth, for each stop at its own setting, motion blur included.
+
+    `stops` in the order of the lens's own; `places` are those of the choice, of which the targets' are looked at one by
+    one. The depths are those of the targets, or `need.depth_range_mm`, and a quarter of their span beyond; where all
+    are alike, as far as blur alone takes to lose the feature at the middle stop.
+    """
+    depths = np.linspace(*_around(station, stops, MARGIN), DEPTHS)
+    mapped = [_place(station, d) for d in depths]
+    on_targets = [p for p in places if p.target >= 0]
+    widest = _around(station, stops, WIDEST_MARGIN)
+    rows = []
+    for k, stop in enumerate(stops):
+        used = _Used(station, lens, k, stop)
+        contrast, u = used.contrast(mapped)
+        detected, at_need = used.smallest_um(mapped)
+        rows.append(
+            DepthStop(
+                stop=stop.stop,
+                usable_mm=used.usable_mm(widest),
+                contrast=tuple(map(float, contrast)),
+                contrast_u=tuple(map(float, u)),
+                smallest_detected_um=tuple(map(_known, detected)),
+                smallest_at_need_um=tuple(map(_known, at_need)),
+                targets=used.details(on_targets),
+            )
+        )
+    return DepthMap(station.need.part_contrast, tuple(map(float, depths)), tuple(rows))
+
+
+def kept(contrast: Floats, contrast_u: Floats, confidence: float) -> Floats:
+    """The contrast that is reached with that probability, errors taken as normal (JCGM 106:2012)."""
+    return np.asarray(contrast - float(ndtri(confidence)) * contrast_u)
+
+
+def contrast_to_noise(transfer: Floats, snr_db: float, width_px: Floats, part_contrast: float) -> Floats:
+    """Contrast-to-noise ratio of bars over areas of their own width squared.
+
+    `transfer` and `width_px`, the bar's width, broadcast; `snr_db` is that of one pixel at the light tone.
+    """
+    difference = 2 * part_contrast / (1 + part_contrast) * np.maximum(transfer, 0.0)
+    return np.asarray(10 ** (snr_db / 20) * difference * width_px)
 
 
 @dataclass(frozen=True, slots=True)
-class DepthMap:
-    """The model over depth and stop, at each stop's own setting, motion blur included.
+class _Used:
+    """One stop as it would be used."""
 
-    `contrast` (stops, depths) at `need.feature_um`; `smallest_um` (stops, depths), NaN where noise is unknown or
-    nothing is detected; `usable_mm`, for each stop, the depths about its best one at which the contrast need is kept.
-    """
+    station: Station
+    lens: DepthView
+    index: int
+    stop: Stop
 
-    depths_mm: NDArray[np.float64]
-    stops: tuple[float, ...]
-    contrast: NDArray[np.float64]
-    smallest_um: NDArray[np.float64]
-    usable_mm: tuple[tuple[float, float] | None, ...]
+    def contrast(self, places: Sequence[Place]) -> tuple[Floats, Floats]:
+        """Contrast at the feature and its u, (places,); a reversed one counts as nothing."""
+        value, u = self.lens.at_feature(self.index, places)
+        left = self._left_by_motion(places, np.array([[p.feature_cy_px] for p in places]))[:, 0]
+        return np.maximum(value, 0.0) * left, u * left
+
+    def smallest_um(self, places: Sequence[Place]) -> tuple[Floats, Floats]:
+        """The widths (um) down to which every larger bar is detected, and keeps the contrast of the need, (places,).
+
+        At least one pixel, half the period at Nyquist; NaN where not even the largest bar is told apart, or the noise
+        is unknown.
+        """
+        need, v = self.station.need, _FREQUENCIES
+        transfer = self.lens.over_frequency(self.index, places, v) * self._left_by_motion(places, v)
+        pixel_um = np.array([p.object_um_per_px for p in places])
+        at_need = _down_to_px(transfer / need.contrast) * pixel_um
+        if self.stop.snr_db is None:
+            return np.full(len(places), np.nan), at_need
+        seen = contrast_to_noise(transfer, self.stop.snr_db, 0.5 / v, need.part_contrast)
+        return _down_to_px(seen / ROSE) * pixel_um, at_need
+
+    def details(self, places: Sequence[Place]) -> tuple[TargetDetail, ...]:
+        """The smallest features at each target, by its worst patch."""
+        if not places:
+            return ()
+        detected, at_need = self.smallest_um(places)
+        found = []
+        for name in dict.fromkeys(p.name for p in places):
+            mine = [i for i, p in enumerate(places) if p.name == name]
+            # NaN, nothing told apart, is the worst of all and outlasts max.
+            found.append(TargetDetail(name, _known(detected[mine].max()), _known(at_need[mine].max())))
+        return tuple(found)
+
+    def usable_mm(self, widest: tuple[float, float]) -> tuple[float | None, float | None] | None:
+        """The depths about the best one at which the contrast need is kept, with the wanted confidence.
+
+        An end is None where the need is still kept at the end of `widest` (mm).
+        """
+        low, high = widest
+        steps = math.ceil((high - low) / (_STEP * _lost_in_mm(self.station, self.stop)))
+        depths = np.linspace(low, high, max(steps, DEPTHS) + 1)
+        places = [_place(self.station, d) for d in depths]
+        sure = kept(*self.contrast(places), self.station.need.confidence)
+        sure = np.where([p.feature_cy_px <= NYQUIST_CY_PX for p in places], sure, 0.0)
+        found = _about_the_best(depths, sure, self.station.need.contrast)
+        if found is None or found[1] is None:
+            return found
+        return found[0], min(found[1], self._nyquist_mm())
+
+    def _nyquist_mm(self) -> float:
+        """The depth from which on the feature is too fine for the pixels."""
+        pixels = self.station.need.feature_um / self.station.scene.object_um_per_px * 2 * NYQUIST_CY_PX
+        return (pixels - 1) * self.station.pupil_distance_mm
+
+    def _left_by_motion(self, places: Sequence[Place], v_cy_px: Floats) -> Floats:
+        """What motion leaves of the transfer (places, n) at frequencies (n,) or (places, n), as in the choice.
+
+        Where the exposure is unknown the longest that is allowed blurs most.
+        """
+        exposure_ms = exposure_limit_ms(self.station) if self.stop.exposure_ms is None else self.stop.exposure_ms
+        speed = self.station.need.speed_mm_s
+        if not speed or not math.isfinite(exposure_ms):
+            return np.ones((len(places), v_cy_px.shape[-1]))
+        way_px = np.array([[speed * exposure_ms / p.object_um_per_px] for p in places])
+        return np.asarray(np.abs(np.sinc(way_px * v_cy_px)))
 
 
-def depth_map(
-    need: Need, stops: Sequence[Stop], lens: LensView, places: Sequence[Place], part_contrast: float = 1.0
-) -> DepthMap:
-    """Contrast at the feature and the smallest detectable feature for each stop at each of `places`, nearest first.
-
-    `part_contrast` is the part's own (Michelson) contrast, 0 to 1: a faint scratch is not a printed bar.
-    """
-    depths = np.array([p.depth_mm for p in places])
-    contrast = np.array(
-        [[_contrast(need, lens, k, s, p) for p in places] for k, s in enumerate(stops)], dtype=np.float64
-    )
-    smallest = np.array(
-        [[_smallest_um(need, lens, k, s, p, part_contrast) for p in places] for k, s in enumerate(stops)],
-        dtype=np.float64,
-    )
-    usable = tuple(_usable(depths, row, need.contrast) for row in contrast)
-    return DepthMap(depths, tuple(s.stop for s in stops), contrast, smallest, usable)
+def _down_to_px(ratio: Floats) -> Floats:
+    """Half the period (px) at which rows of `ratio` (n, frequencies) first fall below 1, by lines in log frequency."""
+    below = ratio < 1
+    first = np.where(below.any(axis=1), below.argmax(axis=1), len(_FREQUENCIES) - 1)
+    row, before = np.arange(len(ratio)), np.maximum(first - 1, 0)
+    high, low = ratio[row, before], ratio[row, first]
+    share = np.where(low < 1, (high - 1) / np.where(high > low, high - low, 1.0), 1.0)
+    ln_v = np.log(_FREQUENCIES)
+    half_px = 0.5 / np.exp(ln_v[before] + share * (ln_v[first] - ln_v[before]))
+    return np.where(below[:, 0], np.nan, half_px)
 
 
-def contrast_to_noise(transfer: float, snr_db: float, width_px: float, part_contrast: float) -> float:
-    """Contrast-to-noise ratio of a bar over an area of its own width squared.
-
-    `snr_db` is that of one pixel at the light tone; `width_px` the bar's width in pixels.
-    """
-    difference = 2 * part_contrast / (1 + part_contrast) * max(transfer, 0.0)
-    return 10 ** (snr_db / 20) * difference * width_px
-
-
-def _contrast(need: Need, lens: LensView, index: int, stop: Stop, place: Place) -> float:
-    blur = float(motion_transfer(need, stop.exposure_ms, [place])[0])
-    return max(lens.contrast(index, place), 0.0) * blur
-
-
-def _smallest_um(need: Need, lens: LensView, index: int, stop: Stop, place: Place, part_contrast: float) -> float:
-    """The width, um, down to which every larger bar reaches the criterion; NaN where not even the largest does."""
-    snr_db = stop.snr_db
-    if snr_db is None:
-        return math.nan
-
-    def spare(frequency: float) -> float:
-        transfer = _contrast(need, lens, index, stop, replace(place, feature_cy_px=frequency))
-        return contrast_to_noise(transfer, snr_db, 0.5 / frequency, part_contrast) - ROSE
-
-    low = _COARSEST
-    if spare(low) < 0:
-        return math.nan
-    for frequency in np.geomspace(_COARSEST, NYQUIST_CY_PX, _STEPS)[1:]:
-        if spare(float(frequency)) < 0:
-            high = float(frequency)
-            while high / low > 1.001:
-                middle = math.sqrt(low * high)
-                low, high = (middle, high) if spare(middle) >= 0 else (low, middle)
-            break
-        low = float(frequency)
-    return 0.5 / low * place.object_um_per_px
-
-
-def _usable(depths: NDArray[np.float64], contrast: NDArray[np.float64], wanted: float) -> tuple[float, float] | None:
-    """The depths around the best one at which the contrast is kept, the ends by straight lines between the depths."""
+def _about_the_best(depths: Floats, contrast: Floats, wanted: float) -> tuple[float | None, float | None] | None:
+    """The ends of what is kept around the highest contrast, by straight lines between the depths."""
     best = int(np.argmax(contrast))
     if contrast[best] < wanted:
         return None
-    ends = []
+    ends: list[float | None] = []
     for step, last in ((-1, 0), (1, len(depths) - 1)):
         k = best
         while k != last and contrast[k + step] >= wanted:
             k += step
         if k == last:
-            ends.append(float(depths[k]))
+            ends.append(None)
             continue
         share = (contrast[k] - wanted) / (contrast[k] - contrast[k + step])
         ends.append(float(depths[k] + share * (depths[k + step] - depths[k])))
     return ends[0], ends[1]
+
+
+def _around(station: Station, stops: Sequence[Stop], margin: float) -> tuple[float, float]:
+    """The depths in question and `margin` of their span beyond on both sides, no nearer than the lens allows (mm)."""
+    depths = station.need.depth_range_mm or [t.depth_mm for t in station.targets]
+    low, high = min(depths), max(depths)
+    more = margin * (high - low) or _lost_in_mm(station, stops[len(stops) // 2])
+    return max(low - more, min(low, NEAREST * station.pupil_distance_mm)), high + more
+
+
+def _lost_in_mm(station: Station, stop: Stop) -> float:
+    """The defocus (mm) whose blur disc takes all contrast of the feature: 1.22 of its periods wide (first zero of J1).
+
+    By similar triangles a point at depth d blurs over |d| D / e of the object, D the diameter of the entrance pupil and
+    e its distance.
+    """
+    pupil_mm = station.lens.focal_length_mm / (stop.f_number_by_light or stop.stop)
+    return 1.22 * 2e-3 * station.need.feature_um * station.pupil_distance_mm / pupil_mm
+
+
+def _place(station: Station, depth_mm: float) -> Place:
+    depth = float(depth_mm)
+    return Place(f"{depth:+.3g} mm", depth, station.feature_cy_px_at(depth), station.object_um_per_px_at(depth))
+
+
+def _known(value: float) -> float | None:
+    return float(value) if math.isfinite(value) else None

@@ -1,5 +1,6 @@
 """What the choice is made from: records that the readings and the lens fit fill."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal, Protocol
 
@@ -83,3 +84,15 @@ class LensView(Protocol):
         at the object, positive = away from the camera. `pixel_scale` multiplies the pixel pitch behind the same lens at
         the same magnification; `place.feature_cy_px` stays in cycles per pixel as it is now.
         """
+
+
+class DepthView(Protocol):
+    """The fitted lens over depth and frequency: what the map is computed from. Signed transfers, no motion blur."""
+
+    def over_frequency(
+        self, stop_index: int, places: Sequence[Place], v_cy_px: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Transfer (places, n) at frequencies (n,) cycles per pixel."""
+
+    def at_feature(self, stop_index: int, places: Sequence[Place]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Transfer (places,) at each place's own feature, and its u."""

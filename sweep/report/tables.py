@@ -9,7 +9,7 @@ import csv
 import io
 import json
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import fields, is_dataclass
 from typing import Any
 
@@ -21,7 +21,7 @@ from sweep.result import SCHEMA, Reading, Result, Stop
 DIGITS = 6
 """Significant digits of every number."""
 
-_PARTS = ("recommendation", "stops", "readings", "camera", "model", "warnings", "source")
+_PARTS = ("recommendation", "stops", "readings", "camera", "model", "depth_map", "warnings", "source")
 
 
 def result_json(result: Result) -> bytes:
@@ -74,17 +74,15 @@ def _plain(value: Any, where: str) -> Any:
     return float(f"{value:.{DIGITS}g}") + 0.0  # + 0.0: there is no -0
 
 
-def _pretty(document: Mapping[str, Any]) -> str:
+def _pretty(value: Any, indent: str = "", levels: int = 2) -> str:
     """JSON with one line a stop, reading and warning, so that two results can be compared line by line."""
-    parts = []
-    for key, value in document.items():
-        text = _line(value)
-        if isinstance(value, list) and value:
-            text = "[\n" + ",\n".join(f"    {_line(v)}" for v in value) + "\n  ]"
-        elif isinstance(value, dict):
-            text = "{\n" + ",\n".join(f"    {_line(k)}: {_line(v)}" for k, v in value.items()) + "\n  }"
-        parts.append(f"  {_line(key)}: {text}")
-    return "{\n" + ",\n".join(parts) + "\n}"
+    inner = indent + "  "
+    if isinstance(value, dict) and value and levels:
+        lines = [f"{inner}{_line(k)}: {_pretty(v, inner, levels - 1)}" for k, v in value.items()]
+        return "{\n" + ",\n".join(lines) + f"\n{indent}}}"
+    if isinstance(value, list) and value and isinstance(value[0], dict):
+        return "[\n" + ",\n".join(inner + _line(v) for v in value) + f"\n{indent}]"
+    return _line(value)
 
 
 def _line(value: Any) -> str:
