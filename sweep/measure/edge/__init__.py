@@ -50,7 +50,7 @@ def read_edge(
         return EdgeMeasure(False, ("edge-not-found",))
     frames = values / level[:, None]
     share = good * (np.ones(len(values)) if weights is None else weights)[:, None]
-    mean = np.where(good, frames * share, 0.0).sum(axis=0) / np.maximum(share.sum(axis=0), 1e-300)
+    mean = (np.where(good, frames, 0.0) * share).sum(axis=0) / np.maximum(share.sum(axis=0), 1e-300)
     mean = np.where(counts > 0, mean, np.nan)
     line = find_line(x, y, mean)
     fit = fit_edge(x, y, mean, line) if line is not None else None
