@@ -101,6 +101,7 @@ def test_a_better_focus_is_named_though_the_need_is_met():
     before = next(s for s in stops if s.stop == found.stop)
     assert better[0].worst_contrast > 1.05 * before.worst_contrast
     assert not any("would serve these depths" in r for r in again.reasons)
+    assert any("The focus stands well" in r for r in again.reasons)
 
 
 def test_refocusing_that_is_not_enough_is_told_as_such():

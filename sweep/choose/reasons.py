@@ -16,7 +16,6 @@ from sweep.result import CameraNoise, Note
 from sweep.station import Station
 
 _RETAKE_LEVEL = 0.7  # of full scale: bright without clipping (common practice, no source)
-_WORTH_REFOCUSING = 0.05  # gain in worst contrast from which a better focus is named
 _GIVEN_WAY = 0.99  # of the wanted level: what is said
 _COST = {
     "depth": "defocus, since the targets lie at different depths or off the plane of focus",
@@ -51,9 +50,8 @@ def reasons(
             f"(f/{between.f_number:.3g}, {between.light:.2f} of the light at {between.wider}): "
             f"{number(100 * between.gain)} % more contrast{sure}."
         )
-    if refocus is not None and refocus.contrast > (1 + _WORTH_REFOCUSING) * refocus.unmoved:
-        way = f"{number(abs(refocus.shift_mm))} mm {'farther from' if refocus.shift_mm > 0 else 'nearer to'} the camera"
-        found.append(f"The focus would serve these depths best {way}: {refocus.contrast:.3f} at {picked.best.name}.")
+    if refocus is not None:
+        found.append(_focus(refocus, picked.best.name))
     return tuple(found)
 
 
@@ -169,6 +167,17 @@ def _motion(best: Candidate, station: Station) -> list[str]:
         f"The part moves by {number(blur_px)} pixels during the exposure; that takes "
         f"{100 * (1 - best.blur[best.worst.place]):.1f} % of the contrast and is counted in."
     ]
+
+
+def _focus(refocus: Refocus, name: str) -> str:
+    """Where the focus serves the depths best; a gain within a tie is not worth a turn."""
+    if refocus.contrast * (1 - TIE) <= refocus.unmoved:
+        return f"The focus stands well for these depths: no other gives more than {100 * TIE:.0f} % more at {name}."
+    way = f"{number(abs(refocus.shift_mm))} mm {'farther from' if refocus.shift_mm > 0 else 'nearer to'} the camera"
+    return (
+        f"The focus would serve these depths best {way}: {refocus.contrast:.3f} instead of {refocus.unmoved:.3f} at "
+        f"{name}."
+    )
 
 
 def _retakes(picked: Pick | None, candidates: Sequence[Candidate], station: Station, camera: CameraNoise) -> list[Note]:
