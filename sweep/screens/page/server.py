@@ -173,12 +173,12 @@ class PageServer:
             return PlainTextResponse("That is not JSON.", 400)
         except Refused as refusal:
             return PlainTextResponse(str(refusal), 413, {"connection": "close"})
-        if not isinstance(wish, dict) or not CLIENT.fullmatch(str(wish.get("client", ""))):
+        client = wish.get("client") if isinstance(wish, dict) else None
+        if not isinstance(client, str) or not CLIENT.fullmatch(client):
             return PlainTextResponse("A browser must say which one it is.", 400)
-        return self._done(wish)
+        return self._done(client, wish)
 
-    def _done(self, wish: Mapping[str, Any]) -> Response:
-        client = str(wish["client"])
+    def _done(self, client: str, wish: Mapping[str, Any]) -> Response:
         if wish.get("action") == "seat":
             self._seats.sit(client)
             return Response(status_code=204)
