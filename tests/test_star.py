@@ -57,7 +57,7 @@ def test_rings_hold_the_known_transfer(cycles, blur):
     )
     assert_allclose(seen.centre_px, star.centre, atol=0.01)
     assert_allclose(seen.rim_px, star.rim_px, atol=0.3)
-    assert seen.rings.v_cy_px[-1] <= 0.5
+    assert 0.45 < seen.rings.v_cy_px[-1] < 0.6
 
 
 def test_green_sites_of_a_mosaic_say_the_same():

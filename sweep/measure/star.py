@@ -193,11 +193,11 @@ def _wild(rest: Floats) -> Bools:
 
 
 def _ring_edges(inner: float, outer: float, density: float) -> Floats:
-    """Ring borders, rising, each ring wide enough to hold the fit."""
+    """Ring borders, rising, each ring wide enough to hold the fit; the innermost one reaches across the limit."""
     edges = [outer]
     while edges[-1] > inner:
         edges.append(edges[-1] - max(RING_PX, _RING_SAMPLES / (2 * np.pi * edges[-1] * density)))
-    return np.array(edges[:-1][::-1])
+    return np.array(edges[::-1])
 
 
 @dataclass(frozen=True, slots=True)

@@ -146,7 +146,7 @@ class _Rings:
     harmonic: Complex
 
 
-def _coarse_rings(radius: Floats, turn: Complex, value: Floats, weight: Floats, begin: float, width: float) -> _Rings:
+def coarse_rings(radius: Floats, turn: Complex, value: Floats, weight: Floats, begin: float, width: float) -> _Rings:
     ring = ((radius - begin) / width).astype(np.intp)
     m = int(ring.max()) + 1 if len(ring) else 1
     count = np.asarray(np.maximum(np.bincount(ring, weight, m), 1e-9))
@@ -181,7 +181,7 @@ def refine_centre(
         r, w = r[near], weight[near]
         direction = z[near] / r
         turn = direction**cycles
-        rings = _coarse_rings(r, turn, value[near], w, begin, 2.0)
+        rings = coarse_rings(r, turn, value[near], w, begin, 2.0)
         local = np.conj(rings.harmonic[rings.ring]) * turn
         rest = (value[near] - rings.level[rings.ring] - local.real) * w
         slope = -local.imag * cycles / r * w
@@ -203,7 +203,7 @@ def _harmonic(frames: Frames, cycles: int, centre: Point) -> tuple[float, float]
     radius, direction = polar(frames, centre)
     near = (radius > inner) & (radius < outer)
     turn, value = direction[near] ** cycles, frames.mean[near]
-    rings = _coarse_rings(radius[near], turn, value, np.ones_like(value), inner, RING_PX)
+    rings = coarse_rings(radius[near], turn, value, np.ones_like(value), inner, RING_PX)
     filled = rings.count > 20
     if not filled.any():
         return 0.0, 0.0

@@ -39,6 +39,8 @@ _MOTTLE_BINS, _SCATTER_OF_NOISE, _PROFILE_FLOOR = 10.0, 1.4, 3e-4
 # of the ratio: least u, share of the blur's reach that may be misjudged, u of a stated modulation
 _RATIO_FLOOR, _REACH_SHARE, _STATED_MODULATION_U = 0.0015, 0.02, 0.01
 _CURVE_FLOOR = 0.001
+# half difference over mean where nothing tells it: a print's dark is between none and a half of its light
+_LIKELY_RATIO, _LIKELY_RATIO_U, _RATIO_U_LIMIT = 0.7, 0.3, 0.12
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,16 +60,22 @@ class StarCurve:
     ratio_u: float
     surround: bool
 
+    @property
+    def known(self) -> bool:
+        """Whether the level at zero frequency is known well enough to speak of a contrast."""
+        return self.ratio_u <= _RATIO_U_LIMIT * self.ratio
+
     def mtf50(self) -> tuple[float, float] | None:
         """Half-modulation frequency (cycles/pixel) and its u; None below the rim's frequency or beyond the limit."""
-        found = self.transfer.first_fall_to(0.5)
+        found = self.transfer.first_fall_to(0.5) if self.known else None
         if found is None or not self.rim_cy_px <= found[0] <= self.limit_cy_px:
             return None
         return found
 
     def contrast(self, v_cy_px: float) -> tuple[float, float] | None:
         """Transfer (negative where reversed) and its u at a frequency; None where the star doesn't say."""
-        if v_cy_px > self.limit_cy_px or (v_cy_px < self.rim_cy_px and not self.surround):
+        hidden = v_cy_px < self.rim_cy_px and not self.surround
+        if not self.known or hidden or v_cy_px > self.limit_cy_px:
             return None
         return self.transfer.at(v_cy_px)
 
@@ -178,6 +186,8 @@ class _Problem:
         weak = np.zeros((_EXTRA, j + _EXTRA))
         weak[range(_EXTRA), range(j, j + _EXTRA)] = 1 / np.array(_EXTRA_SIZES)
         rows, right = [smooth, weak], np.zeros(len(smooth) + len(weak))
+        if ratio is None and self.profile is None:
+            ratio = (_LIKELY_RATIO, _LIKELY_RATIO_U)
         if ratio is not None:
             # half difference = ratio x (light - half difference); without a surround the rings' level is that mean
             seen = self.profile is not None
@@ -195,7 +205,9 @@ class _Problem:
         more = np.interp(CURVE_CY_PX, self.v, beyond / (SQUARE_WAVE * step[0]), left=0.0)
         value = np.where(m < 0, -1.0, 1.0) * (np.abs(m) + more)
         transfer = Transfer(CURVE_CY_PX, value, np.hypot(u, _CURVE_FLOOR * (CURVE_CY_PX > 0)))
-        return StarCurve(transfer, float(self.v[0]), float(self.v[-1]), ratio, ratio_u, self.profile is not None)
+        return StarCurve(
+            transfer, float(self.v[0]), min(float(self.v[-1]), NYQUIST_CY_PX), ratio, ratio_u, self.profile is not None
+        )
 
 
 @lru_cache(maxsize=4)
@@ -273,7 +285,7 @@ def _pooled_ratio(solutions: Sequence[_Solution], modulation: float) -> tuple[fl
         ratios.append(modulation)
         variances.append((_STATED_MODULATION_U * modulation) ** 2)
     if not ratios:
-        return 1.0, 1.0
+        return _LIKELY_RATIO, _LIKELY_RATIO_U
     r, w = np.array(ratios), 1 / np.array(variances)
     ratio = float(np.sum(w * r) / np.sum(w))
     chi2 = float(np.sum(w * (r - ratio) ** 2)) / max(len(r) - 1, 1)

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sweep.measure.linear import Bools, Floats
-from sweep.measure.star_find import Frames, Point, inner_radius, polar, room
+from sweep.measure.star_find import RING_PX, Frames, Point, coarse_rings, inner_radius, polar, room
 
 RING_BIN_PX = 0.5
 _BLOCK_PX = 3
@@ -34,11 +34,15 @@ def find_rim(frames: Frames, cycles: int, centre: Point) -> tuple[float | None, 
     The radius is None where the mean level makes no clear step inside the region.
     """
     inner, outer = inner_radius(cycles), room(centre, frames.size)
-    radius, _ = polar(frames, centre)
+    radius, direction = polar(frames, centre)
+    # wedges leave more behind in the mean of a narrow ring than noise does
+    turn = direction**cycles
+    rings = coarse_rings(radius, turn, frames.mean, np.ones_like(radius), 0.0, RING_PX)
+    plain = frames.mean - (np.conj(rings.harmonic[rings.ring]) * turn).real
     edges = np.arange(0.0, outer + RING_BIN_PX / 2, RING_BIN_PX)
     slot = np.digitize(radius, edges) - 1
     count = np.bincount(slot, minlength=len(edges))[: len(edges)]
-    level = np.bincount(slot, frames.mean, len(edges))[: len(edges)] / np.maximum(count, 1)
+    level = np.bincount(slot, plain, len(edges))[: len(edges)] / np.maximum(count, 1)
     smooth = np.convolve(level, np.ones(3) / 3, "same")
     first, last = int(max(inner + 6, 0.5 * outer) / RING_BIN_PX), len(edges) - 8
     steps = [(abs(float(smooth[i + 4 : i + 7].mean() - smooth[i - 7 : i - 3].mean())), i) for i in range(first, last)]
