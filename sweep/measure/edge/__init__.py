@@ -29,6 +29,8 @@ from sweep.measure.linear import Bools, Floats
 __all__ = ["ANGLE_RANGE_DEG", "EdgeCurve", "EdgeMeasure", "EdgeProfile", "read_edge"]
 
 ANGLE_RANGE_DEG = (1.8, 12.5)
+MOST_TRANSFER = 2.0
+"""More than any sharpening gives: there is more than an edge in the region (common practice, no source)."""
 _SHIFT_MATTERS_PX = 0.012
 
 
@@ -65,4 +67,7 @@ def read_edge(
     if np.abs(shift).max() > _SHIFT_MATTERS_PX:
         fit = aligned(fit, frames, good, shift)
         fit = refit(fit.curve, fit.samples, fit.trust, fit.spread) or fit
-    return replace(edge_figures(fit, shift, shift_u, clumping), frame_level=side * level)
+    found = edge_figures(fit, shift, shift_u, clumping)
+    if found.transfer is not None and np.abs(found.transfer.value).max() > MOST_TRANSFER:
+        return EdgeMeasure(False, ("edge-not-found",))
+    return replace(found, frame_level=side * level)

@@ -83,6 +83,9 @@ def refit(curve: EdgeCurve, samples: Samples, trust: Trust, before: Spread | Non
     d, t = samples.d, samples.t
     room = min(-float(np.percentile(d, 2)), float(np.percentile(d, 98)))
     width = _spread_width(d[trust.keep], samples.light[trust.keep])
+    if width is not None and before is not None:  # a light gradient passes for a part of the edge
+        even = samples.light / ((1.0 + trust.along_gradient * t) * (1.0 + before.gradient * d))
+        width = min(width, _spread_width(d[trust.keep], even[trust.keep]) or width)
     if room < 4.0 or width is None or width * ROOM_IN_SPREADS > room:
         return None
     flat = samples.light / (1.0 + trust.along_gradient * t)
