@@ -123,7 +123,7 @@ def _star_data(sighting: Sighting, stop: int, scale: int, common: tuple[float, f
     unit = SQUARE_WAVE * ratio * float(np.median(rings.level))
     order = np.argsort(rings.v_cy_px)
     view = View(stop, sighting.site.target, None)
-    value, u = rings.signed[order] / unit, rings.u[order] / unit
+    value, u = curve.turned * rings.signed[order] / unit, rings.u[order] / unit
     return AmplitudeData(view, rings.v_cy_px[order], value, u, scale, 0.0, max(ratio_u / ratio, 2e-3))
 
 

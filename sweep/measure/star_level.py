@@ -50,7 +50,8 @@ class StarCurve:
     `transfer`: mean over directions of the modulus, negative where reversed, over `CURVE_CY_PX`; `rim_cy_px`: below
     it the curve is continued to 1 at zero frequency; `limit_cy_px`: above it nothing was measured; `ratio`: light-dark
     half difference at zero frequency over the mean level, pooled over the stops, with `ratio_u`, whose error all
-    stops share; `surround`: whether the star's surround was seen, without which nothing is said below the rim.
+    stops share; `surround`: whether the star's surround was seen, without which nothing is said below the rim;
+    `turned`: -1 where the rings' own sign is against that of the star seen with the most contrast.
     """
 
     transfer: Transfer
@@ -59,6 +60,7 @@ class StarCurve:
     ratio: float
     ratio_u: float
     surround: bool
+    turned: float
 
     @property
     def known(self) -> bool:
@@ -138,8 +140,8 @@ class _Problem:
     def __init__(self, star: StarMeasure, rings: StarRings, upright_rad: float) -> None:
         mid = float(np.median(rings.level))
         # outermost rings may be reversed against those of the star seen with the most contrast
-        turned = 1.0 if np.cos(star.phase_rad - upright_rad) >= 0 else -1.0
-        self.signed, self.u = rings.signed * turned / mid, rings.u / mid
+        self.turned = 1.0 if np.cos(star.phase_rad - upright_rad) >= 0 else -1.0
+        self.signed, self.u = rings.signed * self.turned / mid, rings.u / mid
         self.modulus_less_signed = (rings.amplitude - np.abs(rings.signed)) / mid
         v = self.v = rings.v_cy_px
         # what the curved wave fronts of a star add: the next term of the operator M(|grad|) on exp(i n theta)
@@ -205,9 +207,8 @@ class _Problem:
         more = np.interp(CURVE_CY_PX, self.v, beyond / (SQUARE_WAVE * step[0]), left=0.0)
         value = np.where(m < 0, -1.0, 1.0) * (np.abs(m) + more)
         transfer = Transfer(CURVE_CY_PX, value, np.hypot(u, _CURVE_FLOOR * (CURVE_CY_PX > 0)))
-        return StarCurve(
-            transfer, float(self.v[0]), min(float(self.v[-1]), NYQUIST_CY_PX), ratio, ratio_u, self.profile is not None
-        )
+        limit = min(float(self.v[-1]), NYQUIST_CY_PX)
+        return StarCurve(transfer, float(self.v[0]), limit, ratio, ratio_u, self.profile is not None, self.turned)
 
 
 @lru_cache(maxsize=4)
