@@ -6,7 +6,7 @@ already taken; the limits below are our own (common practice, no source), tried 
 """
 
 import math
-from collections import deque
+from bisect import bisect_left
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
@@ -29,11 +29,13 @@ State = Literal[
 
 WINDOWS_S = (0.6, 0.8, 0.95)  # the longer, the more noise is borne
 LEAST_SAMPLES = 6
+KEPT_SAMPLES = 400
 REST_STOPS_S = 0.12  # slower than this is rest
 REST_SIGMAS = 1.5
 DRIFTED_STOPS = 0.07  # what may lie between the two halves of a rest
 NEAR_STOPS = (0.14, 0.22, math.inf)  # how near the mark a rest must be, to be believed after each of the windows
 LEFT_STOPS = 0.08  # the least move that ends a rest
+FLICKER_STOPS = 0.06
 SHAKING_STOPS = 0.02
 SHAKING_OVER_REST = 3.0
 SHAKING_SAMPLES = 5  # in a row, before it is told
@@ -65,7 +67,8 @@ class Ring:
         """Stops as engraved."""
         self._marks = {stop: 2 * math.log2(stop) for stop in stops}
         self._asked: float | None = None
-        self._seen: deque[tuple[float, float]] = deque(maxlen=400)
+        self._times: list[float] = []
+        self._levels: list[float] = []  # in stops, darker is more
         self._constants: dict[float, float] = {}
         self._rest_spread: float | None = None
         self._shaken = 0
@@ -76,8 +79,7 @@ class Ring:
         """The mark that the hand is sent to; where it stands now is where it comes from."""
         self._asked = stop
         self._left = self._level(WINDOWS_S[0])
-        self._seen.clear()
-        self._rest_level = None
+        self._start_anew()
 
     @property
     def known(self) -> bool:
@@ -87,52 +89,62 @@ class Ring:
     def see(self, time_s: float, light: float) -> RingView:
         """One more frame: its arrival in seconds, and its light over exposure and gain (any unit, black taken off)."""
         if light <= self._least_light():
-            self._seen.clear()
-            self._rest_level = None
+            self._start_anew()
             return RingView("dark")
-        self._seen.append((time_s, -math.log2(light)))
+        if len(self._times) >= 2 * KEPT_SAMPLES:
+            del self._times[:KEPT_SAMPLES], self._levels[:KEPT_SAMPLES]
+        self._times.append(time_s)
+        self._levels.append(-math.log2(light))
         return self._judge()
 
     def taken(self, stop: float) -> None:
         """The ring stands at this stop, by the hand's or the caller's word: learn the constant and the unrest here."""
-        level = self._level(WINDOWS_S[-1])
-        if level is None:
+        if len(self._times) < LEAST_SAMPLES:
             return
+        spread = float(self._window(WINDOWS_S[-1])[1].std())
+        self._rest_spread = max(spread, self._rest_spread or 0.0)
+        level = float(self._window(self._windows_s()[-1])[1].mean())
         self._constants.pop(stop, None)
         self._constants[stop] = level - self._marks[stop]
-        times, levels = self._window(WINDOWS_S[-1])
-        if times.size >= LEAST_SAMPLES:
-            self._rest_spread = max(float(levels.std()), self._rest_spread or 0.0)
 
     def forget(self, stop: float) -> None:
         """A stop turned out to be wrong: its light counts no more."""
         self._constants.pop(stop, None)
 
+    def _start_anew(self) -> None:
+        self._times.clear()
+        self._levels.clear()
+        self._rest_level = None
+
     def _judge(self) -> RingView:
         slope, spread = 0.0, 0.0
-        for window_s, near in zip(WINDOWS_S, NEAR_STOPS, strict=True):
+        for window_s, near in zip(self._windows_s(), NEAR_STOPS, strict=True):
             times, levels = self._window(window_s)
             if times.size < LEAST_SAMPLES or times[-1] - times[0] < 0.85 * window_s:
-                if window_s == WINDOWS_S[0]:
-                    return RingView("waiting", self._off(self._seen[-1][1]))
+                if window_s == self._windows_s()[0]:
+                    return RingView("waiting", self._off(self._levels[-1]))
                 break
             slope, slope_u, spread = _line(times, levels)
             if self._still_resting(levels):
-                return self._at_rest(levels, spread)
+                return self._at_rest(times, levels, spread)
             half = times.size // 2
             moved = abs(float(levels[:half].mean() - levels[half:].mean()))
-            steady = abs(slope) + REST_SIGMAS * slope_u < REST_STOPS_S and moved < DRIFTED_STOPS
+            drifted = max(DRIFTED_STOPS, 6 * (self._rest_spread or 0.0) / math.sqrt(times.size))
+            steady = abs(slope) + REST_SIGMAS * slope_u < REST_STOPS_S and moved < drifted
             # A hand on its way may pause; the farther from the mark, the longer the rest that is believed.
             if steady and abs(self._off(float(levels.mean())) or 0.0) + spread < near:
-                return self._at_rest(levels, spread)
+                return self._at_rest(times, levels, spread)
             if abs(slope) > 4 * slope_u:
                 break
-        off = self._off(self._seen[-1][1])
-        shakes = abs(slope) < REST_STOPS_S and spread > self._bearable() and _goes_to_and_fro(times, levels)
-        self._shaken = self._shaken + 1 if shakes else 0
-        if self._shaken >= SHAKING_SAMPLES:
-            return RingView("shaking", off, spread_stops=spread)
+        off = self._off(self._levels[-1])
+        if abs(slope) < REST_STOPS_S and (state := self._unrest(times, levels, spread)) is not None:
+            return RingView(state, off, spread_stops=spread)
         return RingView("turning", off, spread_stops=spread)
+
+    def _windows_s(self) -> tuple[float, ...]:
+        """How far back to look; longer under a lamp that flickers more than the windows were made for."""
+        longer = min(3.0, max(1.0, (self._rest_spread or 0.0) / FLICKER_STOPS))
+        return tuple(longer * window_s for window_s in WINDOWS_S)
 
     def _still_resting(self, levels: NDArray[np.float64]) -> bool:
         """Whether a rest that was told goes on: noise may not make it flicker, a move ends it at once."""
@@ -143,13 +155,13 @@ class Ring:
         self._rest_level = None
         return False
 
-    def _at_rest(self, levels: NDArray[np.float64], spread: float) -> RingView:
+    def _at_rest(self, times: NDArray[np.float64], levels: NDArray[np.float64], spread: float) -> RingView:
         level = float(levels.mean())
         if self._rest_level is None:
             self._rest_level = level
         off = self._off(level)
-        if spread > self._bearable():
-            return RingView("shaking", off, spread_stops=spread)
+        if (unrest := self._unrest(times, levels, spread)) is not None:
+            return RingView(unrest, off, spread_stops=spread)
         if off is None or self._asked is None:
             return RingView("resting", None, spread_stops=spread)
         at = self._mark_at(level)
@@ -168,9 +180,14 @@ class Ring:
         constant = self._constant()
         return 0.0 if constant is None else 2.0 ** -(constant + max(self._marks.values()) + DARK_STOPS)
 
-    def _bearable(self) -> float:
-        """The unrest of light that a hand off the ring leaves, by what was seen at the stops taken."""
-        return max(SHAKING_STOPS, SHAKING_OVER_REST * (self._rest_spread or 0.0))
+    def _unrest(self, times: NDArray[np.float64], levels: NDArray[np.float64], spread: float) -> State | None:
+        """Shaking, where there has been more unrest for some frames than a hand off the ring leaves at stops taken."""
+        bearable = max(SHAKING_STOPS, SHAKING_OVER_REST * (self._rest_spread or 0.0))
+        if spread <= bearable:
+            self._shaken = 0
+            return None
+        self._shaken = self._shaken + 1 if _goes_to_and_fro(times, levels) else 0
+        return "shaking" if self._shaken >= SHAKING_SAMPLES else "turning"
 
     def _constant(self) -> float | None:
         """Level less mark, over the stops taken; the latest weigh most, since lamps drift."""
@@ -202,18 +219,12 @@ class Ring:
         return nearest if abs(self._marks[nearest] + constant - level) <= reach else None
 
     def _window(self, length_s: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        oldest = self._seen[-1][0] - length_s
-        kept: list[tuple[float, float]] = []
-        for sample in reversed(self._seen):
-            # Slow cameras: as many frames as it takes, however long they took.
-            if sample[0] < oldest and len(kept) >= LEAST_SAMPLES:
-                break
-            kept.append(sample)
-        times, levels = np.array(kept[::-1], dtype=np.float64).T
-        return times, levels
+        # Slow cameras: as many frames as it takes, however long they took.
+        start = min(bisect_left(self._times, self._times[-1] - length_s), max(0, len(self._times) - LEAST_SAMPLES))
+        return np.array(self._times[start:]), np.array(self._levels[start:])
 
     def _level(self, length_s: float) -> float | None:
-        if len(self._seen) < LEAST_SAMPLES:
+        if len(self._times) < LEAST_SAMPLES:
             return None
         return float(np.median(self._window(length_s)[1]))
 

@@ -66,10 +66,16 @@ class Live:
         self._last_s = -math.inf
         self._period_s = 0.05
         self._lost = False
+        self._told_bright = False
         self.unrest_stops = 0.0  # of the light at rest, rms, as last settled
         self.exposure_ms, self.gain_db = fixed_ms or 10.0, 0.0
         self._settings = self._apply(self.exposure_ms)
         self.meter.light(camera.grab(FIRST_TIMEOUT_S).pixels)
+
+    def ask(self, stop: float) -> None:
+        """The hand is sent to a stop."""
+        self.ring.ask(stop)
+        self._told_bright = False
 
     def frame(self, *, scored: bool = False) -> Generator[Event, Action, Frame]:
         """The next frame, shown. Raises Ended at the answer END, CaptureError where the camera stays away."""
@@ -103,13 +109,17 @@ class Live:
 
     def follow(self, frame: Frame) -> Generator[Event, Action, None]:
         """Keep the light in range while the ring turns, without waiting for it to settle."""
-        light = frame.light
-        if self._fixed_ms is not None or self._last_s < self._fresh_s() or frame.view.state == "dark":
+        light, before_ms = frame.light, self.exposure_ms
+        if self._last_s < self._fresh_s() or frame.view.state == "dark":
             return
         if light.clipped or light.tone > GUIDE_RANGE[1]:
-            yield from self._expose(self.exposure_ms / 4)
-        elif light.tone < GUIDE_RANGE[0] and self.exposure_ms < LONGEST_MS:
-            yield from self._expose(min(LONGEST_MS, self.exposure_ms * min(8.0, WANTED_TONE / max(light.tone, 0.01))))
+            yield from self._expose(before_ms / 4)
+            if light.clipped and self.exposure_ms >= 0.99 * before_ms and not self._told_bright:
+                yield Trouble(_out_of_reach(light, self.exposure_ms))
+                self._told_bright = True
+        elif light.tone < GUIDE_RANGE[0] and before_ms < LONGEST_MS:
+            yield from self._expose(min(LONGEST_MS, before_ms * min(8.0, WANTED_TONE / max(light.tone, 0.01))))
+        self._told_bright = self._told_bright and light.clipped
 
     def search(self) -> Generator[Event, Action, Frame]:
         """Set the exposure that brings the light tone to where it is wanted; the first settled frame there.
@@ -122,12 +132,11 @@ class Live:
             if not light.clipped and TONE_RANGE[0] <= light.tone <= TONE_RANGE[1]:
                 break
             aim_ms = self.exposure_ms / 4 if light.clipped else self.exposure_ms * WANTED_TONE / max(light.tone, 0.02)
-            aim_ms = self._whole_periods(min(LONGEST_MS, aim_ms))
-            if self._fixed_ms is None and aim_ms == self.exposure_ms and not light.clipped:
+            whole_ms = self._whole_periods(min(LONGEST_MS, aim_ms))
+            if whole_ms == self.exposure_ms and whole_ms < aim_ms < LONGEST_MS:
                 break  # as near as whole periods of the ripple come
-            before_ms = self.exposure_ms
-            if self._fixed_ms is None:
-                yield from self._expose(aim_ms)
+            aim_ms, before_ms = whole_ms, self.exposure_ms
+            yield from self._expose(aim_ms)
             if math.isclose(self.exposure_ms, before_ms, rel_tol=1e-3):
                 yield Trouble(_out_of_reach(light, self.exposure_ms))
                 break
@@ -188,12 +197,16 @@ class Live:
             return grab
 
     def _expose(self, exposure_ms: float) -> Generator[Event, Action, None]:
+        if self._fixed_ms is not None:
+            return
         self._settings = self._apply(exposure_ms)
         _obeyed((yield Exposed(self.exposure_ms, self.gain_db)))
 
     def _apply(self, exposure_ms: float) -> Settings:
         """Set the exposure, gain at its least; take over what is read back."""
-        settings = self._camera.set() if self._fixed_ms else self._camera.set(exposure_ms=exposure_ms, gain_db=0.0)
+        settings = (
+            self._camera.set() if self._fixed_ms is not None else self._camera.set(exposure_ms=exposure_ms, gain_db=0.0)
+        )
         if settings.exposure_ms is None and self._fixed_ms is None:
             raise CaptureError(
                 "The exposure of this camera cannot be set from here. Fix it on the camera, so that the widest stop "
@@ -219,7 +232,7 @@ def _obeyed(action: Action) -> Action:
 
 def _out_of_reach(light: Light, exposure_ms: float) -> str:
     if light.clipped or light.tone > TONE_RANGE[1]:
-        return f"Too bright: the light tone is at {light.tone:.0%} at {exposure_ms:g} ms. Dim the lamp."
+        return f"Too bright: the light tone is at {light.tone:.0%} at {exposure_ms:g} ms. Less light is needed."
     return f"Dim: the light tone reaches only {light.tone:.0%} of full scale at {exposure_ms:g} ms. More light helps."
 
 

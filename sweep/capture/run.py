@@ -118,8 +118,8 @@ class _Run:
     def _stop(self, stop: float, place: int) -> Steps:
         """One stop, from asking for it to its last frame."""
         self._drop(stop)
-        self._live.ring.ask(stop)
-        yield Ask(stop, place + 1, self._of, not self._live.ring.known, self._leaving)
+        self._live.ask(stop)
+        yield from self._told(Ask(stop, place + 1, self._of, not self._live.ring.known, self._leaving))
         while True:
             action = yield from self._arrival()
             if action in (Action.SKIP, Action.BACK):
