@@ -118,7 +118,7 @@ def picture(board: Board, console: Console) -> RenderableType:
     full = console.encoding.lower().startswith("utf")
     number = f"step {board.step.number} of {board.step.of}" if isinstance(board.step, Ask) else ""
     head = Table.grid(expand=True)
-    head.add_column(overflow="ellipsis", no_wrap=True)
+    head.add_column(overflow="crop", no_wrap=True)
     head.add_column(justify="right", no_wrap=True)
     head.add_row(Text(board.title, style="bold"), Text(number))
     rows: list[RenderableType] = [head, Text("-" * min(console.width, 80), style="dim")]
@@ -156,7 +156,7 @@ def _gauges(board: Board, seen: Seen, full: bool) -> Iterator[RenderableType]:
 
 
 def _row(name: str, bar: str, text: str) -> Text:
-    return Text(f"{name[:11]:<12}{bar}  {text}", no_wrap=True, overflow="ellipsis")
+    return Text(f"{name[:11]:<12}{bar}  {text}", no_wrap=True, overflow="crop")
 
 
 def _bar(value: float, wanted: float, block: str, thin: str) -> str:
@@ -168,7 +168,7 @@ def _bar(value: float, wanted: float, block: str, thin: str) -> str:
 
 def _progress(board: Board, full: bool) -> Text:
     """Every stop: done, now in brackets, or still to come."""
-    line = Text("stops       ", no_wrap=True, overflow="ellipsis")
+    line = Text("stops       ", no_wrap=True, overflow="crop")
     for stop in board.stops:
         if stop in board.done:
             line.append(f"{stop:g}{'✓' if full else 'x'} ")
