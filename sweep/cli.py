@@ -22,12 +22,14 @@ os.environ.setdefault(
 )  # small matrices: more threads cost time, and bytes must not depend on them
 
 if TYPE_CHECKING:
+    from sweep.probe import Tell
     from sweep.result import Result
     from sweep.screens import Screen
     from sweep.screens.page import Door
     from sweep.station import Station
 
 NEED_NOT_MET = 1
+NOT_FIT = 1
 LOOPBACK = "127.0.0.1"
 PATH = click.Path(path_type=Path)
 DEMO_SEED = 1
@@ -189,6 +191,46 @@ def frame(station_file: Path, camera_name: str | None, page: bool, bind: str | N
 
 
 @sweep.command()
+@click.argument("source", required=False)
+@click.option("--station", "station_file", type=PATH, metavar="FILE", help="Station file: what its samples are.")
+@click.option("--json", "as_json", is_flag=True, help="Print the findings as JSON.")
+def probe(source: str | None, station_file: Path | None, as_json: bool) -> int:
+    """Ask whether the camera SOURCE is fit to measure; without SOURCE, list the cameras that are there.
+
+    Point it at any still scene in steady light; it takes some 20 seconds, and changes exposure and gain. SOURCE as for
+    record. Exit status: 0 fit, 1 not fit, 2 bad usage, 3 camera fault.
+    """
+    station = _load(station_file) if station_file is not None else None
+    source = source or (station.camera.source if station is not None else None)
+    if source is None:
+        return _list_cameras(as_json)
+    from sweep.cameras import open_camera
+    from sweep.cameras.formats import open_untold
+    from sweep.demo import demo_station
+    from sweep.probe import probe as run
+
+    if station is not None or source == "simulated":
+        station = station or demo_station()
+        camera, stated = open_camera(source, station), station.camera
+    else:
+        camera, stated = open_untold(source, demo_station())
+    with camera, _probe_progress() as tell:
+        found = run(camera, stated, tell)
+    with _reader_may_leave():
+        if as_json:
+            from sweep.report.probe_json import probe_json
+
+            click.echo(probe_json(found, source), nl=False)
+        else:
+            from rich.console import Console
+
+            from sweep.screens.probe_table import probe_table
+
+            Console().print(*probe_table(found), sep="\n")
+    return NOT_FIT if found.verdict == "not fit" else 0
+
+
+@sweep.command()
 @click.argument("station_file", type=PATH, metavar="STATION.toml")
 @out_option
 @json_option
@@ -238,6 +280,38 @@ def _door(bind: str | None) -> "Door":
     console = Console()
     console.print(invitation(door, console))
     return door
+
+
+def _list_cameras(as_json: bool) -> int:
+    from sweep.cameras.present import cameras_present
+
+    cameras, missing = cameras_present()
+    with _reader_may_leave():
+        if as_json:
+            from sweep.report.probe_json import cameras_json
+
+            click.echo(cameras_json(cameras, missing), nl=False)
+        else:
+            from rich.console import Console
+
+            from sweep.screens.probe_table import present_table
+
+            Console().print(*present_table(cameras, missing), sep="\n")
+    return 0
+
+
+@contextmanager
+def _probe_progress() -> "Iterator[Tell]":
+    """What shows what a probe looks at; nothing in a pipe."""
+    if not sys.stderr.isatty():
+        yield lambda what, share: None
+        return
+    from rich.console import Console
+    from rich.progress import Progress
+
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task("Opening the camera", total=1.0)
+        yield lambda what, share: bar.update(task, description=f"Looking at {what}", completed=share)
 
 
 def _load(station_file: Path) -> "Station":
@@ -339,12 +413,19 @@ def _answer(result: "Result", station: "Station", out: Path | None, as_json: boo
     from sweep.screens.answer import answer
 
     files = write_report(out, result, station) if out is not None else ()
-    try:
+    with _reader_may_leave():
         if as_json:
             click.echo(result_json(result), nl=False)
         else:
             Console().print(answer(result, station, files))
+    return 0 if result.recommendation.meets_need else NEED_NOT_MET
+
+
+@contextmanager
+def _reader_may_leave() -> Iterator[None]:
+    """Print to a reader that may go away, as `head` does."""
+    try:
+        yield
         sys.stdout.flush()
     except (BrokenPipeError, SystemExit):  # the reader has gone; rich then ends the process, but the status counts
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-    return 0 if result.recommendation.meets_need else NEED_NOT_MET

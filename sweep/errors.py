@@ -7,6 +7,7 @@
     |  `- FrameError          one image file
     |- CaptureError        3  a device or capture fault; what was captured so far is kept
     |  `- CameraError         the camera is absent, stalled, or refuses a setting
+    |     `- FormatError         it delivers samples of another kind than the station file says
     `- Interrupted       130  the user ended the run; what was captured so far is kept
 
 A message is a short sentence or two: what is wrong, where (file, row, key), what to do.
@@ -45,6 +46,10 @@ class CaptureError(SweepError):
 
 class CameraError(CaptureError):
     """The camera is absent, has stalled, or refuses what it is asked."""
+
+
+class FormatError(CameraError):
+    """The camera delivers samples of another kind than the station file says."""
 
 
 class Interrupted(SweepError):

@@ -16,7 +16,7 @@ LEVELS = (
     ("readings", "choose", "fit"),
     ("light", "figures", "outlook"),
     ("notices", "verdict"),
-    ("analyse", "compare", "capture", "framing"),
+    ("analyse", "compare", "capture", "framing", "probe"),
     ("forecast", "report", "screens", "demo", "record", "frame"),
     ("cli",),
     ("__main__",),
@@ -27,6 +27,7 @@ LEVEL_OF = {name: level for level, row in enumerate(LEVELS) for name in row}
 PURE = {
     "errors", "station", "frames", "result", "optics", "lens", "measure", "ring", "readings", "fit", "choose",
     "light", "figures", "outlook", "notices", "verdict", "analyse", "compare", "forecast",
+    "probe",
 }  # fmt: skip
 IMPURE_IMPORTS = {
     "asyncio", "datetime", "glob", "io", "logging", "multiprocessing", "os", "pathlib", "random", "shutil", "socket",

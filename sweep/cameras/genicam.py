@@ -14,7 +14,7 @@ import numpy as np
 
 from sweep.cameras import Facts
 from sweep.cameras.owner import OwnedCamera
-from sweep.errors import CameraError
+from sweep.errors import CameraError, FormatError
 from sweep.frames import Pixels
 from sweep.station import Layout, Station
 
@@ -46,6 +46,7 @@ CALLS: dict[str, tuple[Any, tuple[Any, ...]]] = {
     "arv_camera_is_exposure_time_available": (_Whole, (_Pointer,)),
     "arv_camera_is_exposure_auto_available": (_Whole, (_Pointer,)),
     "arv_camera_set_exposure_time_auto": (None, (_Pointer, _Whole)),
+    "arv_camera_get_exposure_time_bounds": (None, (_Pointer, ctypes.POINTER(_Number), ctypes.POINTER(_Number))),
     "arv_camera_set_exposure_time": (None, (_Pointer, _Number)),
     "arv_camera_get_exposure_time": (_Number, (_Pointer,)),
     "arv_camera_is_gain_available": (_Whole, (_Pointer,)),
@@ -60,6 +61,12 @@ CALLS: dict[str, tuple[Any, tuple[Any, ...]]] = {
     "arv_camera_stop_acquisition": (None, (_Pointer,)),
 }
 PLAIN_CALLS: dict[str, tuple[Any, tuple[Any, ...]]] = {
+    "arv_update_device_list": (None, ()),
+    "arv_get_n_devices": (ctypes.c_uint, ()),
+    "arv_get_device_address": (_Text, (ctypes.c_uint,)),
+    "arv_get_device_vendor": (_Text, (ctypes.c_uint,)),
+    "arv_get_device_model": (_Text, (ctypes.c_uint,)),
+    "arv_get_device_serial_nbr": (_Text, (ctypes.c_uint,)),
     "arv_buffer_new_allocate": (_Pointer, (ctypes.c_size_t,)),
     "arv_stream_push_buffer": (None, (_Pointer, _Pointer)),
     "arv_stream_timeout_pop_buffer": (_Pointer, (_Pointer, ctypes.c_uint64)),
@@ -77,6 +84,20 @@ class _Error(ctypes.Structure):
 def open_genicam(address: str, station: Station) -> OwnedCamera:
     """Open a camera by its address, serial number or name; empty means the first one. Raises CameraError."""
     return OwnedCamera(_Aravis(address, station))
+
+
+def found_genicam() -> Sequence[tuple[str, str]]:
+    """The cameras that answer within a second: address, and maker, model and serial number. Raises CameraError."""
+    call, _ = _library()
+    call["arv_update_device_list"]()
+    found = []
+    for number in range(call["arv_get_n_devices"]()):
+        address, *words = (
+            (call[f"arv_get_device_{what}"](number) or b"").decode(errors="replace")
+            for what in ("address", "vendor", "model", "serial_nbr")
+        )
+        found.append((address, " ".join(word for word in words if word)))
+    return found
 
 
 class _Aravis:
@@ -125,14 +146,12 @@ class _Aravis:
         return None
 
     def apply(self, exposure_ms: float | None, gain_db: float | None) -> tuple[float | None, float | None]:
-        """Set and read back; a gain below what the camera has becomes its least."""
+        """Set and read back; what is beyond the camera's bounds becomes their nearest."""
         if exposure_ms is not None and self._ask("arv_camera_is_exposure_time_available", self._camera):
-            self._ask("arv_camera_set_exposure_time", self._camera, exposure_ms * 1000)
+            self._ask("arv_camera_set_exposure_time", self._camera, self._within("exposure_time", exposure_ms * 1000))
         has_gain = self._ask("arv_camera_is_gain_available", self._camera)
         if gain_db is not None and has_gain:
-            least, most = _Number(), _Number()
-            self._ask("arv_camera_get_gain_bounds", self._camera, ctypes.byref(least), ctypes.byref(most))
-            self._ask("arv_camera_set_gain", self._camera, min(most.value, max(least.value, gain_db)))
+            self._ask("arv_camera_set_gain", self._camera, self._within("gain", gain_db))
         self._exposure_ms = self._ask("arv_camera_get_exposure_time", self._camera) / 1000
         return self._exposure_ms, float(self._ask("arv_camera_get_gain", self._camera)) if has_gain else 0.0
 
@@ -156,6 +175,12 @@ class _Aravis:
                 self._unref(thing)
         self._camera = self._stream = None
 
+    def _within(self, what: str, value: float) -> float:
+        """The value that the camera can be set to, nearest to one that is wanted."""
+        least, most = _Number(), _Number()
+        self._ask(f"arv_camera_get_{what}_bounds", self._camera, ctypes.byref(least), ctypes.byref(most))
+        return min(most.value, max(least.value, value))
+
     def _choose_format(self) -> str:
         """The first of the wanted formats that the camera has."""
         count = ctypes.c_uint()
@@ -165,7 +190,7 @@ class _Aravis:
         for name in wanted:
             if name in there:
                 return name
-        raise CameraError(
+        raise FormatError(
             f"{self.name} has none of the pixel formats {', '.join(wanted)} that camera.layout and camera.bit_depth "
             f"ask for; it has {', '.join(there)}."
         )

@@ -23,7 +23,7 @@ import numpy as np
 
 from sweep.cameras import Facts
 from sweep.cameras.owner import OwnedCamera
-from sweep.errors import CameraError
+from sweep.errors import CameraError, FormatError
 from sweep.frames import Pixels
 from sweep.station import Layout, Station
 
@@ -31,6 +31,7 @@ OPEN_TIMEOUT_MS = 3000
 READ_TIMEOUT_MS = 2000
 MANUAL_EXPOSURE_V4L2 = 1
 SHUTTER_PRIORITY_V4L2 = 3
+BACKENDS = {"linux": cv2.CAP_V4L2, "win32": cv2.CAP_DSHOW, "darwin": cv2.CAP_AVFOUNDATION}
 V4L2_EXPOSURES_A_MS = 10  # it counts in 100 us
 PLAIN_PICTURE = {  # whatever would change edges, noise or the response
     cv2.CAP_PROP_AUTO_WB: 0,
@@ -41,10 +42,15 @@ PLAIN_PICTURE = {  # whatever would change edges, noise or the response
 
 def open_opencv(source: int | str, station: Station) -> OwnedCamera:
     """Open a device number, a URL or a video file. Raises CameraError."""
-    cv2.utils.logging.setLogLevel(cv2.utils.logging.LOG_LEVEL_SILENT)
+    silence()
     if isinstance(source, int):
         return OwnedCamera(_Numbered(source, station))
     return OwnedCamera(_Streamed(source, station))
+
+
+def silence() -> None:
+    """Keep OpenCV's own messages off the terminal."""
+    cv2.utils.logging.setLogLevel(cv2.utils.logging.LOG_LEVEL_SILENT)
 
 
 class _Captured:
@@ -131,8 +137,7 @@ class _Numbered(_Captured):
 
     def open(self) -> None:
         """Open, choose the plainest pixel format, take one frame, then switch off what is automatic."""
-        backend = {"linux": cv2.CAP_V4L2, "win32": cv2.CAP_DSHOW, "darwin": cv2.CAP_AVFOUNDATION}
-        self._capture = cv2.VideoCapture(self._number, backend.get(sys.platform, cv2.CAP_ANY))
+        self._capture = cv2.VideoCapture(self._number, BACKENDS.get(sys.platform, cv2.CAP_ANY))
         if not self._capture.isOpened():
             raise CameraError(f"{self.name} cannot be opened. Is it plugged in, and not in use by another program?")
         if self._layout != "bgr":
@@ -177,17 +182,17 @@ def plain(
 ) -> Pixels:
     """A frame as the station's layout wants it: one channel, or blue, green, red.
 
-    Raises CameraError where the driver delivers something else than the station file says.
+    Raises FormatError where the driver delivers something else than the station file says.
     """
     if frame.dtype == np.uint8 and bit_depth > 8:
-        raise CameraError(
+        raise FormatError(
             f"{name} delivers 8 bits, but camera.bit_depth is {bit_depth}. Set the camera to more bits, or state 8."
         )
     if frame.dtype not in (np.uint8, np.uint16):
-        raise CameraError(f"{name} delivers samples of the kind {frame.dtype}; 8 or 16 bit are needed.")
+        raise FormatError(f"{name} delivers samples of the kind {frame.dtype}; 8 or 16 bit are needed.")
     if frame.ndim == 3 and layout != "bgr":
         channels = frame.shape[2]
         if channels == 3 and not (frame[..., 0] == frame[..., 1]).all():
-            raise CameraError(f'{name} delivers colour, but camera.layout is {layout!r}. State "bgr".')
+            raise FormatError(f'{name} delivers colour, but camera.layout is {layout!r}. State "bgr".')
         frame = frame[..., 0]  # grey in three channels, or the brightness of a YUYV pair
     return np.ascontiguousarray(frame)

@@ -1,0 +1,85 @@
+"""Is this camera fit to measure? It is asked by its light, since drivers do not say.
+
+A few hundred frames of any still scene in steady light: exposure and gain are changed and must be followed, frames
+at rest must be new and alike, noise must be the pixels' own. Each finding has a verdict and what to do; docs/probe.md
+says how each is made.
+"""
+
+from sweep.cameras import Camera
+from sweep.probe import light, picture, rhythm
+from sweep.probe.bench import Bench
+from sweep.probe.pulse import ROLLING_TURNS
+from sweep.probe.records import VERDICTS, Figures, Finding, Probe, Tell, Verdict
+from sweep.probe.run import Observed, observe
+from sweep.station import Camera as Stated
+
+__all__ = ["VERDICTS", "Finding", "Probe", "Tell", "Verdict", "probe"]
+
+TOO_DARK = 0.1
+TOO_BRIGHT = 0.98
+
+
+def probe(camera: Camera, stated: Stated, tell: Tell = lambda what, share: None) -> Probe:
+    """Probe a camera; some 300 to 400 frames, 20 s at 20 frames a second.
+
+    stated: what is known of its samples (layout, bit depth, response, black level). The camera is left at other
+    settings than it was found. Raises CameraError where it fails on the way.
+    """
+    seen, bench = observe(camera, stated, tell)
+    tone = float(seen.rest.samples[-1].tone / seen.codes.top_dn)
+    findings: list[Finding | None] = [_no_light(seen, tone), picture.bit_depth(seen, bench, stated)]
+    if findings[0] is None:
+        findings += _judged(seen, bench, stated)
+    tell("done", 1.0)
+    told = tuple(finding for finding in findings if finding is not None)
+    return Probe(seen.device, seen.rest.exposure_ms, tone, bench.frames, told)
+
+
+def _judged(seen: Observed, bench: Bench, stated: Stated) -> list[Finding | None]:
+    """All findings that need light; what one of them spoils, the others don't judge."""
+    response = light.response_of(seen) if seen.settable else None
+    coarse_ms = None if response is None else light.coarse_step(seen)
+    black_dn = _black_dn(None if coarse_ms is not None else response, stated)
+    ripple = rhythm.ripple_of(seen, black_dn)
+    pulsing = ripple is not None and ripple.amplitude > rhythm.RIPPLE_GOOD
+    locked = light.automatics(seen, response, pulsing)
+    is_locked = locked.verdict != "not fit"
+    hidden = light.AUTOMATICS if not is_locked else "exposures that are not what they say" if coarse_ms else ""
+    straight = light.linearity(response, hidden, ripple.amplitude if ripple is not None and pulsing else 0.0)
+    bent = hidden or ("the bent response" if straight.verdict == "not fit" else "")
+    striped = ripple is not None and pulsing and ripple.turns > ROLLING_TURNS
+    still = is_locked and not striped
+    processed = picture.processing(picture.processing_of(seen, bench, stated), stated, still)
+    noisy = bent or ("the processing" if processed.verdict == "not fit" else "")
+    return [
+        locked,
+        straight,
+        light.black(seen, response, stated, bent),
+        light.exposure(seen, response, coarse_ms if is_locked else None, bent),
+        *([light.gain(seen, response, bent), light.settling(seen, is_locked)] if seen.gains else []),
+        rhythm.frames_finding(seen, bench.frames),
+        rhythm.rate_finding(seen, is_locked),
+        rhythm.flicker(ripple, seen, is_locked),
+        rhythm.drift(seen, pulsing, is_locked),
+        processed,
+        picture.noise(picture.transfer_of(seen, bench, black_dn), seen, noisy, black_dn),
+    ]
+
+
+def _black_dn(response: light.Response | None, stated: Stated) -> float:
+    """Level without light: by the exposures, else as stated."""
+    if response is not None and response.slope_dn_ms > 0:
+        return response.black_dn
+    return stated.black_level_dn if stated.response == "linear" else 0.0
+
+
+def _no_light(seen: Observed, tone: float) -> Finding | None:
+    """Why nothing can be judged, if so."""
+    figures: Figures = {"tone": tone}
+    if tone > TOO_BRIGHT or not seen.even.blocks:
+        to_do = "Close the ring, dim the lamp or shorten the exposure, then probe again."
+        return Finding("light", "Light", "not fit", "the picture clips: nothing can be judged", to_do, figures)
+    if not seen.follows and tone < TOO_DARK:
+        to_do = "Take the cap off, open the ring or give more light, then probe again."
+        return Finding("light", "Light", "not fit", "too dark: nothing can be judged", to_do, figures)
+    return None

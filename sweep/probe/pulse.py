@@ -1,0 +1,111 @@
+"""A pulsing lamp, from the levels of strips of rows over frames at odd moments.
+
+The periodogram is the least-squares one of N. R. Lomb, Least-squares frequency analysis of unequally spaced data,
+Astrophys. Space Sci. 39, 447-462 (1976), summed over the strips, since a shutter that rolls shows each another phase.
+Valid for ripple below half of `MOST_HZ` or above it by folding only: then the frequency is one of several.
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from sweep.measure.linear import Floats
+
+MOST_HZ = 400.0
+LEAST_HZ = 1.0
+PER_RESOLUTION = 5.0
+MAINS_HZ = (100.0, 120.0)
+MAINS_OFF_HZ = 1.2  # mains wander, and a computer's arrival times jitter
+AS_GOOD = 1.3  # as much left unexplained, or
+ALL_BUT = 0.02
+FALSE_ALARM = 1e-4
+ROLLING_TURNS = 0.15
+
+
+@dataclass(frozen=True, slots=True)
+class Ripple:
+    """Ripple of the light about its level.
+
+    `amplitude`: relative, median over the strips of rows; `hz`: None where no one frequency explains it; `others_hz`:
+    frequencies that would explain it as well; `turns`: periods that pass from the top row to the bottom row;
+    `noise`: relative, rms of what is left of a strip's level.
+    """
+
+    amplitude: float
+    hz: float | None
+    others_hz: tuple[float, ...]
+    turns: float
+    noise: float
+
+
+def find_ripple(time_s: Floats, bands: Floats) -> Ripple | None:
+    """The ripple of strips' levels, (frames, strips) black taken off, at times (frames,); None with too few frames."""
+    n = len(time_s)
+    span_s = float(np.ptp(time_s)) if n else 0.0
+    if n < 12 or span_s <= 0 or not (bands.mean(axis=0) > 0).all():
+        return None
+    time_s = time_s - time_s.mean()
+    base = np.linalg.qr(np.column_stack([np.ones(n), time_s]))[0]
+    off = bands / bands.mean(axis=0) - 1.0
+    off = off - base @ (base.T @ off)
+    hz = np.arange(max(LEAST_HZ, 2.0 / span_s), MOST_HZ, 1.0 / (PER_RESOLUTION * span_s))
+    share = _explained(time_s, off, hz, base)
+    total = float((off**2).sum())
+    best = int(np.argmax(share))
+    rms = math.sqrt(total / off.size)
+    if total <= 0 or share[best] < _chance_level(n, hz.size):
+        return Ripple(rms * math.sqrt(2), None, (), 0.0, rms)
+    choice, others = _choose(hz, share, best)
+    turn = 2 * math.pi * hz[choice] * time_s
+    waves = np.column_stack([np.cos(turn), np.sin(turn)])
+    waves = waves - base @ (base.T @ waves)
+    part = np.linalg.lstsq(waves, off, rcond=None)[0]
+    rest = off - waves @ part
+    phase = np.unwrap(np.arctan2(part[1], part[0]))
+    strips = len(phase)
+    slope = float(np.polynomial.polynomial.polyfit(np.arange(strips), phase, 1)[1]) if strips > 2 else 0.0
+    return Ripple(
+        amplitude=float(np.median(np.hypot(part[0], part[1]))),
+        hz=float(hz[choice]),
+        others_hz=others,
+        turns=abs(slope) * strips / (2 * math.pi),
+        noise=float(np.sqrt(np.mean(rest**2))),
+    )
+
+
+def _explained(time_s: Floats, off: Floats, hz: Floats, base: Floats) -> Floats:
+    """Part of the strips' variance that a wave of each frequency explains."""
+    turn = 2 * math.pi * np.outer(hz, time_s)
+    cos, sin = np.cos(turn), np.sin(turn)
+    cos -= (cos @ base) @ base.T
+    sin -= (sin @ base) @ base.T
+    cc, ss, cs = (cos * cos).sum(axis=1), (sin * sin).sum(axis=1), (cos * sin).sum(axis=1)
+    c, s = cos @ off, sin @ off
+    determinant = cc * ss - cs * cs
+    # Near the folding frequency sine and cosine are one: then the larger of the two counts alone.
+    sound = determinant > 1e-3 * np.maximum(cc, ss) ** 2
+    both = (ss[:, None] * c**2 - 2 * cs[:, None] * c * s + cc[:, None] * s**2).sum(axis=1)
+    alone = np.where(cc > ss, (c**2).sum(axis=1), (s**2).sum(axis=1)) / np.maximum(np.maximum(cc, ss), 1e-9)
+    power = np.where(sound, both / np.where(sound, determinant, 1.0), alone)
+    return np.asarray(power / max(float((off**2).sum()), 1e-30))
+
+
+def _chance_level(n: int, tried: int) -> float:
+    """Share that noise explains at the best of the frequencies with the probability FALSE_ALARM, for one strip.
+
+    The share at one frequency is beta distributed (1, (n - 4) / 2) for normal noise: as Lomb's paper has it for many n.
+    """
+    independent = tried / PER_RESOLUTION
+    return float(1.0 - (FALSE_ALARM / independent) ** (2.0 / max(n - 4, 1)))
+
+
+def _choose(hz: Floats, share: Floats, best: int) -> tuple[int, tuple[float, ...]]:
+    """The frequency to name, the lamps' usual ones first among equals; and a few others as good."""
+    peaks = np.flatnonzero(1.0 - share <= max(AS_GOOD * (1.0 - share[best]), ALL_BUT))
+    groups = np.split(peaks, np.flatnonzero(np.diff(hz[peaks]) > 0.5) + 1)
+    tops = [int(group[np.argmax(share[group])]) for group in groups]
+    usual = [k for k in tops for mains in MAINS_HZ if abs(hz[k] - mains) < MAINS_OFF_HZ]
+    choice = max(usual or [best], key=lambda k: float(share[k]))
+    others = sorted((k for k in tops if k != choice and abs(hz[k] - hz[choice]) > 0.5), key=lambda k: -float(share[k]))
+    return choice, tuple(float(hz[k]) for k in others[:3])
