@@ -44,9 +44,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
     camera = _camera(sweep)
     lens = FittedLens(fit, found.discrepancy.deviation) if fit is not None else None
     compressed = any(note.code == "compressed-source" for note in source.notes)
-    noticed = notices(
-        sweep, readings, light, fit, fit.focus_steps if fit is not None else (), found.discrepancy, station, compressed
-    )
+    noticed = notices(sweep, readings, light, fit, found.discrepancy, station, compressed)
     recommendation, stops, notes = choose(station, evidence, camera, found.outlook, lens)
     return Result(
         recommendation,

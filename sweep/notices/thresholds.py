@@ -1,0 +1,20 @@
+"""From where on a thing is worth a notice: sizes that matter to the answer, and how certain they must be."""
+
+SAME_LIGHT_LN_N = 0.1
+RING_OFF_LN_N = 0.09
+FRAME_OFF_LN_LIGHT = 0.04
+DRIFT = 0.03
+LAMP_RIPPLE = 0.012
+ROW_RIPPLE = 0.003
+VIBRATION_PX = 0.04
+MOVED_PX = 0.5
+RAGGED_PX = 0.2
+BENT_PX = 1.5
+CORRELATION = 0.03
+OVERSHOOT = 0.03
+MISFIT_CONTRAST = 0.008
+MISFIT_CHI2 = 1.6
+FOCUS_STEP_WAVES = 0.15
+EXPOSURE_MISMATCH = 0.05
+BENT_TRANSFER = 0.35
+CERTAIN = 5.0
