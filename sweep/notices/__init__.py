@@ -20,28 +20,13 @@ from sweep.notices.model import model_notices
 from sweep.notices.movement import movement_notices
 from sweep.notices.patches import patch_notices
 from sweep.notices.ring import ring_notices, stray_frame_notices
-from sweep.notices.thresholds import (
-    BENT_PX,
-    BENT_TRANSFER,
-    CERTAIN,
-    CORRELATION,
-    OVERSHOOT,
-    RAGGED_PX,
-)
+from sweep.notices.thresholds import BENT_PX, BENT_TRANSFER, CERTAIN, CORRELATION, OVERSHOOT, RAGGED_PX
 from sweep.outlook import Discrepancy
 from sweep.readings import Sweep
 from sweep.result import NOTE_CODES, Note, Reading
 from sweep.station import Station
 
-__all__ = [
-    "BENT_PX",
-    "BENT_TRANSFER",
-    "CERTAIN",
-    "CORRELATION",
-    "OVERSHOOT",
-    "RAGGED_PX",
-    "notices",
-]
+__all__ = ["BENT_PX", "BENT_TRANSFER", "CERTAIN", "CORRELATION", "OVERSHOOT", "RAGGED_PX", "notices"]
 
 
 def notices(
@@ -57,9 +42,7 @@ def notices(
     processed = [] if compressed else processing_notices(sweep)
     bent = exposure_notices(sweep, station)
     lamp = [] if bent else lamp_notices(sweep, light)
-    rippling = station.need.flicker_hz > 0 or any(
-        note.code == "flicker" for note in lamp
-    )
+    rippling = station.need.flicker_hz > 0 or any(note.code == "flicker" for note in lamp)
     found = [
         *frame_notices(sweep, station),
         *ring_notices(sweep, light),

@@ -2,13 +2,7 @@
 
 import numpy as np
 
-from sweep.notices.thresholds import (
-    BENT_TRANSFER,
-    CERTAIN,
-    CORRELATION,
-    EXPOSURE_MISMATCH,
-    OVERSHOOT,
-)
+from sweep.notices.thresholds import BENT_TRANSFER, CERTAIN, CORRELATION, EXPOSURE_MISMATCH, OVERSHOOT
 from sweep.readings import CLIPPED_SHARE, Sweep
 from sweep.result import Note
 from sweep.station import Station
@@ -16,12 +10,7 @@ from sweep.station import Station
 
 def processing_notices(sweep: Sweep) -> list[Note]:
     """Sharpening or smoothing in the camera: noise that neighbours share, or an overshoot that no lens gives."""
-    points = [
-        p
-        for s in sweep.sightings
-        if s.saturated_fraction <= CLIPPED_SHARE
-        for p in s.noise
-    ]
+    points = [p for s in sweep.sightings if s.saturated_fraction <= CLIPPED_SHARE for p in s.noise]
     shared = 0.0
     if points:
         dof = np.array([p.dof for p in points])
@@ -31,9 +20,7 @@ def processing_notices(sweep: Sweep) -> list[Note]:
             shared = 0.0
     seen = [s.edge for s in sweep.sightings if s.ok and s.edge is not None]
     sharp = sorted(seen, key=lambda e: e.spread_px)[: max(3, len(seen) // 2)]
-    overshoot = (
-        float(np.median([0.5 * sum(e.overshoot) for e in sharp])) if sharp else 0.0
-    )
+    overshoot = float(np.median([0.5 * sum(e.overshoot) for e in sharp])) if sharp else 0.0
     told = []
     if abs(shared) > CORRELATION:
         told.append(f"noise of neighbouring pixels is correlated ({shared:+.2f})")
@@ -54,11 +41,7 @@ def exposure_notices(sweep: Sweep, station: Station) -> list[Note]:
     """Frames of one stop whose light does not follow their exposures."""
     ratios = []
     for s in sweep.sightings:
-        if (
-            s.ok
-            and len(s.exposures) == len(s.frame_light)
-            and np.ptp(s.exposures) > 0.3 * s.exposures.max()
-        ):
+        if s.ok and len(s.exposures) == len(s.frame_light) and np.ptp(s.exposures) > 0.3 * s.exposures.max():
             order = np.argsort(s.exposures)
             ratios.append(float(s.frame_light[order[-1]] / s.frame_light[order[0]]))
     if not ratios or abs(np.median(ratios) - 1.0) <= EXPOSURE_MISMATCH:

@@ -26,12 +26,7 @@ def frame_notices(sweep: Sweep, station: Station) -> list[Note]:
         dark = [s for s in sweep.at(stop) if "low-signal" in s.why_not]
         if dark:
             names = listed(station.targets[s.site.target].name for s in dark)
-            out.append(
-                Note(
-                    "low-signal",
-                    f"{mark(stop)}: too dark to measure ({names}). Expose this stop longer.",
-                )
-            )
+            out.append(Note("low-signal", f"{mark(stop)}: too dark to measure ({names}). Expose this stop longer."))
         few = [s for s in sweep.at(stop) if s.frames < 2]
         if few:
             out.append(
@@ -62,8 +57,4 @@ def frame_notices(sweep: Sweep, station: Station) -> list[Note]:
 def _same_frames(files: Sequence[str]) -> str:
     """Who is the same: several files, or one that is listed more than once."""
     names = list(dict.fromkeys(files))
-    return (
-        f"{listed(names)} are"
-        if len(names) > 1
-        else f"{names[0]} is listed {len(files)} times:"
-    )
+    return f"{listed(names)} are" if len(names) > 1 else f"{names[0]} is listed {len(files)} times:"

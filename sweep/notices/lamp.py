@@ -55,11 +55,7 @@ def row_ripple(row_light: Sequence[Floats]) -> tuple[float, float] | None:
     row_light: for each stop, (n, rows), ratios to the stop's mean frame. The power spectra of all frames are averaged;
     a band is a line at 30 times the median power that holds a quarter of all, of an amplitude that matters.
     """
-    spectra = [
-        np.abs(np.fft.rfft(r - r.mean(axis=1, keepdims=True), axis=1)) ** 2
-        for r in row_light
-        if len(r) >= 2
-    ]
+    spectra = [np.abs(np.fft.rfft(r - r.mean(axis=1, keepdims=True), axis=1)) ** 2 for r in row_light if len(r) >= 2]
     if not spectra:
         return None
     rows = row_light[0].shape[1]
@@ -69,10 +65,6 @@ def row_ripple(row_light: Sequence[Floats]) -> tuple[float, float] | None:
     peak = int(np.argmax(power))
     line = float(power[max(peak - 1, 0) : peak + 2].sum())
     amplitude = 2.0 * np.sqrt(line) / rows
-    if (
-        line < 0.25 * power.sum()
-        or power[peak] < 30.0 * np.median(power)
-        or amplitude < ROW_RIPPLE
-    ):
+    if line < 0.25 * power.sum() or power[peak] < 30.0 * np.median(power) or amplitude < ROW_RIPPLE:
         return None
     return float(amplitude), rows / float(peak + 2)

@@ -3,12 +3,7 @@
 import numpy as np
 
 from sweep.fit import LensFit
-from sweep.notices.thresholds import (
-    CERTAIN,
-    FOCUS_STEP_WAVES,
-    MISFIT_CHI2,
-    MISFIT_CONTRAST,
-)
+from sweep.notices.thresholds import CERTAIN, FOCUS_STEP_WAVES, MISFIT_CHI2, MISFIT_CONTRAST
 from sweep.notices.wording import mark
 from sweep.outlook import Discrepancy
 from sweep.readings import Sweep
@@ -16,17 +11,11 @@ from sweep.result import Note
 from sweep.station import Station
 
 
-def model_notices(
-    fit: LensFit | None, discrepancy: Discrepancy, sweep: Sweep, station: Station
-) -> list[Note]:
+def model_notices(fit: LensFit | None, discrepancy: Discrepancy, sweep: Sweep, station: Station) -> list[Note]:
     """A focus that changed midway, else a model that does not describe the readings, and where."""
     if fit is None:
         return []
-    certain = [
-        s
-        for s in fit.focus_steps
-        if abs(s.z) > 2.0 * CERTAIN and abs(s.waves) > FOCUS_STEP_WAVES
-    ]
+    certain = [s for s in fit.focus_steps if abs(s.z) > 2.0 * CERTAIN and abs(s.waves) > FOCUS_STEP_WAVES]
     if certain:
         step = max(certain, key=lambda s: abs(s.z))
         return [
@@ -36,11 +25,7 @@ def model_notices(
                 "ring was touched. Lock it and take the sweep again.",
             )
         ]
-    off = (
-        float(np.sqrt(np.mean(discrepancy.deviation**2)))
-        if discrepancy.readings
-        else 0.0
-    )
+    off = float(np.sqrt(np.mean(discrepancy.deviation**2))) if discrepancy.readings else 0.0
     if off < MISFIT_CONTRAST and fit.reduced_chi2 < MISFIT_CHI2:
         return []
     worst = int(np.argmax(fit.misfit))

@@ -27,9 +27,7 @@ def movement_notices(sweep: Sweep, station: Station) -> list[Note]:
     if noise2:
         every = np.array([v for values in squares.values() for v in values])
         rms = float(np.sqrt(max(every.mean() - np.mean(noise2), 0.0)))
-        certain = every.mean() > np.mean(noise2) * (
-            1.0 + CERTAIN * np.sqrt(2.0 / len(every))
-        )
+        certain = every.mean() > np.mean(noise2) * (1.0 + CERTAIN * np.sqrt(2.0 / len(every)))
         if rms > VIBRATION_PX and certain:
             worst = max(squares, key=lambda stop: float(np.mean(squares[stop])))
             out.append(
@@ -46,9 +44,7 @@ def _moved_targets(sweep: Sweep, station: Station, rms: float) -> list[Note]:
     places: dict[tuple[int, int], list[tuple[float, Floats]]] = defaultdict(list)
     for s in sweep.sightings:
         if s.ok and s.position_px is not None:
-            places[s.site.target, s.site.patch].append(
-                (s.stop, np.array(s.position_px))
-            )
+            places[s.site.target, s.site.patch].append((s.stop, np.array(s.position_px)))
     limit = max(MOVED_PX, 4.0 * rms)
     moved: dict[float, dict[int, float]] = defaultdict(dict)
     for (target, _), seen in places.items():
@@ -60,11 +56,7 @@ def _moved_targets(sweep: Sweep, station: Station, rms: float) -> list[Note]:
     out = []
     for stop, targets in sorted(moved.items()):
         every = len(targets) == len({t for t, _ in places}) > 1
-        what = (
-            "every target stands"
-            if every
-            else f"{listed(station.targets[t].name for t in targets)} stands"
-        )
+        what = "every target stands" if every else f"{listed(station.targets[t].name for t in targets)} stands"
         cause = "the camera or the whole set was nudged" if every else "it was nudged"
         out.append(
             Note(

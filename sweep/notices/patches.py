@@ -11,13 +11,9 @@ from sweep.result import NOTE_CODES, Note, Reading
 from sweep.station import Station
 
 
-def patch_notices(
-    sweep: Sweep, readings: Sequence[Reading], station: Station
-) -> list[Note]:
+def patch_notices(sweep: Sweep, readings: Sequence[Reading], station: Station) -> list[Note]:
     """Patches that could not be read as what they should be; bent or ragged edges; features beyond Nyquist."""
-    by_code: dict[str, dict[tuple[int, int], list[float]]] = defaultdict(
-        lambda: defaultdict(list)
-    )
+    by_code: dict[str, dict[tuple[int, int], list[float]]] = defaultdict(lambda: defaultdict(list))
     for s in sweep.sightings:
         for code in s.why_not:
             if code in ("edge-angle", "edge-not-found", "pattern-not-found"):
@@ -26,12 +22,7 @@ def patch_notices(
     for code, places in by_code.items():
         for (target, patch), stops in places.items():
             where = f"{station.targets[target].name}, patch {patch} at {listed(mark(k) for k in stops)}"
-            out.append(
-                Note(
-                    code,
-                    f"{where}: {NOTE_CODES[code].meaning} {NOTE_CODES[code].remedy}",
-                )
-            )
+            out.append(Note(code, f"{where}: {NOTE_CODES[code].meaning} {NOTE_CODES[code].remedy}"))
     edges: dict[tuple[int, int], list[EdgeMeasure]] = defaultdict(list)
     for s in sweep.sightings:
         if s.ok and s.edge is not None:

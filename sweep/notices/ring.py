@@ -6,12 +6,7 @@ import numpy as np
 
 from sweep.light import Light
 from sweep.notices.lamp import usual_ripple
-from sweep.notices.thresholds import (
-    CERTAIN,
-    FRAME_OFF_LN_LIGHT,
-    RING_OFF_LN_N,
-    SAME_LIGHT_LN_N,
-)
+from sweep.notices.thresholds import CERTAIN, FRAME_OFF_LN_LIGHT, RING_OFF_LN_N, SAME_LIGHT_LN_N
 from sweep.notices.wording import mark
 from sweep.readings import Sweep
 from sweep.result import Note
@@ -71,14 +66,8 @@ def stray_frame_notices(sweep: Sweep, light: Light) -> list[Note]:
             continue
         away = off - np.median(off) if len(off) > 2 else np.array([off[1] - off[0]])
         worst = float(away[np.argmax(np.abs(away))])
-        rest = (
-            np.delete(off, int(np.argmax(np.abs(off - np.median(off)))))
-            if len(off) > 2
-            else off[:1]
-        )
-        if abs(worst) > max(
-            FRAME_OFF_LN_LIGHT, 3.0 * float(np.ptp(rest)), 2.0 * CERTAIN * usual
-        ):
+        rest = np.delete(off, int(np.argmax(np.abs(off - np.median(off))))) if len(off) > 2 else off[:1]
+        if abs(worst) > max(FRAME_OFF_LN_LIGHT, 3.0 * float(np.ptp(rest)), 2.0 * CERTAIN * usual):
             out.append(
                 Note(
                     "ring-off",
