@@ -6,6 +6,7 @@ import os
 import select
 import shutil
 import subprocess
+import sys
 import time
 from pathlib import Path
 
@@ -15,6 +16,14 @@ OPTIONS = (
     " --disable-component-update --disable-sync --disable-dev-shm-usage --autoplay-policy=user-gesture-required"
     " --remote-debugging-pipe about:blank"
 )
+# The browser listens at descriptor 3 and answers at 4: put the pipes there, then become the browser.
+START = """
+import fcntl, os, sys
+theirs_in, theirs_out = (fcntl.fcntl(int(fd), fcntl.F_DUPFD, 10) for fd in sys.argv[1:3])
+os.dup2(theirs_in, 3)
+os.dup2(theirs_out, 4)
+os.execv(sys.argv[3], sys.argv[3:])
+"""
 PATIENCE_S = 60.0
 
 
@@ -24,10 +33,11 @@ class Browser:
     def __init__(self, folder: Path) -> None:
         theirs_in, self._to = os.pipe()
         self._from, theirs_out = os.pipe()
-        # The browser listens at descriptor 3 and answers at 4; the shell puts the pipes there.
-        command = f"exec 3<&{theirs_in} 4>&{theirs_out}; exec {CHROMIUM} {OPTIONS} --user-data-dir={folder}"
         self._process = subprocess.Popen(
-            ["sh", "-c", command],
+            [
+                *(sys.executable, "-c", START, str(theirs_in), str(theirs_out)),
+                *(str(CHROMIUM), *OPTIONS.split(), f"--user-data-dir={folder}"),
+            ],
             pass_fds=(theirs_in, theirs_out),
             stdout=subprocess.DEVNULL,
             stderr=subprocess.DEVNULL,
@@ -150,7 +160,10 @@ class Tab:
         file.write_bytes(base64.b64decode(data))
 
     def complaints(self) -> list[str]:
-        """What the console has said: errors of scripts, refusals by policy, and requests that failed."""
+        """What the console has said: errors of scripts, refusals by policy, requests that failed.
+
+        A press that comes too late is refused with status 409: that is no fault.
+        """
         self.js("0")
         said = []
         for event in self._browser.events:
@@ -160,7 +173,7 @@ class Tab:
                 said.append(event["params"]["exceptionDetails"]["exception"].get("description", "exception"))
             if event["method"] == "Log.entryAdded" and event["params"]["entry"]["level"] == "error":
                 said.append(f"{event['params']['entry']['text']} {event['params']['entry'].get('url', '')}")
-        return said
+        return [line for line in said if "status of 409" not in line]
 
     def _mouse(self, kind: str, x: float, y: float) -> None:
         buttons = 0 if kind == "mouseReleased" else 1

@@ -8,7 +8,7 @@ from types import TracebackType
 from typing import Any, Self
 
 from sweep.capture import Action, Ask, Begin, Event, Seen
-from sweep.errors import SweepError
+from sweep.errors import Interrupted, SweepError
 from sweep.result import Result
 from sweep.screens.board import Board
 from sweep.screens.page.gate import Door
@@ -44,7 +44,9 @@ class RunPage:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        if isinstance(error, SweepError) and self._telling.board.finished is None:
+        if isinstance(error, Interrupted):
+            self._tell(replace(self._telling, ended=str(error)))
+        elif isinstance(error, SweepError):
             self._tell(replace(self._telling, fault=str(error)))
         self._server.__exit__(kind, error, trace)
 

@@ -30,7 +30,8 @@ class Telling:
     """A run so far, as a page tells it.
 
     `step` counts what was asked for; `first` is the number of the first step asked for in this run; `skipped`: stops
-    that were passed over; `sounds`: the latest, each with its number; `spoken`: for a screen reader, `spoken_s` when.
+    that were passed over; `sounds`: the latest, each with its number; `spoken`: for a screen reader, `spoken_s` when;
+    `answer`, `fault`, `ended`: what came of the run, what stopped it, and what is said where somebody ended it.
     """
 
     board: Board
@@ -43,6 +44,7 @@ class Telling:
     spoken_s: float = 0.0
     answer: tuple[str, ...] = ()
     fault: str = ""
+    ended: str = ""
 
     def after(self, event: Event, now_s: float) -> "Telling":
         """The telling with one more event in it."""
@@ -75,9 +77,9 @@ class Telling:
             "phase": self._phase(),
             "step": self.step,
             "do": self._do(),
-            "stop": None if board.stop is None else f"f/{board.stop:g}",
+            "stop": None if board.stop is None or self._phase() == "over" else f"f/{board.stop:g}",
             "hint": self._hint(),
-            "trouble": self.fault or board.trouble,
+            "trouble": self.fault or ("" if self._phase() == "over" else board.trouble),
             "spoken": self.spoken,
             "sounds": [{"number": number, "kind": kind} for number, kind in self.sounds],
             "cautions": list(board.step.cautions) if isinstance(board.step, Begin) else [],
@@ -96,7 +98,7 @@ class Telling:
 
     def _phase(self) -> str:
         board = self.board
-        if board.finished is not None or self.fault or self.answer:
+        if board.finished is not None or self.fault or self.ended or self.answer:
             return "over"
         if isinstance(board.step, Begin):
             return "begin"
@@ -107,6 +109,8 @@ class Telling:
     def _do(self) -> str:
         if self.fault:
             return "The run has stopped"
+        if self.ended:
+            return "The run was ended"
         if self.answer:
             return "The answer"
         match self.board.finished:
@@ -120,6 +124,8 @@ class Telling:
     def _hint(self) -> str:
         if self.answer:
             return ""
+        if self.ended:
+            return self.ended
         if self.fault:
             return "What was taken is kept. The same command takes the run up again."
         match self.board.finished:
