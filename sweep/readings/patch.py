@@ -120,7 +120,8 @@ def _noise(site: PatchSite, edge: EdgeMeasure | None, slots: Sequence[Slot], sca
         return ()
     points: list[NoisePoint] = []
     for (_, gain), group in groupby(slots, key=lambda s: (s.exposure_ms, s.gain_db)):
-        stack = list(group)
+        every = list(group)
+        stack = [s for s in every if s.count == every[0].count]  # a last slot of fewer frames has more noise
         frames = np.stack([s.values for s in stack])
         for area in areas:
             part = frames[:, area]
