@@ -13,9 +13,9 @@ from prysm.coordinates import cart_to_polar, make_xy_grid
 from prysm.geometry import circle
 from prysm.otf import mtf_from_psf
 from prysm.propagation import Wavefront
+from references import diffraction_mtf
 
 from sweep.lens import Bench, Pupil, lens_transfer, lens_transfer_derivatives, pixel_box
-from sweep.optics import diffraction_mtf
 
 PITCH_UM, FOCAL_MM, OBJECT_UM, WAVELENGTH_NM = 3.45, 16.0, 58.0, 530.0
 V_CY_PX = np.linspace(0.0, 0.6, 61)

@@ -6,12 +6,12 @@ import numpy as np
 import pytest
 from lenses import DEPTHS, STOPS, TRUTH, a_known_fit, in_one_wavelength, seen_through, the_fit, true_contrast
 from numpy.testing import assert_allclose
+from references import diffraction_mtf
 from scipy.optimize import brentq
 
 from sweep.choose import Place
 from sweep.fit import View
 from sweep.lens import pixel_box
-from sweep.optics import diffraction_mtf
 from sweep.outlook import DRAWS, MODEL_FLOOR, FittedLens, estimate, half_modulation
 
 FEATURE = 0.16

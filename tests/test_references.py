@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from references import FOLDER, facts, table
+from references import FOLDER, diffraction_mtf, facts, table
 from scipy.special import erf
 
 from sweep.choose.settings import motion_limit_ms, ripple_left, snr_db
@@ -12,7 +12,6 @@ from sweep.measure.edge import read_edge
 from sweep.measure.linear import Scale
 from sweep.measure.mtf import Transfer
 from sweep.measure.noise import NoisePoint, area_noise, fit_photon_transfer
-from sweep.optics import diffraction_mtf
 from sweep.result import CameraNoise
 from sweep.station import Station
 

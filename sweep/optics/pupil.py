@@ -25,37 +25,6 @@ def cutoff_cy_mm(working_f_number: ArrayLike, wavelength_nm: ArrayLike) -> Float
     return 1e6 / (np.asarray(working_f_number, dtype=np.float64) * np.asarray(wavelength_nm, dtype=np.float64))
 
 
-def airy_radius_um(working_f_number: ArrayLike, wavelength_nm: ArrayLike) -> Floats:
-    """Radius of the first dark ring, 1.2197 x wavelength x N_w, um: the first zero of J1 over pi.
-
-    Source: Born and Wolf, Principles of Optics, diffraction at a circular aperture.
-    """
-    return 1.2196698912665045e3 / cutoff_cy_mm(working_f_number, wavelength_nm)
-
-
-def diffraction_mtf(s: ArrayLike) -> Floats:
-    """MTF of the perfect lens in focus: (2 / pi) (acos s - s sqrt(1 - s^2)), and 0 from s = 1 on.
-
-    s: fraction of the cut-off, >= 0. Source: Goodman, Introduction to Fourier Optics; circular pupil.
-    """
-    s = np.minimum(np.asarray(s, dtype=np.float64), 1.0)
-    return np.asarray(2.0 / np.pi * (np.arccos(s) - s * np.sqrt(1.0 - s * s)))
-
-
-def strehl(w020: ArrayLike, w040: ArrayLike, w060: ArrayLike = 0.0) -> Floats:
-    """Strehl ratio of a uniform circular pupil: |int_0^1 exp(2 pi i W) d(rho^2)|^2, by quadrature.
-
-    w020, w040, w060: waves; all broadcast. The error is below 1e-12.
-    Source: Mahajan, Strehl ratio for primary aberrations, J. Opt. Soc. Am. 72 (1982) 1258-1266.
-    """
-    w2, w4, w6 = np.broadcast_arrays(*(np.asarray(w, dtype=np.float64) for w in (w020, w040, w060)))
-    steepest = float(np.max(np.abs(w2) + 2.0 * np.abs(w4) + 3.0 * np.abs(w6), initial=0.0))
-    node, weight = roots_legendre(16 + int(2.0 * steepest))
-    t = (node + 1.0) / 2.0
-    wave = ((w6[..., None] * t + w4[..., None]) * t + w2[..., None]) * t
-    return np.asarray(np.abs(np.exp(2j * np.pi * wave) @ weight / 2.0) ** 2)
-
-
 @overload
 def otf(
     s: ArrayLike, w020: ArrayLike, w040: ArrayLike, w060: ArrayLike = 0.0, *, derivatives: Literal[False] = False
