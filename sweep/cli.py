@@ -22,6 +22,8 @@ os.environ.setdefault(
 )  # small matrices: more threads cost time, and bytes must not depend on them
 
 if TYPE_CHECKING:
+    from sweep.cameras import Camera
+    from sweep.capture import Show
     from sweep.probe import Tell
     from sweep.result import Result
     from sweep.screens import Screen
@@ -130,14 +132,26 @@ def replay(
     metavar="DIR",
     help=f"Write record, plot and tables to DIR instead of {RESULT_FOLDER} in --into.",
 )
+@click.option(
+    "--exposure-ms",
+    type=click.FloatRange(min=0, min_open=True),
+    metavar="MS",
+    help="Exposure set by hand, for a camera that cannot be set from here.",
+)
 @page_option
 @bind_option
 def record(
-    station_file: Path, folder: Path, camera_name: str | None, out: Path | None, page: bool, bind: str | None
+    station_file: Path,
+    folder: Path,
+    camera_name: str | None,
+    out: Path | None,
+    exposure_ms: float | None,
+    page: bool,
+    bind: str | None,
 ) -> int:
     """Guide through all stops at the camera, keep the frames, then answer as replay does.
 
-    SOURCE: a device number, a URL, a video file, folder:PATH, genicam:ADDRESS or simulated.
+    SOURCE: a device number, a URL, a video file, folder:PATH, genicam:ADDRESS or simulated (its ring turns by itself).
     """
     station = _load(station_file)
     source = _camera_source(camera_name, station, station_file)
@@ -156,7 +170,8 @@ def record(
             run_page = stack.enter_context(RunPage(station, _door(bind)))
             screen, tell = Beside(run_page, screen, has_keys=sys.stdin.isatty()), run_page.show_answer
         with open_camera(source, station) as camera, screen:
-            run(camera, station, station_file.read_text(encoding="utf-8-sig"), folder, screen)
+            text = station_file.read_text(encoding="utf-8-sig")
+            run(camera, station, text, folder, _with_simulated_hand(camera, station, screen), exposure_ms)
         return _replay(folder, station, out, tell=tell)
 
 
@@ -312,6 +327,17 @@ def _probe_progress() -> "Iterator[Tell]":
     with Progress(console=Console(stderr=True), transient=True) as bar:
         task = bar.add_task("Opening the camera", total=1.0)
         yield lambda what, share: bar.update(task, description=f"Looking at {what}", completed=share)
+
+
+def _with_simulated_hand(camera: "Camera", station: "Station", screen: "Screen") -> "Show":
+    """The screen; where the camera is simulated, together with the hand on its ring."""
+    if camera.facts().get("device") != "simulated station":
+        return screen
+    from sweep.cameras.simulated_camera import SimulatedCamera
+    from sweep.demo import SimulatedHand, with_hand
+
+    assert isinstance(camera, SimulatedCamera)
+    return with_hand(SimulatedHand(camera, station.lens.stops), screen)
 
 
 def _load(station_file: Path) -> "Station":

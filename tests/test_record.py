@@ -32,7 +32,7 @@ def run(tmp_path, monkeypatch):
         return Finished(recorder.folder, (2.0, 2.8), (4.0,), ended=ending is Action.END)
 
     monkeypatch.setattr(sweep.record, "conduct", conduct)
-    monkeypatch.setattr(sweep.record, "Live", lambda camera, station: None)
+    monkeypatch.setattr(sweep.record, "Live", lambda camera, station, fixed_ms: None)
 
     def record(ending):
         return sweep.record.record(StillCamera(), a_station(), STATION_TEXT, tmp_path / "run", lambda event: ending)
