@@ -90,7 +90,7 @@ def test_checking_a_folder_loads_nothing_that_draws() -> None:
 
 
 def test_a_fault_while_drawing_leaves_the_disk_untouched(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    def fault(result: Result, station: Station, picture: bytes) -> bytes:
+    def fault(result: Result, station: Station, picture: bytes, depths: bytes | None) -> bytes:
         raise RuntimeError("no page")
 
     monkeypatch.setattr(sweep.report.record, "record_pdf", fault)

@@ -7,6 +7,7 @@ from dataclasses import replace
 import pytest
 from results import STOPS, a_result, a_station
 
+from sweep.report.depth_plot import depth_svg
 from sweep.report.letters import _letters, drawable
 from sweep.report.plot import svg
 from sweep.report.record import _content, _value, record_pdf
@@ -31,7 +32,8 @@ def three() -> tuple[Result, Station]:
 
 
 def _pdf(result: Result, station: Station) -> bytes:
-    return record_pdf(result, station, svg(result, station))
+    depths = None if result.depth_map is None else depth_svg(result.depth_map, result, station)
+    return record_pdf(result, station, svg(result, station), depths)
 
 
 def test_it_is_pdf_a_2b_and_the_same_each_time(three: tuple[Result, Station]) -> None:
@@ -91,6 +93,46 @@ def test_it_says_the_verdict_its_limits_and_what_to_do(three: tuple[Result, Stat
     assert [row["cells"][0] for row in page["stops"]["rows"] if row["bold"]] == ["f/5.6"]
     assert len(page["readings"]["rows"]) == 3 * len(STOPS)  # flats are left out
     assert page["readings"]["rows"][0]["cells"][-1] == "frames saturated"
+
+
+def test_the_smallest_features_have_two_rows_a_target_and_a_column_a_stop() -> None:
+    station = a_station(part_contrast=0.1)
+    result = a_result(station)
+    found = _content(result, station)["details"]
+    assert found["head"] == ["Target", "", *(f"f/{stop:g}" for stop in STOPS)]
+    assert [row["cells"][:2] for row in found["rows"][:2]] == [["cap top", "detected"], ["", "contrast 0.3"]]
+    assert len(found["rows"]) == 2 * 3
+    assert result.depth_map is not None
+    at_four = result.depth_map.stops[3].targets[2]  # cap top
+    assert at_four.smallest_at_need_um is not None
+    assert found["rows"][1]["cells"][5] == f"{at_four.smallest_at_need_um:.3g}"
+    assert found["head"][found["strong"]] == "f/5.6"
+    assert "part contrast of 0.1" in found["note"]
+
+
+def test_without_noise_nothing_is_told_of_detection() -> None:
+    station = a_station()
+    result = a_result(station)
+    quiet = replace(result, stops=tuple(replace(s, snr_db=None) for s in result.stops))
+    found = _content(quiet, station)["details"]
+    assert [row["cells"][:2] for row in found["rows"]] == [
+        [name, "contrast 0.3"] for name in ("cap top", "cap rim", "tray floor")
+    ]
+    assert "Detected" not in found["note"]
+
+
+@pytest.mark.parametrize("model", [True, False])
+def test_a_record_goes_without_what_is_not_known(model: bool) -> None:
+    station = a_station([("tray floor", 2.0), ("flat", 1.0)])
+    flat = station.targets[1].model_copy(update={"patches": station.targets[1].patches[1:]})
+    station = station.model_copy(update={"targets": (station.targets[0], flat)})
+    result = a_result(station, model=model)
+    if result.depth_map is not None:
+        rows = tuple(replace(row, targets=row.targets[:1]) for row in result.depth_map.stops)
+        result = replace(result, depth_map=replace(result.depth_map, stops=rows))
+        details = _content(result, station)["details"]
+        assert {len(row["cells"]) for row in details["rows"]} == {len(details["head"])}
+    assert _pdf(result, station).startswith(b"%PDF")
 
 
 @pytest.mark.parametrize(

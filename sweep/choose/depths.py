@@ -28,6 +28,7 @@ ROSE = 5.0
 DEPTHS = 25
 MARGIN = 0.25  # of the span of the depths in question, mapped beyond them on both sides
 WIDEST_MARGIN = 1.0  # likewise, looked at for the ends of the usable range: farther than that no sweep speaks for
+ALIKE = 0.25  # of the defocus that takes all contrast at the middle stop: depths that lie closer count as one
 NEAREST = -0.9  # of the way from the plane of focus to the entrance pupil
 _STEP = 0.05  # of the defocus that takes all contrast: the grid of the usable range
 _FREQUENCIES = np.geomspace(0.005, NYQUIST_CY_PX, 64)  # cycles per pixel; the largest feature is 100 pixels wide
@@ -187,7 +188,8 @@ def _around(station: Station, stops: Sequence[Stop], margin: float) -> tuple[flo
     """The depths in question and `margin` of their span beyond on both sides, no nearer than the lens allows (mm)."""
     depths = station.need.depth_range_mm or [t.depth_mm for t in station.targets]
     low, high = min(depths), max(depths)
-    more = margin * (high - low) or _lost_in_mm(station, stops[len(stops) // 2])
+    lost = _lost_in_mm(station, stops[len(stops) // 2])
+    more = margin * (high - low) if high - low > ALIKE * lost else lost
     return max(low - more, min(low, NEAREST * station.pupil_distance_mm)), high + more
 
 

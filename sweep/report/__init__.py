@@ -1,7 +1,9 @@
 """The six files that a result is handed out as: all of them, or none.
 
-tables  result.json, readings.csv, stops.csv      plot    plot.png, plot.svg (labels and letters help it)
-record  record.pdf, laid out by record.typ
+tables  result.json, readings.csv, stops.csv      plot    plot.png, plot.svg
+record  record.pdf, laid out by record.typ, with depth_plot's map on its second page
+
+drawing, lines, labels and letters help the pictures.
 """
 
 import os
@@ -27,17 +29,19 @@ def write_report(out_dir: Path, result: Result, station: Station) -> tuple[Path,
     """
     check_out(out_dir)
     # What draws is heavy, and not needed by those who only check a folder or print the JSON.
+    from sweep.report.depth_plot import depth_svg
     from sweep.report.plot import png, svg
     from sweep.report.record import record_pdf
 
     picture = svg(result, station)
+    depths = None if result.depth_map is None else depth_svg(result.depth_map, result, station)
     made = (
         result_json(result),
         readings_csv(result),
         stops_csv(result),
         png(result, station),
         picture,
-        record_pdf(result, station, picture),
+        record_pdf(result, station, picture, depths),
     )
     try:
         _place(out_dir, dict(zip(FILES, made, strict=True)))

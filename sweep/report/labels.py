@@ -16,6 +16,7 @@ _GAP_PT = 3.0
 _LEAD_PT = 12.0
 _SAMPLE_PT = 26.0
 _AWAY_PT = (14.0, 26.0, 42.0, 62.0, 86.0)  # how far a free label may stand from its point
+_FREE = 2.5  # a label's half sizes of free room around it, at which any place is as good
 _UP = (1.0, -1.0, 0.5, -0.5, 1.6, -1.6, 2.4, -2.4)  # how high, of that
 
 
@@ -33,7 +34,7 @@ class Label:
 
 def label_right(axes: Axes, labels: Sequence[Label], size_pt: float) -> None:
     """Write labels right of the axes at their heights, moved apart where they would overlap, each with a leader."""
-    labels = sorted(labels, key=lambda one: one.y)
+    labels = sorted(labels, key=lambda one: float(axes.transData.transform((1, one.y))[1]))
     pixels_per_pt = _pixels_per_pt(axes)
     box = axes.get_window_extent()
     width_pt, height_pt = box.width / pixels_per_pt, box.height / pixels_per_pt
@@ -130,6 +131,38 @@ def label_free(axes: Axes, xy: tuple[float, float], text: str, size_pt: float, t
         bbox={"boxstyle": "square,pad=0.2", "fc": "white", "ec": "none", "alpha": 0.85},
         arrowprops={"arrowstyle": "-", "color": "black", "lw": 0.8, "shrinkA": 0, "shrinkB": 7},
     )
+
+
+def label_contour(axes: Axes, points: Points, text: str, size_pt: float, taken: Points, bold: bool = False) -> Points:
+    """Write a number onto a line at the one of its `points` (n, 2) that is freest of what is `taken` (m, 2).
+
+    Both in pixels. Returns `taken` with the label's place added; unchanged where there is no room for the label.
+    """
+    per_pt = _pixels_per_pt(axes)
+    half = np.array([len(text) * size_pt * _LETTER_PT, size_pt * _LINE_PT]) * per_pt / 2
+    low, high = axes.get_window_extent().get_points()
+    inside = points[np.all((points > low + 1.3 * half) & (points < high - 1.3 * half), axis=1)]
+    if not len(inside):
+        return taken
+    # Distance in half sizes of the label: above 1 nothing reaches in.
+    apart = np.abs((inside[:, None] - taken[None]) / half).max(axis=2).min(axis=1)
+    if apart.max() < 1:
+        return taken
+    at = inside[np.argmax(np.minimum(apart, _FREE))]
+    x, y = axes.transData.inverted().transform(at)
+    axes.text(
+        x,
+        y,
+        text,
+        ha="center",
+        va="center_baseline",
+        fontsize=size_pt,
+        fontweight="bold" if bold else "normal",
+        zorder=9,
+        bbox={"boxstyle": "square,pad=0.12", "fc": "white", "ec": "none", "alpha": 0.8},
+    )
+    corners = np.array([(sx, sy) for sx in (-1, 0, 1) for sy in (-1, 0, 1)]) * half
+    return np.vstack([taken, at + corners])
 
 
 def _pixels_per_pt(axes: Axes) -> float:

@@ -64,6 +64,17 @@ def height(reading: Reading) -> float:
     return 0.0 if reading.reversed else reading.contrast_at_feature or 0.0
 
 
+def label_of(name: str, depth_mm: float) -> str:
+    """A target's name, cut and broken to a readable width, over its depth."""
+    short = textwrap.shorten(drawable(name), _NAME_LETTERS, placeholder="…") or drawable(name)
+    return "\n".join([*_wrapped(short), f"{signed(depth_mm)} mm"])
+
+
+def signed(depth_mm: float) -> str:
+    """A depth with its sign."""
+    return f"{depth_mm:+g}".replace("-", "\N{MINUS SIGN}") if depth_mm else "0"
+
+
 def lines_of(result: Result, station: Station) -> list[Line]:
     """One line a target, the worst last, hence on top; depths between the targets make one line together."""
     chosen = chosen_stop(result)
@@ -78,7 +89,7 @@ def lines_of(result: Result, station: Station) -> list[Line]:
         heavy = target.name == worst
         found.append(
             Line(
-                label=_label(target.name, target.depth_mm),
+                label=label_of(target.name, target.depth_mm),
                 x=curve[:, 0],
                 y=curve[:, 1],
                 u=curve[:, 2],
@@ -152,19 +163,10 @@ def _between(
     """The lowest of the model's curves over the depths that are asked for."""
     stack = np.array([sorted(c) for c in curves])
     lowest = stack[np.argmin(stack[:, :, 1], axis=0), np.arange(stack.shape[1])]
-    label = f"worst depth from\n{_signed(range_mm[0])} to {_signed(range_mm[1])} mm"
+    label = f"worst depth from\n{signed(range_mm[0])} to {signed(range_mm[1])} mm"
     dash = "-" if worst else ":"
     return Line(label, lowest[:, 0], lowest[:, 1], lowest[:, 2], (), (), worst, "black", dash, "")
 
 
-def _label(name: str, depth_mm: float) -> str:
-    short = textwrap.shorten(drawable(name), _NAME_LETTERS, placeholder="…") or drawable(name)
-    return "\n".join([*_wrapped(short), f"{_signed(depth_mm)} mm"])
-
-
 def _wrapped(text: str) -> Iterator[str]:
     yield from textwrap.wrap(text, 22)[:2]
-
-
-def _signed(depth_mm: float) -> str:
-    return f"{depth_mm:+g}".replace("-", "\N{MINUS SIGN}") if depth_mm else "0"

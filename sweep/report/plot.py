@@ -4,21 +4,19 @@ Made to be understood at first sight in a validation file, also in grey and by t
 marker and line style and is named at its line's end; every verdict is written out.
 """
 
-import io
 import textwrap
 from collections.abc import Iterator, Sequence
-from itertools import groupby, pairwise
+from itertools import groupby
 from typing import Any
 
-import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
-from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
-from matplotlib.ticker import FixedLocator, FuncFormatter, LogLocator, NullFormatter, NullLocator
+from matplotlib.ticker import FuncFormatter, LogLocator, NullLocator
 
 from sweep.choose.settings import exposure_limit_ms
 from sweep.choose.wording import number
+from sweep.report.drawing import by_mark, cells, name_stops, new_figure, png_of, stop_axis, styled, svg_of
 from sweep.report.labels import Label, label_free, label_right
 from sweep.report.letters import drawable, typeset
 from sweep.report.lines import Line, draw_line, height, lines_of, place
@@ -27,19 +25,6 @@ from sweep.station import Station
 from sweep.verdict import WHY_NOT, chosen_stop, headline, is_forecast, setting, stop_name, with_u
 
 SIZE_IN = (9.0, 6.6)
-DPI = 150
-
-_STYLE: dict[Any, Any] = {
-    "font.family": "DejaVu Sans",
-    "font.size": 9,
-    "text.parse_math": False,  # a name may hold a dollar sign
-    "axes.formatter.use_locale": False,
-    "axes.linewidth": 0.8,
-    "hatch.linewidth": 0.6,
-    "svg.fonttype": "path",
-    "svg.hashsalt": "sweep",
-}
-_MARGIN = 1.19  # a quarter stop beyond the outermost marks
 _TITLE_LETTERS = 84  # a line
 _TITLE_LINE = 0.033  # of the figure's height
 _EXPLAINED_LETTERS = 120
@@ -54,19 +39,17 @@ _WITHIN = 1 + 1e-6  # what counts as not above a limit
 
 def png(result: Result, station: Station) -> bytes:
     """The picture as PNG; the same bytes each time with the same libraries."""
-    return _saved(result, station, "png", {"Software": None})
+    return png_of(lambda: _figure(result, station))
 
 
 def svg(result: Result, station: Station) -> bytes:
     """The picture as SVG, its letters as outlines; the same bytes each time with the same libraries."""
-    return _saved(result, station, "svg", {"Date": None, "Creator": None})
+    return svg_of(lambda: _figure(result, station))
 
 
 def draw(result: Result, station: Station) -> Figure:
-    """The picture as a figure, in no need of pyplot or a display."""
-    with matplotlib.rc_context():
-        _set_style()
-        return _figure(result, station)
+    """The picture as a figure."""
+    return styled(lambda: _figure(result, station))
 
 
 def headroom(result: Result, station: Station) -> float:
@@ -91,23 +74,8 @@ def explanation(result: Result) -> str:
     return " ".join(told)
 
 
-def _saved(result: Result, station: Station, kind: str, metadata: dict[str, str | None]) -> bytes:
-    with matplotlib.rc_context():
-        _set_style()
-        file = io.BytesIO()
-        _figure(result, station).savefig(file, format=kind, dpi=DPI, metadata=metadata)
-        return file.getvalue()
-
-
-def _set_style() -> None:
-    """Our own style over the defaults: a user's matplotlibrc changes nothing."""
-    matplotlib.rcdefaults()
-    matplotlib.rcParams.update(_STYLE)
-
-
 def _figure(result: Result, station: Station) -> Figure:
-    figure = Figure(figsize=SIZE_IN, dpi=DPI)
-    FigureCanvasAgg(figure)
+    figure = new_figure(*SIZE_IN)
     head = headroom(result, station)
     grid = figure.add_gridspec(
         4, 1, left=0.095, right=0.77, top=1 - head, bottom=0.09, hspace=0.0, height_ratios=(0.085, 0.67, 0.025, 0.22)
@@ -117,9 +85,10 @@ def _figure(result: Result, station: Station) -> Figure:
     under = 0.925 - _TITLE_LINE * (len(title) - 1)
     figure.text(0.02, 0.975, "\n".join(title), fontsize=12.5, fontweight="bold", va="top", linespacing=1.15)
     figure.text(0.02, under, "\n".join(_explained(result, station)), fontsize=8.5, va="top", color="0.25")
-    edges = _cells(result)
+    marks = [s.stop for s in by_mark(result)]
+    edges = cells(marks, [place(s) for s in result.stops])
     for axes in (strip, main, below):
-        _stop_axis(axes, result, edges)
+        stop_axis(axes, marks, edges)
     _verdicts(strip, result, edges)
     _contrast(main, result, station, edges)
     _exposure(below, result, station)
@@ -134,32 +103,10 @@ def _explained(result: Result, station: Station) -> list[str]:
     return textwrap.wrap(f"{drawable(station.station.name)}. {explanation(result)}", _EXPLAINED_LETTERS)
 
 
-def _by_mark(result: Result) -> list[Stop]:
-    return sorted(result.stops, key=lambda s: s.stop)
-
-
-def _cells(result: Result) -> list[float]:
-    """The borders between the stops' cells, and both ends of the axis."""
-    marks = [s.stop for s in _by_mark(result)]
-    places = [*marks, *(place(s) for s in result.stops)]
-    inner = [float(np.sqrt(a * b)) for a, b in pairwise(marks)]
-    return [min(places) / _MARGIN, *inner, max(places) * _MARGIN]
-
-
-def _stop_axis(axes: Axes, result: Result, edges: Sequence[float]) -> None:
-    axes.set_xscale("log", base=2)
-    axes.set_xlim(edges[0], edges[-1])
-    axes.xaxis.set_major_locator(FixedLocator([s.stop for s in _by_mark(result)]))
-    axes.xaxis.set_minor_locator(NullLocator())
-    axes.xaxis.set_major_formatter(NullFormatter())
-    axes.tick_params(axis="x", length=0)
-    axes.yaxis.set_label_coords(-0.068, 0.5)
-
-
 def _runs(result: Result, edges: Sequence[float]) -> Iterator[tuple[str, float, float]]:
     """Neighbouring stops with the same verdict: its code (empty where the need is met), from where to where."""
     at = 0
-    for code, group in groupby(_by_mark(result), key=_fault):
+    for code, group in groupby(by_mark(result), key=_fault):
         n = len(list(group))
         yield code, edges[at], edges[at + n]
         at += n
@@ -217,7 +164,7 @@ def _contrast(axes: Axes, result: Result, station: Station, edges: Sequence[floa
 
 def _with_motion(axes: Axes, result: Result, station: Station) -> list[Label]:
     """Where the part moves, the worst contrasts of the choice lie below the lines."""
-    points = [(place(s), s.worst_contrast) for s in _by_mark(result) if s.worst_contrast is not None]
+    points = [(place(s), s.worst_contrast) for s in by_mark(result) if s.worst_contrast is not None]
     if not station.need.speed_mm_s or not points:
         return []
     xs, ys = zip(*points, strict=True)
@@ -254,7 +201,7 @@ def _mark_chosen(axes: Axes, result: Result, lines: Sequence[Line], need: float)
 
 def _exposure(axes: Axes, result: Result, station: Station) -> None:
     """The lower part: what each stop needs, against what is allowed."""
-    stops, need = _by_mark(result), station.need
+    stops, need = by_mark(result), station.need
     limit = exposure_limit_ms(station)
     most = limit * 10 ** (need.max_gain_db / 20)
     known = [(place(s), s.exposure_needed_ms) for s in stops if s.exposure_needed_ms is not None]
@@ -292,14 +239,7 @@ def _exposure(axes: Axes, result: Result, station: Station) -> None:
 
 
 def _stop_labels(axes: Axes, result: Result) -> None:
-    stops = _by_mark(result)
-    many = len(stops) > 14
-    names = [f"{s.stop:g}" for s in stops]
-    axes.set_xticks([s.stop for s in stops], names, fontsize=7 if many else 9.5, rotation=90 if many else 0)
-    for stop, label in zip(stops, axes.get_xticklabels(), strict=True):
-        if stop.stop == result.recommendation.stop:
-            box = {"boxstyle": "square,pad=0.25", "fc": "black", "ec": "black"}
-            label.set(color="white", fontweight="bold", bbox=box)
-    lit = any(s.f_number_by_light is not None for s in stops)
+    name_stops(axes, [s.stop for s in by_mark(result)], result.recommendation.stop)
+    lit = any(s.f_number_by_light is not None for s in result.stops)
     told = "; points stand where the light says that the iris was" if lit else ""
     axes.set_xlabel(f"Stop (f-number as engraved{told})", labelpad=6)

@@ -17,9 +17,10 @@ import typst
 from sweep import __version__
 from sweep.choose.settings import exposure_limit_ms
 from sweep.choose.wording import number
+from sweep.report.depth_plot import depths_explained
 from sweep.report.letters import MISSING, drawable, typeset
 from sweep.report.plot import explanation, headroom
-from sweep.result import Reading, Result, Stop
+from sweep.result import DepthMap, Reading, Result, Stop
 from sweep.station import Station
 from sweep.verdict import (
     LIMITED_BY,
@@ -45,6 +46,8 @@ _WORDS = {
     "shortfalls": "What falls short, and what would cure it",
     "reasons": "Why this setting",
     "warnings": "Warnings, and what to do",
+    "depths": "Contrast over depth and stop",
+    "details": "The smallest feature told apart",
     "stops": "The stops",
     "readings": "The readings",
     "numbers": "Camera and lens, as found",
@@ -75,14 +78,14 @@ _SIGN = (("Set by", "Date", "Signature"), ("Checked by", "Date", "Signature"))
 _DASH = "–"
 
 
-def record_pdf(result: Result, station: Station, plot_svg: bytes) -> bytes:
-    """The record as PDF/A-2b, with the plot as vectors; the same bytes each time with the same libraries."""
+def record_pdf(result: Result, station: Station, plot_svg: bytes, depths_svg: bytes | None) -> bytes:
+    """The record as PDF/A-2b, with plot and map as vectors; the same bytes each time with the same libraries."""
     data = _set_in_type(_content(result, station))
     pages: bytes = typst.compile(
         files("sweep.report").joinpath("record.typ").read_bytes(),
         format="pdf",
         font_paths=_fonts(),
-        sys_inputs={"data": json.dumps(data), "plot": plot_svg.decode()},
+        sys_inputs={"data": json.dumps(data), "plot": plot_svg.decode(), "depths": (depths_svg or b"").decode()},
         pdf_standards="a-2b",
         timestamp=EPOCH,
     )
@@ -123,6 +126,8 @@ def _content(result: Result, station: Station) -> dict[str, Any]:
         "explanation": explanation(result),
         "crop": headroom(result, station) - 0.01,
         "warnings": [told(w) for w in result.warnings],
+        "depths": None if result.depth_map is None else depths_explained(result, station),
+        "details": None if result.depth_map is None else _details(result.depth_map, result, station),
         "stops": _stops(result),
         "readings": _readings(result, station),
         "numbers": _numbers(result),
@@ -199,6 +204,36 @@ def _stops(result: Result) -> dict[str, Any]:
     }
 
 
+def _details(found: DepthMap, result: Result, station: Station) -> dict[str, Any]:
+    """The smallest features, a column for each stop, nearest target first; two rows a target where noise is known."""
+    need = station.need
+    marks = [row.stop for row in found.stops]
+    noise = any(s.snr_db is not None for s in result.stops)
+    rows = []
+    for target in sorted(station.targets, key=lambda t: t.depth_mm):
+        told = [t for row in found.stops for t in row.targets if t.target == target.name]
+        if not told:  # it has flats only
+            continue
+        if noise:
+            rows.append([target.name, "detected", *(_rounded(t.smallest_detected_um) for t in told)])
+        name = "" if noise else target.name
+        rows.append([name, f"contrast {need.contrast:g}", *(_rounded(t.smallest_at_need_um) for t in told)])
+    part = "" if need.part_contrast == 1 else f" of a part contrast of {need.part_contrast:g}"
+    note = f"Width of one bar in \N{MICRO SIGN}m, by the lens model; {number(need.feature_um)} um is needed. "
+    if noise:
+        note += f"Detected: a bar{part} whose contrast-to-noise ratio over its own area reaches 5 (A. Rose, J. Opt. "
+        note += "Soc. Am. 38, 196-208, 1948). "
+    return {
+        "head": ["Target", "", *(stop_name(m) for m in marks)],
+        "left": [0, 1],
+        "wide": [],
+        "strong": marks.index(result.recommendation.stop) + 2 if result.recommendation.stop in marks else -1,
+        "rows": [{"cells": cells, "bold": False} for cells in rows],
+        "note": f"{note}Contrast {need.contrast:g}: a bar that keeps it. Never less than one pixel; a dash where even "
+        "the largest is lost. Bold: the recommended stop.",
+    }
+
+
 def _readings(result: Result, station: Station) -> dict[str, Any]:
     head = ["Stop", "Target", "Depth (mm)", "Patch", "Contrast", "With model"]
     head += ["Half-modulation frequency (cycles/px)", "Smallest (\N{MICRO SIGN}m)", "Note"]
@@ -236,8 +271,8 @@ def _remarks(reading: Reading) -> Iterator[str]:
     if reading.contrast_at_bars is not None and reading.bars_cy_px is not None:
         bars = with_u(reading.contrast_at_bars, reading.contrast_at_bars_u)
         yield f"bars {bars} at {reading.bars_cy_px:.3f} cycles/px"
-    if reading.smallest_element is not None:
-        yield f"smallest element told apart: {reading.smallest_element}"
+    if reading.smallest_element is not None and reading.smallest_element_um is not None:
+        yield f"smallest element told apart: {reading.smallest_element}, {number(reading.smallest_element_um)} um"
 
 
 def _numbers(result: Result) -> list[tuple[str, str]]:
