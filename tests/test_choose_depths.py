@@ -154,7 +154,8 @@ def test_usable_range_ends_where_the_need_is_no_longer_sure(u, confidence):
 
 def test_an_end_beyond_what_the_sweep_can_tell_is_left_open():
     station = a_station(max_exposure_ms=LONG)  # targets at 0, 6 and 12 mm, looked at from -12 to 24 mm
-    wide, slim = (a_map(SharpInFocus(stops=(n,)), station=station)[0].stops[0].usable_mm for n in (16.0, 2.8))
+    found, _ = a_map(SharpInFocus(stops=(2.0, 2.8, 16.0)), station=station)
+    _, slim, wide = (row.usable_mm for row in found.stops)
     assert wide == (None, None)
     end = math.sqrt(-math.log(0.2)) * 2.8 / 0.2
     assert slim[0] is None
