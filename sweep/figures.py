@@ -6,6 +6,7 @@ import numpy as np
 
 from sweep.measure.mtf import Transfer
 from sweep.measure.star_level import SQUARE_WAVE
+from sweep.measure.tribar import TribarMeasure
 from sweep.readings import Sighting
 from sweep.result import Reading
 from sweep.station import Station
@@ -33,6 +34,8 @@ def reading_of(sighting: Sighting, station: Station) -> Reading:
     curve = sighting.transfer
     if sighting.ok and sighting.bars is not None:
         return _bars_reading(bare, sighting, station)
+    if sighting.ok and sighting.tribar is not None:
+        return _tribar_reading(bare, sighting.tribar)
     if not sighting.ok or curve is None:
         return bare
     star = sighting.star_curve
@@ -53,6 +56,17 @@ def reading_of(sighting: Sighting, station: Station) -> Reading:
         smallest_feature_um_u=smallest[1] if smallest else None,
         astigmatic_contrast=astigmatic[0] if astigmatic else None,
         astigmatic_contrast_u=astigmatic[1] if astigmatic else None,
+    )
+
+
+def _tribar_reading(bare: Reading, tribar: TribarMeasure) -> Reading:
+    """What a tri-bar target says: the finest element told apart, and the chance of each."""
+    finest = tribar.smallest
+    return replace(
+        bare,
+        smallest_element=f"{finest.group}-{finest.element}" if finest is not None else None,
+        smallest_element_um=finest.line_um if finest is not None else None,
+        element_chances=tuple(f"{e.group}-{e.element}={e.chance:.2f}" for e in tribar.elements),
     )
 
 

@@ -53,6 +53,8 @@ class Reading:
     astigmatic_contrast: float | None = None
     astigmatic_contrast_u: float | None = None
     smallest_element: str | None = None
+    smallest_element_um: float | None = None
+    element_chances: tuple[str, ...] = ()
     saturated_fraction: float = 0.0
 
 

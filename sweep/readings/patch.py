@@ -11,6 +11,7 @@ from sweep.measure.edge import EdgeMeasure, read_edge
 from sweep.measure.linear import COLOUR_SITES, Bools, Floats, Scale, channel_mask, sharpness_values
 from sweep.measure.noise import NoisePoint, area_noise
 from sweep.measure.star import StarMeasure, read_star
+from sweep.measure.tribar import TribarMeasure, read_tribar
 from sweep.readings.sightings import CLIPPED_SHARE, PatchSite, Sighting
 from sweep.readings.slots import Slot
 from sweep.station import Station
@@ -33,7 +34,7 @@ def measure_patch(
     weights = counts * units
     frame_light = light.mean(axis=1)
     why = [] if sound else ["frames-saturated"]
-    edge, star, bars = None, None, None
+    edge, star, bars, tribar = None, None, None, None
     if float(np.max(units * np.percentile(light, 95, axis=1))) < LEAST_SIGNAL_DN:
         why.append("low-signal")
     elif site.spec.kind == "edge":
@@ -44,7 +45,9 @@ def measure_patch(
         star = _read_star(site, light, valid, near)
     elif site.spec.kind == "bars":
         bars = _read_bars(site, light, valid, station, near)
-    for measure in (edge, star, bars):
+    elif site.spec.kind == "tribar":
+        tribar = _read_tribar(site, light, valid, station, near)
+    for measure in (edge, star, bars, tribar):
         why += [code for code in measure.why_not if code not in why] if measure is not None else []
     full = np.average(np.stack([s.full / s.light_unit for s in used]), axis=0, weights=weights)
     return Sighting(
@@ -62,6 +65,7 @@ def measure_patch(
         edge=edge,
         star=star,
         bars=bars,
+        tribar=tribar,
         noise=_noise(site, edge, used, scale),
     )
 
@@ -80,6 +84,16 @@ def _read_bars(
         return None
     period_px = site.spec.period_um / station.object_um_per_px_at(station.targets[site.target].depth_mm)
     return read_bars(site.sites.x, site.sites.y, light, valid, period_px, near.bars if near is not None else None)
+
+
+def _read_tribar(
+    site: PatchSite, light: Floats, valid: Bools, station: Station, near: Sighting | None
+) -> TribarMeasure | None:
+    if site.spec.group is None:
+        return None
+    um_per_px = station.object_um_per_px_at(station.targets[site.target].depth_mm)
+    sharper = near.tribar if near is not None else None
+    return read_tribar(site.sites.x, site.sites.y, light, valid, site.spec.group, um_per_px, sharper)
 
 
 def _tone(full: Floats, site: PatchSite, edge: EdgeMeasure | None, station: Station) -> float | None:

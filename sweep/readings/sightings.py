@@ -9,6 +9,7 @@ from sweep.measure.mtf import Transfer
 from sweep.measure.noise import NoisePoint, PhotonTransfer
 from sweep.measure.star import StarMeasure
 from sweep.measure.star_level import StarCurve
+from sweep.measure.tribar import TribarMeasure
 from sweep.result import PatchKind
 from sweep.station import Patch
 
@@ -51,6 +52,7 @@ class Sighting:
     star: StarMeasure | None = None
     star_curve: StarCurve | None = None
     bars: BarsMeasure | None = None
+    tribar: TribarMeasure | None = None
     bars_contrast: BarsContrast | None = None
     bars_reversed: bool = False
     noise: tuple[NoisePoint, ...] = ()
@@ -68,15 +70,17 @@ class Sighting:
 
     @property
     def half_found(self) -> bool:
-        """Whether a sharper view of the same patch could help: no pattern was found, or a star without its rim."""
+        """Whether a sharper view of the same patch could help: no pattern, a star without its rim, a tri-bar target."""
         rimless = self.star is not None and self.star.ok and self.star.rim_px is None
-        return rimless or "pattern-not-found" in self.why_not
+        return rimless or self.tribar is not None or "pattern-not-found" in self.why_not
 
     @property
     def strength(self) -> float:
         """How clearly a star or bars stand out: amplitude over level."""
         if self.star is not None and self.star.rings is not None:
             return float(self.star.rings.amplitude[0] / self.star.rings.level[0])
+        if self.tribar is not None:
+            return float(len([e for e in self.tribar.elements if e.chance > 0.5]))
         return self.bars.relative[0] if self.bars is not None else 0.0
 
     @property

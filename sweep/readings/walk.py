@@ -116,5 +116,5 @@ def _row_ratios(rows: Floats) -> Floats:
     middle = even.mean(axis=0)
     ratio = even / np.where(middle > 0.05, middle, 1.0)
     slope = np.gradient(middle) / np.where(middle > 0.05, middle, 1.0)
-    shift = ratio @ slope / max(float(slope @ slope), 1e-12)
+    shift = (ratio - 1.0) @ slope / max(float(slope @ slope), 1e-12)
     return np.asarray(ratio - np.outer(shift, slope))

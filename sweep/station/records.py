@@ -154,6 +154,8 @@ class Patch(Table):
         return value
 
 
+SHARPNESS_KINDS = ("edge", "star", "bars")
+"""Kinds of patches that tell the contrast at a frequency."""
 _OWN_KEY = {"star": "cycles", "bars": "period_um", "tribar": "group"}
 
 
