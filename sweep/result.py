@@ -141,7 +141,7 @@ class SourceFacts:
 
 @dataclass(frozen=True, slots=True)
 class TargetDetail:
-    """The smallest features told apart at one target and stop, widths of a bar: detected, and at the needed contrast."""
+    """The smallest features told apart at one target and stop, as bar widths: detected, and at the needed contrast."""
 
     target: str
     smallest_detected_um: float | None
