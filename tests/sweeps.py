@@ -4,6 +4,7 @@ The station is invented, its frames are small, its lens is the one of tests/lens
 """
 
 from dataclasses import replace
+from functools import lru_cache
 
 import numpy as np
 from lenses import TRUTH
@@ -68,8 +69,13 @@ def a_truth(station, *, lens=TRUTH, wide_open_ms=0.3, size_px=None, **effects) -
 
 def a_sweep(station=None, *, seed=1, frames=3, darks=2, level=0.65, **effects) -> RenderedSweep:
     """A sweep of the lane, rendered; `effects` as in `a_truth`."""
-    station = station or a_lane()
-    return render_sweep(station, a_truth(station, **effects), np.random.default_rng(seed), frames, darks, level)
+    return _rendered(station or a_lane(), seed, frames, darks, level, tuple(sorted(effects.items())))
+
+
+@lru_cache(maxsize=12)
+def _rendered(station, seed, frames, darks, level, effects) -> RenderedSweep:
+    rng = np.random.default_rng(seed)
+    return render_sweep(station, a_truth(station, **dict(effects)), rng, frames, darks, level)
 
 
 def with_frames(sweep: RenderedSweep, change, shots=None) -> RenderedSweep:
