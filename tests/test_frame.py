@@ -1,7 +1,10 @@
 """The set-up at a camera: exposure, losses, wishes, and the station file on disk."""
 
+import contextlib
 import os
 import stat
+import threading
+import time
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -9,11 +12,14 @@ from pathlib import Path
 import numpy as np
 import pytest
 from test_framing import STATION, edge, picture
+from test_page import News, press
 
+from sweep import cli
 from sweep.cameras import Grab, Settings
 from sweep.errors import CameraError, StationError
 from sweep.frame import TONE_RANGE, look, set_up
 from sweep.framing import Done, Move, Revert, Save, Sight, Wish
+from sweep.screens import page
 
 PERIOD_S = 0.1
 
@@ -28,10 +34,12 @@ class Camera:
     exposure_ms: float = 10.0
     grabs: int = 0
     sets: list[float | None] = field(default_factory=list)
+    pause_s: float = 0.0
     light: np.ndarray = field(default_factory=lambda: edge(59.5, dark=0.2, light=1.0))
 
     def grab(self, timeout_s: float) -> Grab:
         self.grabs += 1
+        time.sleep(self.pause_s)
         if self.grabs in self.away:
             raise CameraError("The camera has gone.")
         return Grab(picture(self.light * self.exposure_ms / self.full_at_ms), self.grabs * PERIOD_S)
@@ -173,3 +181,79 @@ def test_a_link_stays_a_link_and_permissions_stay(file, tmp_path):
 def test_a_station_file_that_is_none_is_an_error(tmp_path):
     with pytest.raises(StationError):
         set_up(Camera(), tmp_path / "nowhere.toml", Script([]))
+
+
+# ---- the command
+
+
+@pytest.fixture
+def camera(monkeypatch: pytest.MonkeyPatch) -> Camera:
+    """What `--camera` opens, whatever it names."""
+    opened = Camera()
+    monkeypatch.setattr("sweep.cameras.open_camera", lambda source, station: contextlib.nullcontext(opened))
+    return opened
+
+
+def test_the_command_prints_a_table_and_what_to_do(file, camera, capsys):
+    # One edge runs from top to bottom near the left border.
+    file.write_text(STATION.replace("[20, 160, 100, 80]", "[200, 160, 100, 80]"), encoding="utf-8")
+    assert cli.main(["frame", str(file), "--camera", "0"]) == 1
+    printed = capsys.readouterr().out
+    assert "tray floor 1  edge" in printed
+    assert "fine" in printed
+    assert "cap top: " in printed
+    file.write_text(STATION, encoding="utf-8")
+    assert cli.main(["frame", str(file), "--camera", "0"]) == 0
+    assert "All patches can be read" in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    ("words", "status", "named"),
+    [
+        ([], 2, "names no camera"),
+        (["--camera", "0", "--bind", "elsewhere.example"], 2, "--bind"),
+        (["--camera", "0", "--bind", "192.0.2.77"], 3, "cannot listen"),
+    ],
+)
+def test_the_command_refuses_in_one_sentence(file, camera, words, status, named, capsys):
+    assert cli.main(["frame", str(file), *words]) == status
+    printed = capsys.readouterr()
+    assert named in printed.err
+    assert printed.out == ""
+
+
+def test_the_command_serves_a_page_until_it_is_done(file, camera, capsys, monkeypatch):
+    camera.pause_s = 0.02
+    doors = []
+    real = page.open_door
+    monkeypatch.setattr(page, "open_door", lambda place: doors.append(real(place)) or doors[0])
+    ended: list[int] = []
+    thread = threading.Thread(target=lambda: ended.append(cli.main(["frame", str(file), "--camera", "0", "--page"])))
+    thread.start()
+    while not doors:
+        time.sleep(0.05)
+    news = News(doors[0])
+    state = news.next()[1]["state"]
+    while state["mode"] != "frame":
+        state = news.next()[1]["state"]
+    assert [patch["name"] for patch in state["patches"]] == ["tray floor 1", "tray floor 2", "cap top"]
+    for wrong in ([1, 2, 3], [0, 0, 8, 8], [0, 0, 999, 20], [-1, 0, 20, 20], [0, 0, 20.0, 20], "abcd", None):
+        assert press(doors[0], action="move", patch=0, region=wrong)[0] == 400
+    for wrong in (3, -1, "0", True, None):
+        assert press(doors[0], action="move", patch=wrong, region=[0, 0, 20, 20])[0] == 400
+    assert press(doors[0], action="move", patch=2, region=[20, 130, 80, 100])[0] == 204
+    assert press(doors[0], action="save")[0] == 204
+    assert press(doors[0], action="done")[0] == 204
+    while True:
+        name, data = news.next()
+        if name == "farewell":
+            break
+        state = data["state"] if data else state
+    news.close()
+    thread.join(30)
+    assert ended == [0]
+    assert "Saved" in state["told"]
+    assert "[20, 130, 80, 100]" in file.read_text(encoding="utf-8")
+    printed = capsys.readouterr().out
+    assert doors[0].address in printed
+    assert "All patches can be read" in printed
