@@ -168,7 +168,8 @@ def record(
             from sweep.screens.page import Beside, RunPage
 
             run_page = stack.enter_context(RunPage(station, _door(bind)))
-            screen, tell = Beside(run_page, screen, has_keys=sys.stdin.isatty()), run_page.show_answer
+            tell = run_page.show_answer
+            screen = Beside(run_page, screen, has_keys=sys.stdin.isatty() and sys.stdout.isatty())
         with open_camera(source, station) as camera, screen:
             text = station_file.read_text(encoding="utf-8-sig")
             run(camera, station, text, folder, _with_simulated_hand(camera, station, screen), exposure_ms)
