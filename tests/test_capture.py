@@ -1,7 +1,9 @@
 """The guided run at a simulated station, with hands that do right and wrong."""
 
+import time
 from dataclasses import replace
 
+import cv2
 import numpy as np
 import pytest
 from guided import PLAN, STOPS, MemoryKeeper, Run, Unsteady, small_camera, small_station
@@ -12,7 +14,7 @@ from sweep.cameras.simulated_camera import simulate
 from sweep.capture import Action, Ask, Begin, Exposed, Live, Seen, StepDone, Taken, Trouble
 from sweep.capture import live as live_module
 from sweep.capture.meter import Meter
-from sweep.demo import SimulatedHand
+from sweep.demo import SimulatedHand, demo_station
 from sweep.errors import CaptureError, StationError
 
 
@@ -289,3 +291,22 @@ def test_samples_that_fill_the_word_from_the_top_are_measured_alike():
     low, high = Meter(station).light(frame), Meter(station).light(frame << 4)
     assert_allclose(high.tone, low.tone)
     assert high.clipped == low.clipped
+
+
+def test_live_work_on_five_megapixels_is_small_beside_one_pass_over_the_frame():
+    # A ratio within one run: the patches' light and shift against one Laplacian of the whole frame.
+    station = demo_station()
+    frame = np.random.default_rng(1).integers(200, 3000, (1944, 2592)).astype(np.uint16)
+    meter = Meter(station)
+    meter.light(frame)
+
+    def median_s(work):
+        times = []
+        for _ in range(9):
+            began = time.perf_counter()
+            work()
+            times.append(time.perf_counter() - began)
+        return np.median(times)
+
+    live = median_s(lambda: (meter.light(frame), meter.shift_px(frame, frame)))
+    assert live < 0.25 * median_s(lambda: cv2.Laplacian(frame, cv2.CV_64F).var())
