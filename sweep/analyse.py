@@ -370,18 +370,30 @@ def lens_model(
     """
     if fit is None or lens is None:
         return LensModel(None, None, None, None)
+    bench, widest = fit.bench, float(fit.light.f_number.min())
     w040, w040_u = fit.value("w040")
+    w060, w060_u = fit.value("w060")
     blur2, blur2_u = fit.value("blur2")
     blur = float(np.sqrt(max(blur2, 0.0)))
     focus = lens.best_depth_mm(stops.index(stop), places) if stop is not None else fit.value("focus")[0]
+    colour, colour_u = (c * bench.wave_um(widest) / bench.rms_nm for c in fit.value("colour"))
     return LensModel(
-        focus,
-        -w040,
-        blur,
-        fit.reduced_chi2,
-        fit.value("focus")[1],
-        w040_u,
-        blur2_u / (2.0 * blur) if blur > 0 else None,
+        best_focus_mm=focus,
+        spherical_waves=-w040,
+        blur_px=blur,
+        reduced_chi2=fit.reduced_chi2,
+        best_focus_mm_u=fit.value("focus")[1],
+        spherical_waves_u=w040_u,
+        blur_px_u=blur2_u / (2.0 * blur) if blur > 0 else None,
+        sixth_order_waves=-w060,
+        sixth_order_waves_u=w060_u,
+        colour_um_per_nm=colour,
+        colour_um_per_nm_u=colour_u,
+        widest_f_number=widest,
+        wavelength_nm=bench.wavelength_nm,
+        focal_length_mm=bench.focal_length_mm,
+        magnification=bench.magnification,
+        pixel_pitch_um=bench.pixel_pitch_um,
     )
 
 

@@ -85,6 +85,9 @@ page_option = click.option("--page", is_flag=True, help="Show it in browsers too
 bind_option = click.option(
     "--bind", metavar="ADDRESS", help=f"Where the page listens, if not at {LOOPBACK} (this computer only); asks for it."
 )
+set_option = click.option(
+    "--set", "changes", multiple=True, metavar="KEY=VALUE", help="Change a key, as need.feature_um=140."
+)
 json_option = click.option("--json", "as_json", is_flag=True, help="Print result.json instead of the answer in words.")
 
 
@@ -94,7 +97,7 @@ json_option = click.option("--json", "as_json", is_flag=True, help="Print result
 @out_option
 @json_option
 @click.option("--leave-out-bad-frames", is_flag=True, help="Go on without frames that are missing or damaged.")
-@click.option("--set", "changes", multiple=True, metavar="KEY=VALUE", help="Change a key, as need.feature_um=140.")
+@set_option
 def replay(
     source: Path,
     station_file: Path | None,
@@ -250,13 +253,15 @@ def probe(source: str | None, station_file: Path | None, as_json: bool) -> int:
 @click.argument("station_file", type=PATH, metavar="STATION.toml")
 @out_option
 @json_option
-def plan(station_file: Path, out: Path | None, as_json: bool) -> int:
-    """Say what to expect of a station before any frame, from the station file alone."""
+@set_option
+def plan(station_file: Path, out: Path | None, as_json: bool, changes: tuple[str, ...]) -> int:
+    """Say what to expect of a station before any frame: by a usual lens, or the one that lens.model names."""
     _see_that_results_fit(out)
-    station = _load(station_file)
+    station = _changed(_load(station_file), changes)
     from sweep.forecast import forecast
+    from sweep.report import earlier_lens
 
-    return _answer(forecast(station), station, out, as_json)
+    return _answer(forecast(station, earlier_lens(station, station_file)), station, out, as_json)
 
 
 @sweep.command()

@@ -62,6 +62,15 @@ class Bench:
         """Working f-number over f-number, 1 + m / P."""
         return float(working_f_number(1.0, self.magnification, self.pupil_magnification))
 
+    @property
+    def rms_nm(self) -> float:
+        """Standard deviation of the spectrum, nm."""
+        return float(np.sqrt(self.weights @ (self.wavelengths_nm - self.wavelength_nm) ** 2))
+
+    def wave_um(self, f_number: float) -> float:
+        """The shift of focus in the image (um) that is one wave of defocus at the pupil's edge: 8 lambda N_w^2."""
+        return 8e-3 * self.wavelength_nm * (f_number * self.working) ** 2
+
     def of_one_wavelength(self) -> "Bench":
         """The same bench in light of the reference wavelength alone."""
         return replace(self, wavelengths_nm=np.array([self.wavelength_nm]), weights=np.array([1.0]), spread=np.zeros(1))

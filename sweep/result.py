@@ -95,7 +95,11 @@ class CameraNoise:
 
 @dataclass(frozen=True, slots=True)
 class LensModel:
-    """The fitted lens. `best_focus_mm`: the depth, from the plane of focus, sharpest at the recommended stop."""
+    """The fitted lens. `best_focus_mm`: the depth, from the plane of focus, sharpest at the recommended stop.
+
+    The rest serves a forecast at another station: aberrations of fourth and sixth order are in waves of `wavelength_nm`
+    at the pupil's edge of `widest_f_number`, `colour_um_per_nm` is how the focus moves in the image with the wavelength.
+    """
 
     best_focus_mm: float | None
     spherical_waves: float | None
@@ -104,6 +108,15 @@ class LensModel:
     best_focus_mm_u: float | None = None
     spherical_waves_u: float | None = None
     blur_px_u: float | None = None
+    sixth_order_waves: float | None = None
+    sixth_order_waves_u: float | None = None
+    colour_um_per_nm: float | None = None
+    colour_um_per_nm_u: float | None = None
+    widest_f_number: float | None = None
+    wavelength_nm: float | None = None
+    focal_length_mm: float | None = None
+    magnification: float | None = None
+    pixel_pitch_um: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

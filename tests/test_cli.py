@@ -18,6 +18,7 @@ import sweep.recording
 import sweep.screens.answer
 from sweep import __version__, cli
 from sweep.errors import CameraError, FrameError, Interrupted
+from sweep.report import result_json
 from sweep.result import Result
 from sweep.station import Station
 
@@ -38,7 +39,9 @@ def folder(tmp_path):
 def asked(monkeypatch):
     """Stand-ins for reader, analysis and screen; what they were asked is kept."""
     station = a_station()
-    seen = types.SimpleNamespace(station=None, answered=None, files=None, progress="unset", result=a_result(station))
+    seen = types.SimpleNamespace(
+        station=None, earlier=None, answered=None, files=None, progress="unset", result=a_result(station)
+    )
 
     def analyse(source, station, progress=None):
         seen.station, seen.progress = station, progress
@@ -53,7 +56,12 @@ def asked(monkeypatch):
     monkeypatch.setattr(sweep.recording, "load_station", lambda path: station)
     monkeypatch.setattr(sweep.recording, "open_source", lambda path, **options: options)
     monkeypatch.setattr(sweep.analyse, "analyse", analyse)
-    monkeypatch.setattr(sweep.forecast, "forecast", lambda station: analyse(None, station))
+
+    def forecast(station, earlier):
+        seen.earlier = earlier
+        return analyse(None, station)
+
+    monkeypatch.setattr(sweep.forecast, "forecast", forecast)
     monkeypatch.setattr(sweep.screens.answer, "answer", answer)
     return seen
 
@@ -237,6 +245,17 @@ def test_progress_bar_on_a_terminal(folder, asked, monkeypatch):
     assert cli.main(["replay", str(folder)]) == 0
     asked.progress(3, 8)
     asked.progress(8, 8)
+
+
+def test_plan_takes_the_lens_of_an_earlier_result(folder, asked):
+    plain = ["plan", str(folder / "station.toml")]
+    assert cli.main(plain) == 0
+    assert asked.earlier is None
+    (folder.parent / "earlier").mkdir()
+    (folder.parent / "earlier" / "result.json").write_bytes(result_json(asked.result))
+    assert cli.main([*plain, "--set", "lens.model=../earlier"]) == 0
+    assert asked.earlier == asked.result.model
+    assert asked.station.lens.model == "../earlier"
 
 
 def test_set_changes_keys_of_the_station(folder, asked):

@@ -114,6 +114,8 @@ def test_whole_numbers_stand_for_floats():
         ("lens.focal_length_mm", [16], "a number above 0"),
         ("lens.focal_length_mm", 10**400, "a number above 0"),
         ("lens.pupil_magnification", 0, "a number above 0"),
+        ("lens.model", 3, "the path of a result.json"),
+        ("lens.model", "", "the path of a result.json"),
         ("lens.stops", [2.8, 2], "widest (smallest) first"),
         ("lens.stops", [2, 2, 2.8], "widest (smallest) first"),
         ("lens.stops", [], "at least two"),

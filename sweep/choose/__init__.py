@@ -58,7 +58,7 @@ def choose(
     losses = losses_at_worst(best, lens)
     between = between_marks(best, candidates, station, camera, outlook)
     refocus = None
-    if lens is not None and best.meets_need:
+    if lens is not None and "contrast" not in best.why_not:
         refocus = best_refocus(lens, best.index, best.f_number, outlook.places, best.blur, station)
     recommendation = Recommendation(
         stop=best.evidence.stop,

@@ -2,6 +2,7 @@
 
 tables  result.json, readings.csv, stops.csv      plot    plot.png, plot.svg
 record  record.pdf, laid out by record.typ, with depth_plot's map on its second page
+earlier the way back, for a forecast
 
 drawing, lines, labels and letters help the pictures.
 """
@@ -12,13 +13,23 @@ import tempfile
 from pathlib import Path
 
 from sweep.errors import InputError
+from sweep.report.earlier import earlier_lens
 from sweep.report.tables import read_result, readings_csv, result_json, stops_csv
 from sweep.result import Result
 from sweep.station import Station
 
 FILES = ("result.json", "readings.csv", "stops.csv", "plot.png", "plot.svg", "record.pdf")
 
-__all__ = ["FILES", "check_out", "read_result", "readings_csv", "result_json", "stops_csv", "write_report"]
+__all__ = [
+    "FILES",
+    "check_out",
+    "earlier_lens",
+    "read_result",
+    "readings_csv",
+    "result_json",
+    "stops_csv",
+    "write_report",
+]
 
 
 def write_report(out_dir: Path, result: Result, station: Station) -> tuple[Path, ...]:

@@ -58,6 +58,7 @@ Positive = Annotated[Number, Field(ge=1e-9), Allowed("a number above 0 (from 1e-
 NotNegative = Annotated[Number, Field(ge=0), Allowed("a number, 0 or more")]
 Fraction = Annotated[Number, Field(ge=1e-9, le=1), Allowed("a number above 0, at most 1")]
 Name = Annotated[str, AfterValidator(_plain_line), Allowed("a text of one line, not empty")]
+ResultPath = Annotated[str, AfterValidator(_plain_line), Allowed("the path of a result.json of an earlier sweep")]
 Count = Annotated[int, Field(strict=True, ge=1, le=10_000), Allowed("a whole number from 1 to 10000")]
 Group = Annotated[int, Field(strict=True, ge=-10, le=20), Allowed("a whole number from -10 to 20")]
 Place = Annotated[int, Field(strict=True, ge=0, le=1_000_000)]
@@ -95,6 +96,7 @@ class Lens(Table):
     focal_length_mm: Positive
     stops: Stops
     pupil_magnification: Positive = 1.0
+    model: ResultPath | None = None
 
 
 class Camera(Table):
