@@ -155,6 +155,7 @@ def test_a_forecast_claims_no_measurement() -> None:
     assert page["readings"]["rows"] == []
     assert page["sign"] == ()
     assert "measured" not in " ".join(page["cautions"])
+    assert "edges" not in " ".join(page["method"])
     assert ("Frames used", "none: a forecast") in page["source"]
     assert _pdf(forecast, station).startswith(b"%PDF")
 

@@ -67,6 +67,13 @@ _METHOD = (
     "The f-number by light follows from the light per exposure, scaled so that the widest stop without clipping is as "
     "engraved. Noise by photon transfer (EMVA Standard 1288, Release 4.0 Linear, 2021).",
 )
+_FORECAST_METHOD = (
+    "Contrast is the modulation transfer of lens and camera together at the feature's frequency, 1 / (2 x feature) in "
+    "object space, by a model: a circular pupil with defocus and spherical aberration (H. H. Hopkins, Proc. R. Soc. A "
+    "231, 91-103, 1955), pixel box and sensor blur. The reasons say which lens is assumed.",
+    "The lowest of several contrasts, and the chances, come from joint draws of what is unsure (JCGM 101:2008). A need "
+    "counts as met where its chance reaches the wanted confidence (JCGM 106:2012).",
+)
 _CAUTIONS = (
     "Do not look into bright lamps; flashing light can trigger seizures in some people.",
     "Stop and secure moving machinery before reaching into it. Lock the ring and focus screws before it runs again.",
@@ -132,7 +139,7 @@ def _content(result: Result, station: Station) -> dict[str, Any]:
         "readings": _readings(result, station),
         "numbers": _numbers(result),
         "source": _source(result, station),
-        "method": _METHOD,
+        "method": _FORECAST_METHOD if forecast else _METHOD,
         "cautions": (*_CAUTIONS[:-1], _NO_PROOF) if forecast else _CAUTIONS,
         "sign": () if forecast else _SIGN,
     }
