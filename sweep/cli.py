@@ -109,6 +109,8 @@ def replay(
     """Analyse the frames in the folder SOURCE: a recording, or images with a shots.csv."""
     if not source.is_dir():
         raise SourceError(f"{source} is not a folder: name a folder with images and shots.csv.")
+    if (source / "result.json").is_file() and not (source / "shots.csv").exists():
+        raise SourceError(f"{source} holds an answer, not frames: name the folder that it came from, with --set too.")
     if station_file is None and not (source / "station.toml").is_file():
         raise SourceError(f"{source} holds no station.toml. Name the station file with --station FILE.")
     if out is not None and out.resolve().is_relative_to(source.resolve()):

@@ -258,6 +258,12 @@ def test_plan_takes_the_lens_of_an_earlier_result(folder, asked):
     assert asked.station.lens.model == "../earlier"
 
 
+def test_a_folder_with_an_answer_is_no_source(folder, asked, capsys):
+    (folder / "result.json").write_bytes(result_json(asked.result))
+    assert cli.main(["replay", str(folder)]) == 2
+    assert "holds an answer, not frames" in capsys.readouterr().err
+
+
 def test_set_changes_keys_of_the_station(folder, asked):
     changes = ["need.feature_um=140", "need.depth_range_mm=[0, 12]", "station.name=lane 3", "need.flicker_hz = 100"]
     changes.append("targets.1.depth_mm=3.5")
