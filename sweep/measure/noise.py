@@ -100,18 +100,32 @@ def area_noise(
 
 
 def _neighbour_correlation(rest: Floats, grid: tuple[Floats, Floats]) -> tuple[float, float]:
-    """Correlation of the temporal noise with the next sample along x, and along y (the next there is: 1 or 2 px)."""
+    """Correlation of the temporal noise with the next sample along x, and along y (the next there is: 1 or 2 px).
+
+    Each row's mean over x is taken off first, so that bands of a rippling lamp are not taken for shared noise; that
+    leaves white noise a correlation of -1 / (n - 1) along x, which is put right.
+    """
     x, y = (g.astype(int) for g in grid)
     x, y = x - x.min(), y - y.min()
     image = np.full((len(rest), int(y.max()) + 1, int(x.max()) + 1), np.nan)
     image[:, y, x] = rest
     step = 1 if len(x) > 0.75 * image[0].size else 2
-    total = np.nanmean(image**2)
+    count = np.bincount(y, minlength=image.shape[1])
+    image[:, count < 3] = np.nan
+    sums = np.nansum(image, axis=2, keepdims=True)
+    image = image - sums / np.maximum(count, 1)[None, :, None]
+    total = np.nanmean(image**2) if np.isfinite(image).any() else 0.0
     if not total > 0:
         return 0.0, 0.0
-    along_x = np.nanmean(image[:, :, step:] * image[:, :, :-step]) if image.shape[2] > step + 2 else 0.0
-    along_y = np.nanmean(image[:, step:, :] * image[:, :-step, :]) if image.shape[1] > step + 2 else 0.0
-    return float(along_x / total), float(along_y / total)
+    along_x = _lagged(image[:, :, step:] * image[:, :, :-step]) / total
+    along_y = _lagged(image[:, step:, :] * image[:, :-step, :]) / total
+    lost = float(np.mean(1.0 / count[count >= 3]))
+    return along_x * (1.0 - lost) + lost, along_y
+
+
+def _lagged(products: Floats) -> float:
+    """Mean of the products of neighbours; 0 where there are too few rows or columns of them."""
+    return float(np.nanmean(products)) if min(products.shape[1:]) > 2 and np.isfinite(products).any() else 0.0
 
 
 def fit_photon_transfer(points: Sequence[NoisePoint]) -> PhotonTransfer | None:
@@ -121,11 +135,39 @@ def fit_photon_transfer(points: Sequence[NoisePoint]) -> PhotonTransfer | None:
     unsteady area) lose weight; areas whose noise is hidden by rounding are left out. None with fewer than three
     points or no range of levels.
     """
-    points = [p for p in points if p.variance_dn2 > 12.0 * p.rounding_dn2 * LEAST_NOISE_IN_STEPS**2]
+    points = _plain(points)
     fit = _line(points, with_dark=True)
     if fit is not None and fit.dark_variance_dn2 < 0:
         fit = _line(points, with_dark=False)
     return fit
+
+
+def noise_growth(points: Sequence[NoisePoint]) -> tuple[float, float] | None:
+    """The exponent n of variance ~ light^n over areas of many levels, and its u; None with too few or no range of them.
+
+    Between 0 and 1 for any camera of linear response: dark noise is constant, photon noise goes as the light. Its u is
+    widened by the scatter of the points.
+    """
+    points = [p for p in _plain(points) if p.mean_dn > 0 and p.variance_dn2 > p.rounding_dn2]
+    if len(points) < 4:
+        return None
+    gain = np.array([p.gain_db for p in points]) * np.log(10.0) / 20.0
+    light = np.log([p.mean_dn for p in points]) - gain
+    variance = np.log([p.variance_dn2 - p.rounding_dn2 for p in points]) - 2.0 * gain
+    if np.ptp(light) < np.log(2.0):
+        return None
+    weight = np.array([p.dof for p in points]) / 2.0
+    off = light - np.average(light, weights=weight)
+    strength = float(np.sum(weight * off**2))
+    growth = float(np.sum(weight * off * variance)) / strength
+    rest = variance - np.average(variance, weights=weight) - growth * off
+    scatter = max(1.0, float(np.sum(weight * rest**2)) / (len(points) - 2))
+    return growth, float(np.sqrt(scatter / strength))
+
+
+def _plain(points: Sequence[NoisePoint]) -> list[NoisePoint]:
+    """The areas whose noise rounding to codes does not hide."""
+    return [p for p in points if p.variance_dn2 > 12.0 * p.rounding_dn2 * LEAST_NOISE_IN_STEPS**2]
 
 
 def _line(points: Sequence[NoisePoint], with_dark: bool) -> PhotonTransfer | None:

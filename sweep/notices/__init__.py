@@ -42,7 +42,8 @@ def notices(
     processed = [] if compressed else processing_notices(sweep)
     bent = exposure_notices(sweep, station)
     lamp = [] if bent else lamp_notices(sweep, light)
-    rippling = station.need.flicker_hz > 0 or any(note.code == "flicker" for note in lamp)
+    flickers = any(note.code == "flicker" for note in lamp)
+    rippling = station.need.flicker_hz > 0 or flickers
     found = [
         *frame_notices(sweep, station),
         *ring_notices(sweep, light),
@@ -51,7 +52,7 @@ def notices(
         *movement_notices(sweep, station),
         *patch_notices(sweep, readings, station),
         *processed,
-        *(bent if bent or compressed or processed else noise_notices(sweep, station)),
+        *(bent if bent or compressed or processed or flickers else noise_notices(sweep, station)),
         *model_notices(fit, discrepancy, sweep, station),
     ]
     order = list(NOTE_CODES)

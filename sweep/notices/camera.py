@@ -2,7 +2,15 @@
 
 import numpy as np
 
-from sweep.notices.thresholds import BENT_TRANSFER, CERTAIN, CORRELATION, EXPOSURE_MISMATCH, OVERSHOOT
+from sweep.measure.noise import noise_growth
+from sweep.notices.thresholds import (
+    BENT_TRANSFER,
+    CERTAIN,
+    CORRELATION,
+    EXPOSURE_MISMATCH,
+    GROWTH_BEYOND,
+    OVERSHOOT,
+)
 from sweep.readings import CLIPPED_SHARE, Sweep
 from sweep.result import Note
 from sweep.station import Station
@@ -60,12 +68,17 @@ def noise_notices(sweep: Sweep, station: Station) -> list[Note]:
     """Noise that does not follow the light."""
     transfer = sweep.photon_transfer
     bend = transfer.bend if transfer is not None else None
-    if bend is None or abs(bend[0]) <= max(BENT_TRANSFER, CERTAIN * bend[1]):
+    grown = noise_growth([p for s in sweep.sightings if s.saturated_fraction <= CLIPPED_SHARE for p in s.noise])
+    if bend is not None and abs(bend[0]) > max(BENT_TRANSFER, CERTAIN * bend[1]):
+        how = f"photon transfer is bent by {100 * bend[0]:+.0f} %"
+    elif grown is not None and abs(grown[0] - 0.5) > 0.5 + max(GROWTH_BEYOND, CERTAIN * grown[1]):
+        how = f"its variance goes as the light to the power of {grown[0]:.1f}; 0 to 1 is possible"
+    else:
         return []
     return [
         Note(
             "response-not-linear",
-            f"The noise does not follow the light as camera.response = {station.camera.response!r} says (photon "
-            f"transfer is bent by {100 * bend[0]:+.0f} %). Set the camera's gamma to 1, or state its response.",
+            f"The noise does not follow the light as camera.response = {station.camera.response!r} says ({how}). Set "
+            "the camera's gamma to 1, or state its response.",
         )
     ]

@@ -19,7 +19,7 @@ def frame_notices(sweep: Sweep, station: Station) -> list[Note]:
             out.append(
                 Note(
                     "frames-saturated",
-                    f"{mark(stop)}: up to {100 * worst.saturated_fraction:.2g} % of the pixels are clipped ({names}). "
+                    f"{mark(stop)}: up to {100 * worst.saturated_fraction:.3g} % of the pixels are clipped ({names}). "
                     "Take this stop again at a shorter exposure.",
                 )
             )
