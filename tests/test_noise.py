@@ -13,7 +13,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
-from sweep.measure.noise import NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer
+from sweep.measure.noise import NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer, noise_growth
 
 K, READ_E = 0.4, 5.0  # DN per electron, electrons
 PIXELS = 64 * 64
@@ -83,6 +83,15 @@ def test_noise_that_neighbours_share(quincunx):
     along_x, along_y = point_of(smooth[:, keep], grid=grid).correlation
     assert_allclose([along_x, along_y], [0.0, 0.5], atol=0.05)
     assert_allclose(point_of(white[:, :64][:, keep], grid=grid).correlation, 0.0, atol=0.05)
+
+
+def test_bands_of_a_rippling_lamp_are_not_noise_that_neighbours_share():
+    rng = np.random.default_rng(5)
+    rows, columns = np.mgrid[0:64, 0:40]
+    bands = 1.0 + 0.02 * np.sin(2 * np.pi * rows / 20.0 + rng.uniform(0, 6, 6)[:, None, None])
+    frames = rng.normal(1000.0, 5.0, (6, 64, 40)) * bands
+    grid = columns.ravel().astype(float), rows.ravel().astype(float)
+    assert_allclose(point_of(frames.reshape(6, -1), grid=grid).correlation, 0.0, atol=0.05)
 
 
 @pytest.mark.parametrize("shape", [(1, 4096), (5, 29)])
@@ -159,6 +168,23 @@ def test_under_a_display_gamma_noise_falls_with_the_level_and_there_is_no_gain()
 def test_a_straight_line_is_not_bent():
     found = transfer_of(np.random.default_rng(8), levels=(200, 500, 1000, 2000, 3500, 5000, 7000, 9000))
     assert abs(found.bend[0]) < 4 * found.bend[1] < 0.2
+
+
+@pytest.mark.parametrize(("gamma", "growth"), [(1.0, 0.98), (2.2, -0.2), (1.0 / 2.2, 1.55)])
+def test_noise_grows_as_the_response_has_it(gamma, growth):
+    # Photon noise: variance ~ light. Codes ~ light^(1/gamma) taken for light have a variance ~ light^(2/gamma - 1),
+    # that is codes^(2 - gamma); dark noise takes a little off.
+    rng, full = np.random.default_rng(9), 4000.0
+    taken = [full * (np.maximum(frames_of(e, rng, rounded=False), 0.0) / full) ** (1 / gamma) for e in LEVELS[2:]]
+    found, u = noise_growth([point_of(f) for f in taken])
+    assert_allclose(found, growth, atol=0.06)
+    assert u < 0.03
+
+
+@pytest.mark.parametrize("levels", [(100, 110, 120, 130), (100, 1000, 3000)], ids=["one level", "three areas"])
+def test_growth_without_a_range_is_not_told(levels):
+    rng = np.random.default_rng(9)
+    assert noise_growth([point_of(frames_of(e, rng)) for e in levels]) is None
 
 
 def a_point(mean, variance, rounding=1.0 / 12.0):
