@@ -11,6 +11,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.patheffects import AbstractPathEffect, withStroke
+from matplotlib.ticker import MaxNLocator
 from scipy.interpolate import PchipInterpolator
 
 from sweep.choose.depths import kept
@@ -100,6 +101,7 @@ def _usable(axes: Axes, rows: Sequence[DepthStop], edges: Sequence[float], resul
     axes.set_yticks([])
     axes.set_ylim(0, 1)
     axes.set_ylabel("Usable\ndepths\n(mm)", rotation=0, ha="center", va="center", fontsize=8.5)
+    axes.yaxis.set_label_coords(-0.075, 0.58)
     serves = {s.stop for s in result.stops if s.meets_need}
     for row, left, right in zip(rows, edges[:-1], edges[1:], strict=True):
         share = math.log(right / left) / math.log(edges[-1] / edges[0])
@@ -126,6 +128,7 @@ def _contrast(
 ) -> None:
     need = station.need
     axes.set_ylim(depths_mm[-1], depths_mm[0])  # nearer the camera on top
+    axes.yaxis.set_major_locator(MaxNLocator(8, prune="both"))
     axes.set_ylabel("Depth from the plane of focus (mm)\nfarther \N{LEFTWARDS ARROW}   \N{RIGHTWARDS ARROW} nearer")
     x, contrast, u = _between_marks(rows, edges)
     levels = _levels(float(contrast.max()))
