@@ -36,7 +36,6 @@ def a_sighting(patch=None, *, target=1, why_not=(), saturated=0.001, **measures)
         why_not=why_not,
         saturated_fraction=saturated,
         frames=2,
-        light_per_ms=100.0,
         frame_light=none,
         frame_order=none,
         tone_per_ms=None,

@@ -188,7 +188,7 @@ def test_gain_is_light_that_was_not_there(gain_db):
     )
     doubled = with_shots(doubled, lambda shot: replace(shot, gain_db=gain_db))
     light, more = (measure_sweep(s, station).sightings for s in (plain, doubled))
-    assert_allclose([s.light_per_ms for s in more], [s.light_per_ms for s in light], rtol=1e-3)
+    assert_allclose([s.frame_light.mean() for s in more], [s.frame_light.mean() for s in light], rtol=1e-3)
 
 
 def test_a_stop_that_is_clipped_throughout_is_not_read():

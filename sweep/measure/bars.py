@@ -33,27 +33,23 @@ _CONTINUED_U = 0.005
 class BarsMeasure:
     """What one set of bars says at one stop. Without `ok`, `why_not` holds codes and the figures are 0.
 
-    `v_cy_px`: frequency found, with `v_u`; `direction_deg`: of the frequency vector, from the x axis; `harmonics`:
+    `v_cy_px`: frequency found; `direction_deg`: of the frequency vector, from the x axis; `harmonics`:
     amplitude and u of the fundamental, third and fifth, unit of the samples, the last two positive where they have
-    the sense that a square wave seen without reversal has, u infinite where they were not seen; `pattern_u`: that part
-    of the fundamental's u that comes back at every stop; `level`: mean level; `phase_rad`: of the fundamental at the
-    region's first pixel; `shift_px`: (n,) of each frame along the frequency vector, with `shift_u_px`; `noise`: rms
-    of a pixel of the mean frame about the fit, and `temporal_noise` of one frame about the mean frame.
+    the sense that a square wave seen without reversal has, u infinite where they were not seen; `level`: mean
+    level; `phase_rad`: of the fundamental at the region's first pixel; `shift_px`: (n,) of each frame along the
+    frequency vector, with `shift_u_px`; `noise`: rms of a pixel of the mean frame about the fit.
     """
 
     ok: bool
     why_not: tuple[str, ...] = ()
     v_cy_px: float = 0.0
-    v_u: float = 0.0
     direction_deg: float = 0.0
     harmonics: tuple[tuple[float, float], ...] = ((0.0, 0.0), (0.0, np.inf), (0.0, np.inf))
-    pattern_u: float = 0.0
     level: float = 0.0
     phase_rad: float = 0.0
     shift_px: Floats = field(default_factory=lambda: np.empty(0))
     shift_u_px: float = 0.0
     noise: float = 0.0
-    temporal_noise: float | None = None
 
     @property
     def relative(self) -> tuple[float, float]:
@@ -244,6 +240,8 @@ def _read_like(bars: Samples, near: BarsMeasure) -> BarsMeasure | None:
 def _core(bars: Samples, wave: tuple[float, float]) -> Bools | None:
     """The samples inside the set: where the wave is strong along and across, its ends and borders left out."""
     v = float(np.hypot(*wave))
+    if v == 0.0:
+        return None
     x, y = bars.x, bars.y
     across, along = (x * wave[0] + y * wave[1]) / v, (-x * wave[1] + y * wave[0]) / v
     border = np.minimum.reduce([x - x.min(), x.max() - x, y - y.min(), y.max() - y])
@@ -307,19 +305,15 @@ def _record(fit: BarsFit, phase: float) -> BarsMeasure | None:
     )
     v = float(np.hypot(*fit.f))
     frame = fit.temporal if fit.temporal is not None else fit.noise
-    pattern = float(np.sqrt(max(fit.noise**2 - frame**2 / n, 0.0)))
     least = max(abs(first), fit.u(0))
     return BarsMeasure(
         True,
         v_cy_px=v,
-        v_u=fit.u(0) / least * np.sqrt(12 / fit.samples) / (2 * np.pi),
         direction_deg=float(np.degrees(np.arctan2(fit.f[1], fit.f[0]))),
         harmonics=tuple((float(a) * fit.unit, u * fit.unit) for a, u in parts),
-        pattern_u=pattern * float(fit.units[0]) * fit.unit,
         level=fit.level * fit.unit,
         phase_rad=float((phase - 2 * np.pi * float(fit.f @ fit.middle)) % (2 * np.pi)),
         shift_px=np.asarray(np.angle(turn / turn.mean()) / (2 * np.pi * v)),
         shift_u_px=frame * float(fit.units[0]) / (least * 2 * np.pi * v),
         noise=fit.noise * fit.unit,
-        temporal_noise=None if fit.temporal is None else fit.temporal * fit.unit,
     )

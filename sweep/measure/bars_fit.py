@@ -51,7 +51,6 @@ class BarsFit:
     waves: NDArray[np.complex128]
     units: Floats
     level: float
-    samples: int
     noise: float
     temporal: float | None
     folded: float
@@ -99,7 +98,7 @@ class BarsFit:
         # seen through a transfer that falls like exp(-a v), the third is the cube of the first
         transfer = min(1.0, abs(waves[0].mean()) / SQUARE_WAVE)
         folded = SQUARE_WAVE * sum(transfer**h / h for h in left_out) / np.sqrt(3)
-        return cls(f, middle, waves, units, float(coefficients[0].mean()), k, noise, temporal, float(folded), bars.unit)
+        return cls(f, middle, waves, units, float(coefficients[0].mean()), noise, temporal, float(folded), bars.unit)
 
     @property
     def together(self) -> complex:

@@ -47,9 +47,9 @@ class StarRings:
 
     `v_cy_px`, `radius_px`: (m,); `amplitude`: (m,) mean over directions of the modulus of the n-th harmonic, noise
     bias removed; `signed`: (m,) the n-th harmonic in the star's own phase, negative where it is reversed against the
-    outermost rings; `u`: (m,) standard uncertainty of both, independent from ring to ring, of which `pattern_u` comes
-    back at every stop (the pixels' own pattern); `level`: (m,) mean level; `astigmatic`: (m, 2) the parts of the
-    amplitude that follow cos 2t and sin 2t over the direction t of the frequency, with `astigmatic_u`.
+    outermost rings; `u`: (m,) standard uncertainty of both, independent from ring to ring; `level`: (m,) mean
+    level; `astigmatic`: (m, 2) the parts of the amplitude that follow cos 2t and sin 2t over the direction t of the
+    frequency, with `astigmatic_u`.
     """
 
     v_cy_px: Floats
@@ -57,7 +57,6 @@ class StarRings:
     amplitude: Floats
     signed: Floats
     u: Floats
-    pattern_u: Floats
     level: Floats
     astigmatic: Floats
     astigmatic_u: Floats
@@ -69,9 +68,8 @@ class StarMeasure:
 
     `centre_px`: (x, y); `phase_rad`: of the wedges, which tells a reversed star from one that is not, between stops;
     `shift_px`: (n, 2) of each frame against their mean, with `shift_u_px`; `rim_px`: radius of the star's outer end,
-    None where it lies outside of the region; `noise`: rms of a pixel of the mean frame about the fit, and
-    `temporal_noise` of one frame about the mean frame (None for one frame), unit of the samples; `profile`: the level
-    across the rim, None without rim.
+    None where it lies outside of the region; `noise`: rms of a pixel of the mean frame about the fit, unit
+    of the samples; `profile`: the level across the rim, None without rim.
     """
 
     ok: bool
@@ -84,7 +82,6 @@ class StarMeasure:
     shift_u_px: float = 0.0
     rim_px: float | None = None
     noise: float = 0.0
-    temporal_noise: float | None = None
     profile: RadialProfile | None = None
 
 
@@ -169,14 +166,13 @@ def _measure(
         shift_u_px=shift_u,
         rim_px=rim,
         noise=noise * unit,
-        temporal_noise=None if temporal is None else temporal * unit,
         profile=profile,
     )
 
 
 def _scaled(rings: StarRings, unit: float) -> StarRings:
     """The rings in the unit of the samples."""
-    names = ("amplitude", "signed", "u", "pattern_u", "level", "astigmatic", "astigmatic_u")
+    names = ("amplitude", "signed", "u", "level", "astigmatic", "astigmatic_u")
     return replace(rings, **{name: getattr(rings, name) * unit for name in names})
 
 
@@ -292,7 +288,6 @@ def _rings(
     # the frequency's direction lies across the radius, which turns the sign of both parts
     minus = np.where(signed < 0, 1.0, -1.0)
     even, odd = (turned[:, 4] + turned[:, 3]).real * minus, (turned[:, 4] - turned[:, 3]).imag * minus
-    pattern = np.sqrt(max(noise**2 - temporal**2 / n, 0.0)) if temporal is not None else 0.0
     steep = float(np.sum((signed * cycles / radius) ** 2 / np.maximum(unit, 1e-12)))
     rings = StarRings(
         v_cy_px=cycles / (2 * np.pi * radius),
@@ -300,7 +295,6 @@ def _rings(
         amplitude=np.abs(local).mean(axis=1),
         signed=signed,
         u=np.sqrt(variance),
-        pattern_u=pattern * np.sqrt(unit),
         level=coefficients[:, 0],
         astigmatic=np.stack([even, odd], axis=1),
         astigmatic_u=np.sqrt(2 * variance),

@@ -57,7 +57,6 @@ def measure_patch(
         why_not=tuple(why),
         saturated_fraction=float(np.average([s.clipped for s in used], weights=counts)),
         frames=int(counts.sum()),
-        light_per_ms=float(np.average(frame_light, weights=weights)),
         frame_light=frame_light,
         frame_order=np.array([s.order for s in used]),
         tone_per_ms=_tone(full, site, edge, station),

@@ -31,8 +31,8 @@ class PatchSite:
 class Sighting:
     """What one patch said at one stop.
 
-    `light_per_ms`: mean linear light of the patch (DN per ms at 0 dB); `frame_light`: the same frame by frame, with the
-    frames' place in time in `frame_order`; `tone_per_ms`: the light tone in the brightest channel, None where the kind
+    `frame_light`: mean linear light of the patch (DN per ms at 0 dB), frame by frame, with the frames' place in time in
+    `frame_order`; `tone_per_ms`: the light tone in the brightest channel, None where the kind
     has none; `exposures`: of the frames, ms at 0 dB; `noise`: of its even areas; `saturated_fraction`: over the
     frames used; `frames`: how many were used.
     """
@@ -43,7 +43,6 @@ class Sighting:
     why_not: tuple[str, ...]
     saturated_fraction: float
     frames: int
-    light_per_ms: float
     frame_light: Floats
     frame_order: Floats
     tone_per_ms: float | None
