@@ -98,7 +98,7 @@ class LensModel:
     """The fitted lens. `best_focus_mm`: the depth, from the plane of focus, sharpest at the recommended stop.
 
     The rest serves a forecast at another station: aberrations of fourth and sixth order are in waves of `wavelength_nm`
-    at the pupil's edge of `widest_f_number`, `colour_um_per_nm` is how the focus moves in the image with the wavelength.
+    at the pupil's edge of `widest_f_number`; `colour_um_per_nm`: how the focus moves in the image with the wavelength.
     """
 
     best_focus_mm: float | None
