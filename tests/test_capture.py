@@ -310,3 +310,34 @@ def test_live_work_on_five_megapixels_is_small_beside_one_pass_over_the_frame():
 
     live = median_s(lambda: (meter.light(frame), meter.shift_px(frame, frame)))
     assert live < 0.25 * median_s(lambda: cv2.Laplacian(frame, cv2.CV_64F).var())
+
+
+def test_darks_wait_for_the_cap_even_where_the_black_level_is_not_known():
+    # The station file says 0, the camera has 64.
+    told, untold = small_station(), small_station(black_level_dn=0)
+    capped = []
+
+    def user(event, events):
+        if isinstance(event, Ask) and event.stop is None:
+            hand.camera.cap(False)
+        if isinstance(event, Seen) and asked_before(events)[-1:] == [None]:
+            capped.append(event)
+            if len(capped) == 15:
+                hand.camera.cap(True)
+        return Action.NONE
+
+    camera = small_camera(told)
+    hand = SimulatedHand(camera, STOPS, slipped=True)
+    real_cap = camera.cap
+    camera.cap = lambda on: real_cap(on) if len(capped) >= 15 or not on else None
+    run = Run(user, station=untold, camera=camera, hand=hand)
+    darks = [run.keeper.frames[shot.file].mean() for shot in run.shots(None)]
+    assert len(darks) == PLAN.darks
+    assert_allclose(darks, 64, atol=1)
+
+
+def test_darks_that_were_broken_off_are_made_up():
+    whole = Run().keeper
+    run = Run(keeper=MemoryKeeper(whole.shots[:-1]))
+    assert run.asked == [None]
+    assert len(run.shots(None)) == PLAN.darks

@@ -70,7 +70,7 @@ class Live:
         self.unrest_stops = 0.0  # of the light at rest, rms, as last settled
         self.exposure_ms, self.gain_db = fixed_ms or 10.0, 0.0
         self._settings = self._apply(self.exposure_ms)
-        self.meter.light(camera.grab(FIRST_TIMEOUT_S).pixels)
+        self.lit = self.meter.light(camera.grab(FIRST_TIMEOUT_S).pixels).mean  # the patches' light, as last settled
 
     def ask(self, stop: float) -> None:
         """The hand is sent to a stop."""
@@ -156,7 +156,7 @@ class Live:
             row.append(frame.light.mean)
             last = row[-SETTLED_FRAMES:]
             if len(last) == SETTLED_FRAMES and max(last) - min(last) <= SETTLED_SHARE * max(*last, 0.02):
-                self.unrest_stops = _unrest(last)
+                self.unrest_stops, self.lit = _unrest(last), frame.light.mean
                 return frame
             if len(row) >= UNSETTLED_FRAMES and frame.view.state != "turning":
                 self.unrest_stops = _unrest(row[-UNSETTLED_FRAMES:])

@@ -16,7 +16,8 @@ from sweep.station import Station
 MOVED_STOPS = 0.06
 SHAKEN_PX = 0.2
 SHAKEN_TRIES = 2  # after that, the station shakes by itself: the analysis says so
-CAP_SHARE = 0.02
+CAP_SHARE = 0.1  # of the light before; what is left may be a black level that is not known yet
+CAP_LEAST = 0.002
 CAPPED_FRAMES = 6
 
 CAUTIONS = (
@@ -78,7 +79,7 @@ class _Run:
         try:
             yield from self._begin()
             yield from self._sweep()
-            if self._plan.darks and not self._shots(None):
+            if len(self._shots(None)) < self._plan.darks:
                 yield from self._darks()
         except Ended:
             ended = True
@@ -175,16 +176,15 @@ class _Run:
     def _darks(self) -> Generator[Event, Action, None]:
         """Frames with the lens capped; SKIP leaves them out."""
         yield from self._told(Ask(None, self._of, self._of, False, self._leaving))
-        brightest, dark = 0.0, 0
+        dark = 0
         while dark < CAPPED_FRAMES:
             frame = yield from self._live.frame()
             if frame.action is Action.SKIP:
                 return
             if frame.action is Action.TAKE:
                 break
-            brightest = max(brightest, frame.light.mean)
-            dark = dark + 1 if frame.light.mean < CAP_SHARE * brightest else 0
-        for number in range(self._plan.darks):
+            dark = dark + 1 if frame.light.mean < max(CAP_LEAST, CAP_SHARE * self._live.lit) else 0
+        for number in range(len(self._shots(None)), self._plan.darks):
             frame = yield from self._live.frame()
             self._keep(frame, None)
             yield from self._told(Taken(None, number + 1, self._plan.darks))
