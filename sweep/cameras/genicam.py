@@ -116,7 +116,9 @@ class _Aravis:
 
     def open(self) -> None:
         """Open, choose the pixel format, switch the automatics off, start."""
-        self._camera = self._ask("arv_camera_new", self._address.encode() or None)
+        # Left to find the first one itself, the library may listen for its frames on another network interface.
+        address = self._address or next((found for found, _ in found_genicam()), "")
+        self._camera = self._ask("arv_camera_new", address.encode() or None)
         if not self._camera:
             raise CameraError(f"{self.name} is not there. Check cable, power and address.")
         self._format = self._choose_format()
