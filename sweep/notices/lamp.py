@@ -52,10 +52,11 @@ def usual_ripple(light: Light) -> float:
 def row_ripple(row_light: Sequence[Floats]) -> tuple[float, float] | None:
     """Amplitude and period (rows) of bands common to the frames; None where no single frequency stands out.
 
-    row_light: for each stop, (n, rows), ratios to the stop's mean frame. The power spectra of all frames are averaged;
-    a band is a line at 30 times the median power that holds a quarter of all, of an amplitude that matters.
+    row_light: for each stop, (n, rows), ratios to the stop's mean frame. The power spectra of all frames are averaged,
+    each frame's mean and slope over the rows taken off; a band is a line at 30 times the median power that holds a
+    quarter of all, of an amplitude that matters.
     """
-    spectra = [np.abs(np.fft.rfft(r - r.mean(axis=1, keepdims=True), axis=1)) ** 2 for r in row_light if len(r) >= 2]
+    spectra = [np.abs(np.fft.rfft(_level(r), axis=1)) ** 2 for r in row_light if len(r) >= 2]
     if not spectra:
         return None
     rows = row_light[0].shape[1]
@@ -68,3 +69,10 @@ def row_ripple(row_light: Sequence[Floats]) -> tuple[float, float] | None:
     if line < 0.25 * power.sum() or power[peak] < 30.0 * np.median(power) or amplitude < ROW_RIPPLE:
         return None
     return float(amplitude), rows / float(peak + 2)
+
+
+def _level(rows: Floats) -> Floats:
+    """Rows (n, rows) less the straight line through each frame's: a lamp that moved tips the light, and is no band."""
+    at = np.linspace(-1.0, 1.0, rows.shape[1])
+    even = rows - rows.mean(axis=1, keepdims=True)
+    return np.asarray(even - np.outer(even @ at / float(at @ at), at))
