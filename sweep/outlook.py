@@ -213,11 +213,18 @@ class FittedLens:
         value, slopes = (a[..., 0, :] for a in self._evaluate(views, places, 1, None))
         variance = np.einsum("ps,pq,qs->s", slopes, self.fit.covariance, slopes)
         variance += MODEL_FLOOR**2 + self.deviation[stop_index] ** 2
+        between = np.array([p.target < 0 for p in places])
+        variance += np.where(between, (slopes[0] * self._own_focus_mm()) ** 2, 0.0)
         shares = _shares(self.fit)
         for share, (_, theta) in zip(shares[1:], self.fit.rivals, strict=True):
             other, _ = FittedLens(replace(self.fit, theta=theta))._evaluate(views, places, 1, None)
             variance += share * (other[0] - value) ** 2
         return value, np.sqrt(variance)
+
+    def _own_focus_mm(self) -> float:
+        """How far targets were found off the common focus (rms): what lies elsewhere may be as far off, either way."""
+        shifts = [self.fit.value(name)[0] for name in self.fit.names if name.startswith("shift ")]
+        return float(np.sqrt(np.mean(np.square(shifts))))
 
     def best_depth_mm(self, stop_index: int, places: Sequence[Place]) -> float:
         """The depth (mm) that is sharpest at a stop, by the mean over the feature's frequencies of all places."""

@@ -189,6 +189,18 @@ def test_over_frequency_is_the_transfer_of_every_place():
         assert_allclose(row, [true_contrast(TRUTH, STOPS[2], place.depth_mm, f) for f in v], atol=1.5e-3)
 
 
+def test_a_depth_between_targets_is_as_unsure_as_their_own_focus():
+    # A target found s off the common focus changes the contrast as a shift of the focus by s does (first order).
+    s = 0.2
+    fit = a_known_fit(deviation=1e-9, **{"shift 0": s, "shift 1": -s, "shift 2": s})
+    lens, between = FittedLens(fit), replace(PLACES[2], target=-1)
+    value, u = lens.at_feature(1, [between])
+    moved = lens.contrast(1, between, refocus_mm=0.01) - lens.contrast(1, between, refocus_mm=-0.01)
+    assert_allclose(u[0], np.hypot(s * moved / 0.02, MODEL_FLOOR), rtol=1e-3)
+    _, known = lens.at_feature(1, PLACES[2:])
+    assert_allclose(known[0], MODEL_FLOOR, rtol=1e-3)
+
+
 # Half modulation.
 
 
