@@ -9,8 +9,9 @@ from functools import lru_cache
 import numpy as np
 from lenses import TRUTH
 
-from sweep.cameras.simulated import RenderedSweep, SimulatedStation, exposure_for, render_sweep
+from sweep.cameras.simulated import RenderedSweep, Scene, SimulatedStation, exposure_for, render_sweep
 from sweep.cameras.simulated_print import Print
+from sweep.frames import Shot
 from sweep.station import Station
 
 STOPS = (1.4, 2.0, 2.8, 4.0, 5.6, 8.0)
@@ -101,3 +102,46 @@ def shuffled(sweep: RenderedSweep, seed=0, *, renumbered=True) -> RenderedSweep:
     if renumbered:
         shots = [replace(shot, order=i) for i, shot in enumerate(shots)]
     return RenderedSweep(tuple(shots), sweep.frames, sweep.bit_depth, sweep.notes)
+
+
+def with_notes(sweep: RenderedSweep, *notes) -> RenderedSweep:
+    """The sweep with what its reader noticed."""
+    return RenderedSweep(sweep.shots, sweep.frames, sweep.bit_depth, notes)
+
+
+def with_stops_of(sweep: RenderedSweep, other: RenderedSweep, chosen) -> RenderedSweep:
+    """The sweep with the frames of another one at the stops for which `chosen(stop)` holds."""
+    return with_frames(
+        sweep, lambda shot, pixels: other.frames[shot.file] if shot.stop and chosen(shot.stop) else pixels
+    )
+
+
+def scaled(sweep: RenderedSweep, factor, black_dn=64.0) -> RenderedSweep:
+    """Each 12-bit frame's light times `factor(shot)`: a number, or an array over the frame."""
+    return with_frames(
+        sweep,
+        lambda shot, pixels: (
+            np.clip(black_dn + (pixels - black_dn) * factor(shot), 0, 4095).round().astype(np.uint16)
+            if shot.role == "target"
+            else pixels
+        ),
+    )
+
+
+def at_exposures(station, factors, *, level=0.6, stops=None, **effects) -> RenderedSweep:
+    """A sweep whose k-th frame of every stop, or of `stops`, is exposed `factors[k]` times as long."""
+    sim, rng = a_truth(station, **effects), np.random.default_rng(4)
+    scene, shots, frames = Scene(station, sim, rng), [], {}
+    for stop in station.lens.stops:
+        base_ms = exposure_for(station, sim, stop, level)
+        for k, factor in enumerate(factors):
+            longer = factor if stops is None or stop in stops else 1.0
+            shot = Shot(f"f{stop:g}_{k}.png", stop, longer * base_ms, 0.0, "target", len(shots))
+            shots.append(shot)
+            frames[shot.file] = scene.expose(stop, shot.exposure_ms, 0.0, rng)
+    return RenderedSweep(tuple(shots), frames, station.camera.bit_depth)
+
+
+def with_camera(station, **keys) -> Station:
+    """The station with some of its camera's keys changed."""
+    return station.model_copy(update={"camera": station.camera.model_copy(update=keys)})
