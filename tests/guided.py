@@ -1,6 +1,8 @@
 """For the tests of the guided run: a small simulated station, a keeper in memory, and hands that can be scripted."""
 
-from collections.abc import Callable, Iterable, Sequence
+import tempfile
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import replace
 from pathlib import Path
 
@@ -15,8 +17,19 @@ from sweep.errors import CameraError
 from sweep.frames import Pixels, Shot
 from sweep.station import Patch, Station, Target
 
+ADDRESS = "127.0.0.1"  # the one address at which the library's simulated camera can be served
 STOPS = (2.0, 2.8, 4.0, 5.6)
 PLAN = Plan(frames=3, darks=2)
+
+
+@contextmanager
+def address_to_itself() -> Iterator[None]:
+    """Wait until no other test run on this machine serves a camera at ADDRESS."""
+    import fcntl  # not on every system; nor is the library
+
+    with (Path(tempfile.gettempdir()) / "aperture-sweep-gige.lock").open("w") as lock:
+        fcntl.flock(lock, fcntl.LOCK_EX)
+        yield
 
 
 def small_station(**camera: object) -> Station:

@@ -14,7 +14,7 @@ from sweep.station import Station
 
 def station_text(station: Station) -> str:
     """The station as its file."""
-    return tomlkit.dumps(station.model_dump(mode="json", exclude_none=True))
+    return tomlkit.dumps(station.model_dump(mode="json", exclude_unset=True))
 
 
 if __name__ == "__main__":

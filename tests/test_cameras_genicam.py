@@ -6,6 +6,7 @@ import time
 
 import numpy as np
 import pytest
+from guided import ADDRESS, address_to_itself
 
 from sweep.cameras import open_camera
 from sweep.cameras.genicam import formats_for
@@ -15,7 +16,6 @@ from sweep.errors import CameraError
 from sweep.station import Station
 
 SERVER = shutil.which("arv-fake-gv-camera-0.8")
-ADDRESS = "127.0.0.1"
 
 
 def station(bit_depth: int) -> Station:
@@ -34,10 +34,11 @@ def served():
         time.sleep(0.5)
         return servers[-1]
 
-    yield serve
-    for server in servers:
-        server.kill()
-        server.wait()
+    with address_to_itself():
+        yield serve
+        for server in servers:
+            server.kill()
+            server.wait()
 
 
 def drained(camera):

@@ -11,14 +11,13 @@ from pathlib import Path
 import cv2
 import numpy as np
 import pytest
-from guided import PLAN, STOPS, MemoryKeeper, small_camera, small_station
+from guided import ADDRESS, PLAN, STOPS, MemoryKeeper, address_to_itself, small_camera, small_station
 
 from sweep.cameras import open_camera
 from sweep.cameras.simulated import exposure_for
 from sweep.capture import Action, Ask, Begin, Event, Live, Seen, Trouble, conduct
 
 HERE = Path(__file__).parent
-ADDRESS = "127.0.0.1"
 
 
 class Hand:
@@ -68,10 +67,11 @@ def gige():
         assert server.stdout.readline() == "ready\n"
         return server
 
-    yield serve
-    for server in servers:
-        server.kill()
-        server.communicate()
+    with address_to_itself():
+        yield serve
+        for server in servers:
+            server.kill()
+            server.communicate()
 
 
 def told(server):

@@ -115,7 +115,7 @@ def test_in_a_pipe_plain_lines_and_nothing_waits_for_a_key():
         run = Run(lambda event, events: screen(event))
     assert run.finished.taken == STOPS
     lines = out.getvalue().splitlines()
-    assert any("stop it and secure it" in line for line in lines)
+    assert any("lock out its energy" in line for line in lines)
     assert "[2/5] Close the ring from f/2 to f/2.8." in lines
     assert sum("taken:" in line for line in lines) == len(STOPS) + 1
     assert "\x1b" not in out.getvalue()

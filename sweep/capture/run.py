@@ -21,9 +21,10 @@ CAP_LEAST = 0.002
 CAPPED_FRAMES = 6
 
 CAUTIONS = (
-    "Moving machinery: stop it and secure it against starting before you reach in.",
-    "Bright or pulsing lamps: do not look into them; pulsing light can trigger seizures.",
-    "The safety rules of your site come before anything that is asked for here.",
+    "Reaching in: stop the machine, lock out its energy, and try that it stays dead, before a hand goes in.",
+    "Lamps: do not stare into them. Pulsing light can trigger seizures: shield it, and warn those nearby.",
+    "Lasers: read the class on the label first; 3R and up needs measures.",
+    "The rules of your site and local law come before anything that is asked for here.",
 )
 
 Outcome = Literal["done", "skip", "back", "again"]
