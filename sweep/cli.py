@@ -235,8 +235,9 @@ def probe(source: str | None, station_file: Path | None, as_json: bool) -> int:
         camera, stated = open_camera(source, station), station.camera
     else:
         camera, stated = open_untold(source, demo_station())
+    patches = [patch for target in (station.targets if station else ()) for patch in target.patches]
     with camera, _probe_progress() as tell:
-        found = run(camera, stated, tell)
+        found = run(camera, stated, tell, [patch.region for patch in patches if patch.kind == "edge"])
     with _reader_may_leave():
         if as_json:
             from sweep.report.probe_json import probe_json

@@ -5,6 +5,8 @@ at rest must be new and alike, noise must be the pixels' own. Each finding has a
 says how each is made.
 """
 
+from collections.abc import Sequence
+
 from sweep.cameras import Camera
 from sweep.probe import light, picture, rhythm
 from sweep.probe.bench import Bench
@@ -12,6 +14,7 @@ from sweep.probe.pulse import ROLLING_TURNS
 from sweep.probe.records import VERDICTS, Figures, Finding, Probe, Tell, Verdict
 from sweep.probe.run import Observed, observe
 from sweep.station import Camera as Stated
+from sweep.station import Region
 
 __all__ = ["VERDICTS", "Finding", "Probe", "Tell", "Verdict", "probe"]
 
@@ -19,23 +22,23 @@ TOO_DARK = 0.1
 TOO_BRIGHT = 0.98
 
 
-def probe(camera: Camera, stated: Stated, tell: Tell = lambda what, share: None) -> Probe:
-    """Probe a camera; some 300 to 400 frames, 20 s at 20 frames a second.
+def probe(camera: Camera, stated: Stated, tell: Tell = lambda what, share: None, edges: Sequence[Region] = ()) -> Probe:
+    """Probe a camera; some 230 to 300 frames, 12 to 15 s at 20 frames a second.
 
-    stated: what is known of its samples (layout, bit depth, response, black level). The camera is left at other
-    settings than it was found. Raises CameraError where it fails on the way.
+    stated: what is known of its samples (layout, bit depth, response, black level); edges: where slanted edges are, if
+    that is known. The camera is left at other settings than it was found. Raises CameraError where it fails on the way.
     """
     seen, bench = observe(camera, stated, tell)
     tone = float(seen.rest.samples[-1].tone / seen.codes.top_dn)
     findings: list[Finding | None] = [_no_light(seen, tone), picture.bit_depth(seen, bench, stated)]
     if findings[0] is None:
-        findings += _judged(seen, bench, stated)
+        findings += _judged(seen, bench, stated, edges)
     tell("done", 1.0)
     told = tuple(finding for finding in findings if finding is not None)
     return Probe(seen.device, seen.rest.exposure_ms, tone, bench.frames, told)
 
 
-def _judged(seen: Observed, bench: Bench, stated: Stated) -> list[Finding | None]:
+def _judged(seen: Observed, bench: Bench, stated: Stated, edges: Sequence[Region]) -> list[Finding | None]:
     """All findings that need light; what one of them spoils, the others don't judge."""
     response = light.response_of(seen) if seen.settable else None
     coarse_ms = None if response is None else light.coarse_step(seen)
@@ -45,11 +48,11 @@ def _judged(seen: Observed, bench: Bench, stated: Stated) -> list[Finding | None
     locked = light.automatics(seen, response, pulsing)
     is_locked = locked.verdict != "not fit"
     hidden = light.AUTOMATICS if not is_locked else "exposures that are not what they say" if coarse_ms else ""
-    straight = light.linearity(response, hidden, ripple.amplitude if ripple is not None and pulsing else 0.0)
+    straight = light.linearity(response, hidden, rhythm.lamp_swing(ripple, seen))
     bent = hidden or ("the bent response" if straight.verdict == "not fit" else "")
     striped = ripple is not None and pulsing and ripple.turns > ROLLING_TURNS
     still = is_locked and not striped
-    processed = picture.processing(picture.processing_of(seen, bench, stated), stated, still)
+    processed = picture.processing(picture.processing_of(seen, bench, stated, edges), stated, still)
     noisy = bent or ("the processing" if processed.verdict == "not fit" else "")
     return [
         locked,

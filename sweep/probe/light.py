@@ -15,7 +15,7 @@ import numpy as np
 from sweep.choose.wording import number
 from sweep.measure.linear import Floats
 from sweep.probe.bench import Series
-from sweep.probe.records import Figures, Finding, Verdict
+from sweep.probe.records import Figures, Finding, Verdict, percent
 from sweep.probe.run import SETTLE_MOST, Observed
 from sweep.station import Camera as Stated
 
@@ -25,6 +25,7 @@ DRIFT_FRAMES = 20
 DRIFT_GOOD, DRIFT_FIT = 0.01, 0.03
 LINEAR_GOOD, LINEAR_FIT = 0.01, 0.03
 LOWEST_SHARE = 0.05
+ROUNDING = 0.15  # of a code step, by which the mean of little noise may be off
 POWERS = np.arange(0.25, 1.61, 0.01)
 BENT_POWER = 0.06
 GAIN_GOOD_DB = 0.5
@@ -33,6 +34,10 @@ LEAST_OFF_MS = 0.001
 LIGHT_UNSURE = 0.001
 ZERO_SHARE = 0.05
 AUTOMATICS = "the automatics"
+BY_HAND = (
+    "Exposure and gain cannot be set from here: set and lock them on the camera, everything automatic off. Half the "
+    "exposure must give half the level above black."
+)
 MEND_FIRST = "Mend that first, then probe again."
 COARSE = 0.1
 LIGHT_OFF = 0.1
@@ -76,7 +81,8 @@ def response_of(seen: Observed) -> Response | None:
     (black, slope), _ = line(1.0)
     light = slope * exposure
     high = light > LOWEST_SHARE * light.max()
-    off = np.abs(level - black - light)[high] / np.maximum(light[high], 1e-9) if slope > 0 else np.array([np.inf])
+    off = np.maximum(np.abs(level - black - light) - ROUNDING * seen.codes.step, 0.0)
+    off = off[high] / np.maximum(light[high], 1e-9) if slope > 0 else np.array([np.inf])
     power = min(POWERS, key=lambda p: line(float(p))[1])
     worst = int(np.argmax(off))
     rise = float((level[-1] - level.min()) / max(level[-1], 1e-9) / (1 - exposure[0] / exposure[-1]))
@@ -125,17 +131,16 @@ def automatics(seen: Observed, response: Response | None, rippling: bool) -> Fin
         return Finding("automatics", "Automatics", "not fit", found, off, figures)
     if (back := _comes_back(seen)) > COMES_BACK:
         figures["comes_back"] = back
-        found = f"after a change of exposure {back:.0%} of the level comes back by itself"
+        found = f"after a change {percent(back)} of the level comes back by itself"
         return Finding("automatics", "Automatics", "not fit", found, off, figures)
-    stays = f"at rest within {_percent(drift)} over {DRIFT_FRAMES} frames"
+    stays = f"{DRIFT_FRAMES} frames at rest within {percent(drift)}"
     if drift > DRIFT_GOOD and not rippling:
         verdict: Verdict = "take care" if drift < DRIFT_FIT else "not fit"
         to_do = f"{off} If all is off: is the lamp warm, does anything move?"
         return Finding("automatics", "Automatics", verdict, stays, to_do, figures)
     if response is None:
-        to_do = "Exposure cannot be changed from here: see that everything automatic is off at the camera itself."
-        return Finding("automatics", "Automatics", "not told", stays, to_do, figures)
-    return Finding("automatics", "Automatics", "good", f"level follows the exposure; {stays}", "", figures)
+        return Finding("automatics", "Automatics", "not told", stays, BY_HAND, figures)
+    return Finding("automatics", "Automatics", "good", f"none seen; {stays}", "", figures)
 
 
 def _drift(levels: Floats) -> float:
@@ -158,8 +163,7 @@ def linearity(response: Response | None, hidden: str, ripple: float) -> Finding:
     """Is the level, less black, proportional to the exposure? `hidden`: what keeps that from being told."""
     name = "Linearity"
     if response is None:
-        to_do = "Check with two exposures set by hand: half the exposure must give half the level above black."
-        return Finding("linearity", name, "not told", "needs several exposures", to_do)
+        return Finding("linearity", name, "not told", "needs several exposures", BY_HAND)
     if hidden:
         return Finding("linearity", name, "not told", f"hidden by {hidden}", MEND_FIRST)
     figures: Figures = {
@@ -167,13 +171,13 @@ def linearity(response: Response | None, hidden: str, ripple: float) -> Finding:
         "deviation_at_ms": response.at_ms,
         "response_exponent": response.power,
     }
-    found = f"level over exposure within {_percent(response.deviation)} of a line"
+    found = f"level over exposure within {percent(response.deviation)} of a line"
     if response.deviation <= LINEAR_GOOD:
         return Finding("linearity", name, "good", found, "", figures)
     if response.deviation <= 1.5 * ripple:
         return Finding("linearity", name, "not told", f"{found}, in pulsing light", "Probe in steady light.", figures)
     if abs(response.power - 1) > BENT_POWER and response.deviation > LINEAR_FIT:
-        found = f"off a line by {_percent(response.deviation)}, as by a gamma of {1 / response.power:.2f}"
+        found = f"off a line by {percent(response.deviation)}, as by a gamma of {1 / response.power:.2f}"
         to_do = "Set the camera's gamma to 1 and contrast curves off, or state camera.response in the station file."
         return Finding("linearity", name, "not fit", found, to_do, figures)
     verdict: Verdict = "take care" if response.deviation <= LINEAR_FIT else "not fit"
@@ -190,7 +194,9 @@ def black(seen: Observed, response: Response | None, stated: Stated, hidden: str
     figures: Figures = {"black_level_dn": response.black_dn, "zero_share": zero}
     if zero > ZERO_SHARE and seen.codes.container > 8:
         to_do = "Raise the camera's black level (offset) until no pixel is 0 without light: else dark levels read high."
-        return Finding("black", "Black level", "take care", f"{zero:.0%} of the dark pixels are at 0", to_do, figures)
+        return Finding(
+            "black", "Black level", "take care", f"{percent(zero)} of the dark pixels are at 0", to_do, figures
+        )
     found = f"{max(response.black_dn, 0.0):.1f} DN, by the line through the levels"
     return Finding("black", "Black level", "good", found, "", figures)
 
@@ -199,8 +205,7 @@ def exposure(seen: Observed, response: Response | None, coarse_ms: float | None,
     """Which exposures can be set, and are they what the light says?"""
     name = "Exposure"
     if not seen.settable:
-        to_do = "Set exposure and gain on the camera by hand, lock them, and say so when `record` asks."
-        return Finding("exposure", name, "take care", "cannot be set from here", to_do)
+        return Finding("exposure", name, "take care", "cannot be set from here", BY_HAND)
     step_ms, least_ms, used_ms = exposure_step(seen.readbacks), seen.least_ms, seen.rest.exposure_ms or 0.0
     figures: Figures = {"least_ms": least_ms, "step_ms": step_ms, "used_ms": used_ms}
     if least_ms is None:
@@ -227,8 +232,8 @@ def exposure(seen: Observed, response: Response | None, coarse_ms: float | None,
         to_do = (
             "Only few exposures can be had, so levels are met roughly: trim them by the light."
             if step_ms is None
-            else f"One step is {step_ms / used_ms:.0%} of the {number(used_ms)} ms used here: dim the light, so that "
-            "exposures are longer, and state camera.exposure_step_ms."
+            else f"One step is {percent(step_ms / used_ms)} of the {number(used_ms)} ms used here: dim the light for "
+            "longer exposures, and state camera.exposure_step_ms."
         )
         return Finding("exposure", name, "take care", found, to_do, figures)
     if least_ms > LEAST_GOOD_MS:
@@ -294,8 +299,3 @@ def settling(seen: Observed, locked: bool) -> Finding:
         else f"{frames} frame{'s' * (frames > 1)} after a change still show{'s' * (frames == 1)} the old setting"
     )
     return Finding("settling", "Settling", "good", found, "", figures)
-
-
-def _percent(share: float) -> str:
-    """A share in percent, two digits."""
-    return f"{100 * share:.2g} %" if share < 10 else "more than 1000 %"

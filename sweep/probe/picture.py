@@ -14,12 +14,13 @@ from sweep.choose.wording import number
 from sweep.measure.edge import read_edge
 from sweep.measure.linear import Floats, sharpness_sites
 from sweep.measure.noise import QUANTISATION_VARIANCE, NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer
-from sweep.notices import BENT_PX, BENT_TRANSFER, CERTAIN, CORRELATION, OVERSHOOT, RAGGED_PX
+from sweep.notices import BENT_TRANSFER, CERTAIN, CORRELATION, OVERSHOOT
 from sweep.probe.bench import Bench, Series
 from sweep.probe.light import MEND_FIRST
-from sweep.probe.records import Figures, Finding
+from sweep.probe.records import Figures, Finding, percent
 from sweep.probe.run import Observed
 from sweep.station import Camera as Stated
+from sweep.station import Region
 
 COMPRESSED = {"MJPG", "JPEG", "H264", "AVC1", "HEVC", "HEV1", "HVC1", "MP4V", "MPG2", "MPG1", "VP80", "VP90", "AV01"}
 SHARED_OVER_TIME = 0.05
@@ -28,6 +29,9 @@ LEAST_A_CODE = 20.0
 STRETCHED = 1.3
 EDGE_PX = 64
 EDGES = 16
+LEAST_EDGES = 2
+RAGGED_PX = 0.12  # a square that was found by itself may hold a corner, which looks ragged and bent
+BENT_PX = 0.2
 LEAST_STEP = 0.15
 LEAST_FRAMES = 8
 
@@ -59,12 +63,11 @@ def bit_depth(seen: Observed, bench: Bench, stated: Stated) -> Finding:
         found += f"; only one code in {stretch:.1f} occurs"
         to_do = "The camera stretches its codes: set digital gain, contrast and gamma to none."
         return Finding("bit-depth", "Bit depth", "take care", found, to_do, figures)
-    if stated.bit_depth is None and codes.container > 8 and codes.clip_dn is not None:
-        return Finding("bit-depth", "Bit depth", "good", f"{found}; state bit_depth = {codes.depth}", "", figures)
-    if codes.clip_dn is None:
+    to_state = f"State camera.bit_depth = {codes.depth} in the station file." if stated.bit_depth is None else ""
+    if codes.clip_dn is None and seen.settable:
         to_do = "Nothing was bright enough to clip: give more light, then probe again, to see the top of the range."
-        return Finding("bit-depth", "Bit depth", "not told" if seen.settable else "good", found, to_do, figures)
-    return Finding("bit-depth", "Bit depth", "good", found, "", figures)
+        return Finding("bit-depth", "Bit depth", "not told", found, to_do, figures)
+    return Finding("bit-depth", "Bit depth", "good", found, to_state if codes.container > 8 else "", figures)
 
 
 def _stretch(bench: Bench, shift: int, step: int) -> float:
@@ -88,8 +91,8 @@ class Processing:
     compressed: str
 
 
-def processing_of(seen: Observed, bench: Bench, stated: Stated) -> Processing:
-    """Look for signs of processing in the frames at rest."""
+def processing_of(seen: Observed, bench: Bench, stated: Stated, edges: Sequence[Region]) -> Processing:
+    """Look for signs of processing in the frames at rest; at `edges`, if any are given, else at any in the picture."""
     stack = _stack(seen.rest, bench)
     grid = _grid(bench.side)
     points = [point for k in range(stack.shape[1]) if (point := area_noise(stack[:, k], 0.0, 0.0, grid)) is not None]
@@ -100,10 +103,11 @@ def processing_of(seen: Observed, bench: Bench, stated: Stated) -> Processing:
         shared = float(mean[np.argmax(np.abs(mean))])
         shared = 0.0 if abs(shared) < CERTAIN / np.sqrt(dof.sum()) else shared
         over_time = _over_time(stack)
-    overshoots = _overshoots(seen, bench, stated)
+    overshoots = _overshoots(seen, bench, stated, edges)
     code = str(seen.device.get("pixel_format") or "").upper()
     compressed = code if code in COMPRESSED else ""
-    overshoot = float(np.median(overshoots)) if overshoots else None
+    sharpest = overshoots[: max(LEAST_EDGES, len(overshoots) // 2)]
+    overshoot = float(np.median(sharpest)) if len(sharpest) >= LEAST_EDGES else None
     return Processing(shared, over_time, overshoot, len(overshoots), compressed)
 
 
@@ -121,20 +125,23 @@ def processing(found: Processing, stated: Stated, still: bool) -> Finding:
     if found.frames > SHARED_OVER_TIME and still:
         told.append(f"frames share noise ({found.frames:+.2f})")
     if found.overshoot is not None and found.overshoot > OVERSHOOT:
-        told.append(f"edges overshoot by {found.overshoot:.0%}")
+        told.append(f"edges overshoot by {percent(found.overshoot)}")
     if found.compressed:
-        told.append(f"the stream is compressed ({found.compressed})")
+        told.append(f"compressed ({found.compressed})")
     if not told:
         if not still:
             return Finding("processing", "Processing", "not told", "hidden by changing light", MEND_FIRST, figures)
         edges = (
-            "no slanted edge in view"
+            "too few edges for overshoot"
             if found.overshoot is None
-            else f"overshoot {max(0.0, 100 * found.overshoot):.1f} % at {found.edges} edge{'s' * (found.edges > 1)}"
+            else f"{found.edges} edge{'s' * (found.edges > 1)} overshoot by {max(0.0, 100 * found.overshoot):.1f} %"
         )
-        text = f"noise of pixels is their own ({found.neighbours:+.3f}); {edges}"
+        text = f"noise is each pixel's own; {edges}"
         return Finding("processing", "Processing", "good", text, "", figures)
     text = ", ".join(told)
+    if told[0].startswith("compressed"):
+        to_do = "Choose an uncompressed pixel format: compression changes fine detail and noise."
+        return Finding("processing", "Processing", "take care", text, to_do, figures)
     if stated.layout == "bgr" and len(told) == 1 and found.neighbours > CORRELATION:
         to_do = "Colours are interpolated, which blurs: use the raw mosaic if the camera offers it."
         return Finding("processing", "Processing", "take care", text, to_do, figures)
@@ -180,11 +187,11 @@ def noise(transfer: PhotonTransfer | None, seen: Observed, hidden: str, black_dn
         "bend": None if transfer.bend is None else transfer.bend[0],
     }
     if transfer.bend is not None and abs(transfer.bend[0]) > max(BENT_TRANSFER, CERTAIN * transfer.bend[1]):
-        found = f"does not grow with the light as photons do ({transfer.bend[0]:+.0%} at the top)"
+        found = f"does not grow with the light as photons do ({100 * transfer.bend[0]:+.0f} % at the top)"
         to_do = "Look for gamma, noise reduction or compression in the camera and switch it off."
         return Finding("noise", name, "take care", found, to_do, figures)
-    read = "read noise below rounding" if dark is None else f"read noise {number(dark * per_dn)} e"
-    found = f"{number(per_dn)} electrons a DN, {read}; {snr_db:.0f} dB at 0.7 of full"
+    read = "read noise below rounding" if dark is None else f"read noise {number(dark * per_dn)} electrons"
+    found = f"{number(per_dn)} electrons a DN, {read}"
     return Finding("noise", name, "good", found, "", figures)
 
 
@@ -212,38 +219,35 @@ def _over_time(stack: Floats) -> float:
     return float((rest[1:] * rest[:-1]).mean() / total) + 1 / n if total > 0 else 0.0
 
 
-def _overshoots(seen: Observed, bench: Bench, stated: Stated) -> Sequence[float]:
-    """Overshoot at both sides of each slanted edge that is found in the picture, the smaller of the two."""
-    size = min(EDGE_PX, min(seen.mean.shape) // 2)
+def _overshoots(seen: Observed, bench: Bench, stated: Stated, edges: Sequence[Region]) -> Sequence[float]:
+    """Overshoot at each slanted edge, the smaller of its two sides, the sharpest edge first."""
+    height, width = seen.mean.shape
     found = []
-    for row, column in _edge_places(seen, size):
-        cut = seen.mean[row : row + size, column : column + size]
-        if cut.max() >= 0.98 * seen.codes.top_dn:
+    for left, top, across, down in edges or _squares(seen):
+        cut = seen.mean[top : top + down, left : left + across]
+        if left + across > width or top + down > height or cut.max() >= 0.98 * seen.codes.top_dn:
             continue
-        sites = sharpness_sites(stated.layout, (column, row, size, size))
+        sites = sharpness_sites(stated.layout, (left, top, across, down))
         values = bench.linear(cut).ravel()[sites.flat_index]
         edge = read_edge(sites.x, sites.y, values[None, :])
         step = (edge.light - edge.dark) / max(float(values.mean()), 1e-9)
         if edge.ok and step > LEAST_STEP and edge.ragged_px < RAGGED_PX and edge.bend_px < BENT_PX:
-            found.append(min(edge.overshoot))
-    return found
+            found.append((edge.spread_px, min(edge.overshoot)))
+    return [overshoot for _, overshoot in sorted(found)]
 
 
-def _edge_places(seen: Observed, size: int) -> Sequence[tuple[int, int]]:
-    """First pixels (row, column) of squares around the strongest steps of tone, none over another."""
-    cell = 8
+def _squares(seen: Observed) -> Sequence[Region]:
+    """Squares around the strongest steps of tone, no two centres close to each other."""
+    size, cell = min(EDGE_PX, min(seen.mean.shape) // 2), 8
     rows, columns = (n // cell for n in seen.mean.shape)
     coarse = seen.mean[: rows * cell, : columns * cell].reshape(rows, cell, columns, cell).mean(axis=(1, 3))
     slope = np.hypot(*(np.gradient(coarse, axis=axis) for axis in (0, 1)))
-    places: list[tuple[int, int]] = []
+    places: list[Region] = []
     for k in np.argsort(slope, axis=None)[::-1][: 40 * EDGES]:
-        row, column = (
-            (int(k) // columns) * cell + cell // 2 - size // 2,
-            (int(k) % columns) * cell + cell // 2 - size // 2,
-        )
-        inside = 0 <= row <= seen.mean.shape[0] - size and 0 <= column <= seen.mean.shape[1] - size
-        if inside and all(max(abs(row - r), abs(column - c)) >= size // 2 for r, c in places):
-            places.append((row, column))
+        top, left = (int(n) * cell + cell // 2 - size // 2 for n in divmod(int(k), columns))
+        inside = 0 <= top <= seen.mean.shape[0] - size and 0 <= left <= seen.mean.shape[1] - size
+        if inside and all(max(abs(left - x), abs(top - y)) >= size // 2 for x, y, _, _ in places):
+            places.append((left, top, size, size))
         if len(places) == EDGES:
             break
     return places

@@ -16,9 +16,10 @@ MOST_HZ = 400.0
 LEAST_HZ = 1.0
 PER_RESOLUTION = 5.0
 MAINS_HZ = (100.0, 120.0)
-MAINS_OFF_HZ = 1.2  # mains wander, and a computer's arrival times jitter
+MAINS_OFF_HZ = 0.5  # mains wander, and so do the clocks of cameras
 AS_GOOD = 1.3  # as much left unexplained, or
 ALL_BUT = 0.02
+FOLDED_SHARE = 0.5
 FALSE_ALARM = 1e-4
 ROLLING_TURNS = 0.15
 
@@ -39,8 +40,17 @@ class Ripple:
     noise: float
 
 
-def find_ripple(time_s: Floats, bands: Floats) -> Ripple | None:
-    """The ripple of strips' levels, (frames, strips) black taken off, at times (frames,); None with too few frames."""
+def evened(arrived_s: Floats, period_s: float) -> Floats:
+    """When frames of one series came, (n,), by the camera's own clock: computers only ever note them late."""
+    place = np.rint((arrived_s - arrived_s[0]) / period_s)
+    return np.asarray(place * period_s + (arrived_s - place * period_s).min())
+
+
+def find_ripple(time_s: Floats, bands: Floats, rate_hz: float) -> Ripple | None:
+    """The ripple of strips' levels, (frames, strips) black taken off, at times (frames,); None with too few frames.
+
+    rate_hz: the frame rate, at whose multiples frequencies fold onto each other.
+    """
     n = len(time_s)
     span_s = float(np.ptp(time_s)) if n else 0.0
     if n < 12 or span_s <= 0 or not (bands.mean(axis=0) > 0).all():
@@ -56,7 +66,7 @@ def find_ripple(time_s: Floats, bands: Floats) -> Ripple | None:
     rms = math.sqrt(total / off.size)
     if total <= 0 or share[best] < _chance_level(n, hz.size):
         return Ripple(rms * math.sqrt(2), None, (), 0.0, rms)
-    choice, others = _choose(hz, share, best)
+    choice, others = _choose(hz, share, best, rate_hz)
     turn = 2 * math.pi * hz[choice] * time_s
     waves = np.column_stack([np.cos(turn), np.sin(turn)])
     waves = waves - base @ (base.T @ waves)
@@ -100,12 +110,27 @@ def _chance_level(n: int, tried: int) -> float:
     return float(1.0 - (FALSE_ALARM / independent) ** (2.0 / max(n - 4, 1)))
 
 
-def _choose(hz: Floats, share: Floats, best: int) -> tuple[int, tuple[float, ...]]:
-    """The frequency to name, the lamps' usual ones first among equals; and a few others as good."""
+def _choose(hz: Floats, share: Floats, best: int, rate_hz: float) -> tuple[int, tuple[float, ...]]:
+    """The frequency to name, and a few others as good.
+
+    Lamps on the mains come first among equals, and among frequencies that fold onto one another at the frame rate: late
+    arrivals blur the faster ones more, so that a slower one may seem better.
+    """
     peaks = np.flatnonzero(1.0 - share <= max(AS_GOOD * (1.0 - share[best]), ALL_BUT))
     groups = np.split(peaks, np.flatnonzero(np.diff(hz[peaks]) > 0.5) + 1)
     tops = [int(group[np.argmax(share[group])]) for group in groups]
-    usual = [k for k in tops for mains in MAINS_HZ if abs(hz[k] - mains) < MAINS_OFF_HZ]
+    usual = []
+    for mains in MAINS_HZ:
+        near = np.flatnonzero(np.abs(hz - mains) < MAINS_OFF_HZ)
+        if near.size and share[top := int(near[np.argmax(share[near])])] > FOLDED_SHARE * share[best]:
+            folded = abs(_folded(hz[top], rate_hz) - _folded(hz[best], rate_hz)) < MAINS_OFF_HZ
+            usual += [top] if top in tops or folded else []
     choice = max(usual or [best], key=lambda k: float(share[k]))
-    others = sorted((k for k in tops if k != choice and abs(hz[k] - hz[choice]) > 0.5), key=lambda k: -float(share[k]))
-    return choice, tuple(float(hz[k]) for k in others[:3])
+    rest = {*tops, best} - {choice}
+    others = sorted((k for k in rest if abs(hz[k] - hz[choice]) > MAINS_OFF_HZ), key=lambda k: -float(share[k]))
+    return choice, tuple(float(hz[k]) for k in others[:2])
+
+
+def _folded(hz: float, rate_hz: float) -> float:
+    """What a frequency looks like at a frame rate."""
+    return abs(hz - rate_hz * round(hz / rate_hz))

@@ -5,6 +5,7 @@ from dataclasses import dataclass, field
 from typing import Literal, get_args
 
 from sweep.cameras import Facts
+from sweep.choose.wording import number
 
 Verdict = Literal["good", "not told", "take care", "not fit"]
 VERDICTS: tuple[Verdict, ...] = get_args(Verdict)
@@ -42,3 +43,8 @@ class Probe:
         """Good where all is; else to take care, or not fit where one finding says so."""
         worst = max((finding.verdict for finding in self.findings), key=VERDICTS.index)
         return "take care" if worst == "not told" else worst
+
+
+def percent(share: float) -> str:
+    """A share in percent, to two digits."""
+    return f"{number(float(f'{100 * share:.2g}'))} %" if share < 10 else "over 1000 %"

@@ -9,8 +9,8 @@ from sweep.choose.wording import listed, number
 from sweep.measure.linear import Floats
 from sweep.probe.bench import Sample
 from sweep.probe.light import AUTOMATICS, MEND_FIRST
-from sweep.probe.pulse import ROLLING_TURNS, Ripple, find_ripple
-from sweep.probe.records import Figures, Finding, Verdict
+from sweep.probe.pulse import ROLLING_TURNS, Ripple, evened, find_ripple
+from sweep.probe.records import Figures, Finding, Verdict, percent
 from sweep.probe.run import Observed
 
 LOST_PERIODS = 1.6
@@ -18,6 +18,7 @@ REPEATED_FIT = 0.34
 SLOWER = 0.9
 SHORT_OF_EXPOSURE = 0.97
 RIPPLE_GOOD = 0.003
+LEAST_LEFT = 0.1
 DRIFT_GOOD_A_MIN = 0.005  # a lamp that has warmed up (common practice, no source)
 
 
@@ -39,7 +40,7 @@ def frames_finding(seen: Observed, frames: int) -> Finding:
     figures: Figures = {"repeated_share": share, "late_frames": lost, "frames_at_rest": len(seen.rest.samples)}
     if share > 0:
         verdict: Verdict = "take care" if share < REPEATED_FIT else "not fit"
-        found = f"{share:.0%} of the frames are the one before, bit for bit"
+        found = f"{percent(share)} of the frames repeat the one before, bit for bit"
         to_do = "They fake low noise. Read the camera at its own rate; no stream must be filled up to another one."
         return Finding("frames", "Frames", verdict, found, to_do, figures)
     if lost > 0.05 * len(intervals):
@@ -55,28 +56,39 @@ def rate_finding(seen: Observed, locked: bool) -> Finding:
     rate_hz = 1 / max(period_s, 1e-6)
     figures: Figures = {"frame_rate_hz": rate_hz, "exposure_ms": seen.rest.exposure_ms}
     found = f"{number(rate_hz)} frames a second"
-    slow = [(s.exposure_ms, float(np.min(periods_s(s.settled)))) for s in seen.slow if s.exposure_ms is not None]
+    slow = [(s.exposure_ms, 1000 * float(np.min(periods_s(s.settled)))) for s in seen.slow if s.exposure_ms is not None]
     if slow and locked:
-        exposure_ms, long_s = max(slow)
-        figures |= {"long_exposure_ms": exposure_ms, "frame_rate_at_long_exposure_hz": 1 / max(long_s, 1e-6)}
-        if 1000 * long_s < SHORT_OF_EXPOSURE * exposure_ms:
-            found += f"; {number(1 / long_s)} at {number(exposure_ms)} ms, which cannot be"
-            to_do = (
-                f"Exposures above {1000 * long_s:.0f} ms are not what they say: keep below, or lower the frame rate."
-            )
+        exposure_ms, long_ms = max(slow)
+        long_hz = 1000 / max(long_ms, 1e-3)
+        figures |= {"long_exposure_ms": exposure_ms, "frame_rate_at_long_exposure_hz": long_hz}
+        if float(np.median([ms / exposed_ms for exposed_ms, ms in slow])) < SHORT_OF_EXPOSURE:
+            found += f"; {number(long_hz)} at {number(exposure_ms)} ms, which cannot be"
+            to_do = f"Exposures above {long_ms:.0f} ms are not what they say: keep below, or lower the frame rate."
             return Finding("rate", "Frame rate", "take care", found, to_do, figures)
-        if long_s > period_s / SLOWER:
-            found += f", {number(1 / long_s)} at {number(exposure_ms)} ms"
+        if long_hz < SLOWER * rate_hz:
+            found += f", {number(long_hz)} at {number(exposure_ms)} ms"
     return Finding("rate", "Frame rate", "good", found, "", figures)
 
 
 def ripple_of(seen: Observed, black_dn: float) -> Ripple | None:
     """The light's ripple, at the short exposure where there is one."""
-    samples = [sample for s in seen.pulses for sample in s.settled]
-    if not samples or seen.pulses[0].exposure_ms == seen.rest.exposure_ms:
-        samples = [*seen.rest.samples, *samples]
-    times = np.array([sample.arrived_s for sample in samples])
-    return find_ripple(times, np.array([sample.bands for sample in samples]) - black_dn)
+    series = list(seen.pulses)
+    if not series or series[0].exposure_ms == seen.rest.exposure_ms:
+        series.insert(0, seen.rest)
+    intervals = periods_s(series[0].settled)
+    period_s = max(float(intervals[intervals < LOST_PERIODS * np.median(intervals)].mean()), 1e-6)
+    time_s = [evened(np.array([sample.arrived_s for sample in s.settled]), period_s) for s in series]
+    bands = [sample.bands - black_dn for s in series for sample in s.settled]
+    return find_ripple(np.concatenate(time_s), np.array(bands), 1 / period_s)
+
+
+def lamp_swing(ripple: Ripple | None, seen: Observed) -> float:
+    """The lamp's own ripple, relative: an exposure evens it out by sinc(frequency x exposure)."""
+    if ripple is None or ripple.amplitude < RIPPLE_GOOD:
+        return 0.0
+    exposure_s = ((seen.pulses[0] if seen.pulses else seen.rest).exposure_ms or 0.0) / 1000
+    left = abs(float(np.sinc((ripple.hz or 0.0) * exposure_s)))
+    return ripple.amplitude / max(left, LEAST_LEFT)
 
 
 def flicker(ripple: Ripple | None, seen: Observed, locked: bool) -> Finding:
@@ -89,24 +101,25 @@ def flicker(ripple: Ripple | None, seen: Observed, locked: bool) -> Finding:
         return Finding("flicker", "Flicker", "not told", "too little light to tell", to_do)
     figures: Figures = {
         "ripple": ripple.amplitude,
+        "lamp_ripple": lamp_swing(ripple, seen),
         "flicker_hz": ripple.hz,
         "stripes": ripple.turns,
         "frame_rate_hz": rate_hz,
         "might_be_hz": None if not ripple.others_hz else listed([number(f) for f in ripple.others_hz]),
     }
     if ripple.amplitude < RIPPLE_GOOD:
-        unseen = "" if seen.pulses else f"; none is seen at multiples of {number(rate_hz)} Hz"
-        found = f"none above {max(ripple.amplitude, 0.0005):.1%} of the light{unseen}"
+        unseen = "" if seen.pulses else f"; multiples of {number(rate_hz)} Hz stay unseen"
+        found = f"none above {percent(max(ripple.amplitude, 0.0005))} of the light{unseen}"
         return Finding("flicker", "Flicker", "good", found, "", figures)
-    swing = f"the light swings by ±{100 * ripple.amplitude:.2g} %"
+    swing = f"the light swings by ±{percent(ripple.amplitude)}"
     if ripple.hz is None:
         to_do = "Look for what changes the light: daylight, a loose lamp, its supply; or automatics in the camera."
         return Finding("flicker", "Flicker", "take care", f"{swing}, in no rhythm", to_do, figures)
-    found = f"{swing}, {ripple.hz:.1f} times a second"
+    found = f"{swing} at {ripple.hz:.1f} Hz"
     if ripple.others_hz:
-        found += f" (or {listed([f'{f:.1f}' for f in ripple.others_hz])}: at this frame rate they look the same)"
+        found += f" ({listed([f'{f:.1f}' for f in ripple.others_hz])} Hz would explain it as well)"
     if ripple.turns > ROLLING_TURNS:
-        found += f", {ripple.turns:.1f} stripes down the picture: the shutter rolls"
+        found += f", in {ripple.turns:.1f} stripes: the shutter rolls"
     to_do = (
         f"Use a steady (direct-current) lamp, or exposures of whole periods of {number(1000 / ripple.hz)} ms: state "
         f"need.flicker_hz = {ripple.hz:.0f}."

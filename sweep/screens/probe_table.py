@@ -8,7 +8,7 @@ from rich.text import Text
 
 from sweep.cameras.present import Present
 from sweep.choose.wording import number
-from sweep.probe import Probe, Verdict
+from sweep.probe import VERDICTS, Probe, Verdict
 
 STYLE: dict[Verdict, str] = {"good": "green", "not told": "cyan", "take care": "yellow", "not fit": "bold red"}
 HEADLINE: dict[Verdict, str] = {
@@ -30,9 +30,9 @@ def probe_table(probe: Probe) -> Iterator[RenderableType]:
         verdict = Text(finding.verdict, style=STYLE[finding.verdict])
         table.add_row(Text(finding.name), Text(finding.found), verdict)
     yield table
-    # What several findings ask for is said once.
+    # The worst first; what several findings ask for is said once.
     work: dict[str, list[str]] = {}
-    for finding in probe.findings:
+    for finding in sorted(probe.findings, key=lambda f: -VERDICTS.index(f.verdict)):
         if finding.to_do:
             work.setdefault(finding.to_do, []).append(finding.name)
     if work:
@@ -62,4 +62,4 @@ def present_table(cameras: Sequence[Present], missing: str) -> Iterator[Renderab
 def _conditions(probe: Probe) -> str:
     at = "" if probe.exposure_ms is None else f" at {number(probe.exposure_ms)} ms"
     device = str(probe.device.get("device") or "camera")
-    return f"{device}: {probe.frames} frames, light tone at {probe.tone:.0%} of full scale{at}."
+    return f"{device}: {probe.frames} frames, light tone at {100 * probe.tone:.0f} % of full scale{at}."
