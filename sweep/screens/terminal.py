@@ -147,7 +147,7 @@ def _gauges(board: Board, seen: Seen, full: bool) -> Iterator[RenderableType]:
         cells[min(BAR - 1, max(0, place))] = block
         yield _row("ring", "".join(cells), f"open <  f/{board.stop:g}  > close")
     note = "clipped" if seen.clipped else f"{seen.tone:.0%} of full scale, wanted {seen.wanted:.0%}"
-    yield _row("light", _bar(seen.tone, seen.wanted, block, thin), f"{note}, at {seen.exposure_ms:.4g} ms")
+    yield _row("light", _bar(seen.tone, seen.wanted, block, thin), f"{note}; {seen.exposure_ms:.4g} ms")
     for score in seen.scores[:6]:
         text = (
             "cannot be read yet" if score.contrast is None else f"contrast {score.contrast:.2f}, needed {board.need:g}"
