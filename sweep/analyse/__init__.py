@@ -33,6 +33,7 @@ def analyse(source: Source, station: Station, progress: Progress | None = None) 
 
     `progress` is told (frames done, frames in all). Raises the reader's and the station's errors.
     """
+    places_of(station, {})  # a station that tells no contrast is refused before its frames are read
     sweep = measure_sweep(source, station, progress)
     light = light_of(sweep)
     readings = [reading_of(s, station) for s in sweep.sightings]

@@ -5,6 +5,7 @@ from collections.abc import Mapping, Sequence
 import numpy as np
 
 from sweep.choose import Place
+from sweep.errors import StationError
 from sweep.measure.linear import Floats
 from sweep.readings import Sweep
 from sweep.result import Reading
@@ -18,7 +19,13 @@ def places_of(station: Station, directions: Mapping[tuple[int, int], float]) -> 
     """The places that the choice must serve: every sharpness patch, and the depths between where a range is stated.
 
     directions: of the frequencies that each patch (target, patch) speaks for, degrees; 0 where none is known.
+    Raises StationError where no patch tells a contrast.
     """
+    if not any(patch.kind in SHARPNESS_KINDS for target in station.targets for patch in target.patches):
+        raise StationError(
+            "The station file has no edge, star or bars among its patches, so nothing tells the contrast at the feature. "
+            "Add at least one."
+        )
     places: list[Place] = []
     for i, target in enumerate(station.targets):
         for j, patch in enumerate(target.patches):

@@ -12,7 +12,7 @@ from pydantic import ValidationError
 from pydantic_core import ErrorDetails
 
 from sweep.errors import StationError
-from sweep.station.records import SHARPNESS_KINDS, TABLES, Station, Table, what_belongs_at
+from sweep.station.records import TABLES, Station, Table, what_belongs_at
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,7 +46,7 @@ def build_station(data: Mapping[str, Any], where: str = "station.toml") -> Stati
         mistakes = [_mistake(e) for e in errors if _key(e["loc"]) not in misspelt or "missing" not in e["type"]]
     mistakes += [*_same_names(data), *_too_few_stops(data), *_no_limit(data)]
     if station is not None:
-        mistakes += [*_behind_the_lens(station), *_nothing_sharp(station)]
+        mistakes += _behind_the_lens(station)
     if mistakes or station is None:
         raise StationError(_message(mistakes, where))
     return station
@@ -92,13 +92,6 @@ def _no_limit(data: Mapping[str, Any]) -> Iterator[_Mistake]:
         yield _Mistake("need.max_exposure_ms", what)
     elif need["speed_mm_s"] == 0:
         yield _Mistake("need.max_exposure_ms", " is missing: speed_mm_s = 0 sets no limit, so state one in ms")
-
-
-def _nothing_sharp(station: Station) -> Iterator[_Mistake]:
-    """A station of which no patch tells a contrast."""
-    if not any(p.kind in SHARPNESS_KINDS for t in station.targets for p in t.patches):
-        what = ": no edge, star or bars among the patches, so nothing tells the feature's contrast; add at least one"
-        yield _Mistake("targets", what)
 
 
 def _behind_the_lens(station: Station) -> Iterator[_Mistake]:

@@ -156,8 +156,6 @@ class Patch(Table):
         return value
 
 
-SHARPNESS_KINDS = ("edge", "star", "bars")
-"""Kinds of patches that tell the contrast at a frequency."""
 _OWN_KEY = {"star": "cycles", "bars": "period_um", "tribar": "group"}
 
 
