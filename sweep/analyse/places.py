@@ -23,8 +23,8 @@ def places_of(station: Station, directions: Mapping[tuple[int, int], float]) -> 
     """
     if not any(patch.kind in SHARPNESS_KINDS for target in station.targets for patch in target.patches):
         raise StationError(
-            "The station file has no edge, star or bars among its patches, so nothing tells the contrast at the feature. "
-            "Add at least one."
+            "The station file has no edge, star or bars among its patches, so nothing tells the contrast at the "
+            "feature. Add at least one."
         )
     places: list[Place] = []
     for i, target in enumerate(station.targets):
