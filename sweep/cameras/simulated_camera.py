@@ -13,9 +13,10 @@ from typing import Self
 import numpy as np
 
 from sweep.cameras import Facts, Grab, Settings
-from sweep.cameras.simulated import Scene, SimulatedStation, bits, exposure_for, full_scale_dn, lamp_at, round_exposure
+from sweep.cameras.simulated import exposure_for, round_exposure
 from sweep.cameras.simulated_lens import SimulatedLens
 from sweep.cameras.simulated_print import MARGIN_PX, Print
+from sweep.cameras.simulated_scene import Scene, SimulatedStation, bits, full_scale_dn, lamp_at
 from sweep.station import Station
 
 SEED = 20

@@ -9,9 +9,10 @@ from typing import Literal
 
 import numpy as np
 
-from sweep.cameras.simulated import SimulatedStation, exposure_for
+from sweep.cameras.simulated import exposure_for
 from sweep.cameras.simulated_lens import SimulatedLens
 from sweep.cameras.simulated_print import Print
+from sweep.cameras.simulated_scene import SimulatedStation
 from sweep.station import Camera, Layout, Lens, Need, Patch, Scene, Station, StationName, Target
 
 Kind = Literal["edge", "star", "bars"]
