@@ -36,7 +36,7 @@ class Sample:
     """What is kept of one frame, in stored codes moved to the low bits; `level` on linear light, black included.
 
     `tone`: code that 2 % of the pixels exceed; `piled`: whether the brightest pixels pile up on one code, `top`;
-    `zero_share`: part of the pixels at code 0; `bands`: (BANDS,) levels of strips of rows, top to bottom;
+    `zero_share`: part of the bright blocks' pixels at code 0; `bands`: (BANDS,) levels of strips of rows from the top;
     `blocks`: (blocks, side, side) of the even blocks; `digest`: of the pixels.
     """
 
@@ -172,13 +172,14 @@ class Bench:
         self.codes += counts
         counts = counts[:: 1 << self.shift] if self.shift else counts
         top, piled = _pile(counts)
+        blocks = self._cut(plane)
         return Sample(
             arrived_s=grab.arrived_s,
-            level=self._level(blocks := self._cut(plane)),
+            level=self._level(blocks),
             tone=float(np.searchsorted(np.cumsum(counts), TONE * thin.size)),
             top=top,
             piled=piled,
-            zero_share=float(counts[0] / thin.size),
+            zero_share=float(np.mean(blocks[self._bright] == 0)) if self._bright.size else 0.0,
             bands=self._scale.linear(_bands(plane[::step, ::step])),
             blocks=blocks,
             digest=hashlib.blake2b(thin.tobytes(), digest_size=16).digest(),

@@ -91,8 +91,8 @@ def response_of(seen: Observed) -> Response | None:
 
 
 def _points(seen: Observed) -> tuple[Floats, Floats]:
-    """Exposures, ms, as read back, in order, and their levels."""
-    series = [s for s in (seen.rest, seen.drop, *seen.ladder, *seen.fine, seen.again) if s is not None]
+    """Exposures, ms, as read back, in order, and their levels; what clips at zero tells nothing."""
+    series = [s for s in (seen.rest, seen.drop, *seen.ladder, *seen.fine, seen.again) if s and not _at_zero(s)]
     points = sorted((s.exposure_ms, _level(s)) for s in series if s.exposure_ms is not None and s.exposure_ms > 0)
     return np.array([e for e, _ in points]), np.array([y for _, y in points])
 
@@ -113,6 +113,10 @@ def coarse_step(seen: Observed) -> float | None:
     jump = float(jumps[jumps > SAME_LIGHT * jumps.max()].min())
     # The shortest exposure is taken to be one step.
     return float(exposure[-1] / (round((level[-1] - level[0]) / jump) + 1))
+
+
+def _at_zero(series: Series) -> bool:
+    return series.settled[-1].zero_share > ZERO_SHARE
 
 
 def _level(series: Series) -> float:
@@ -221,7 +225,7 @@ def exposure(seen: Observed, response: Response | None, coarse_ms: float | None,
         return Finding(
             "exposure", name, "not fit" if coarse_ms > COARSE * used_ms else "take care", found, to_do, figures
         )
-    if response is not None and not hidden:
+    if response is not None and not hidden and not _at_zero(seen.ladder[-1]):
         by_light = response.light_ms(seen.ladder[-1].level)
         figures |= {"least_by_light_ms": by_light, "step_by_light_ms": step_by_light(seen.fine, response)}
         if abs(by_light - least_ms) > max(LIGHT_OFF * least_ms, LEAST_OFF_MS, LIGHT_UNSURE * used_ms):

@@ -15,11 +15,13 @@ from sweep.measure.linear import Floats
 MOST_HZ = 400.0
 LEAST_HZ = 1.0
 PER_RESOLUTION = 5.0
+REFINED = 21
 MAINS_HZ = (100.0, 120.0)
 MAINS_OFF_HZ = 0.5  # mains wander, and so do the clocks of cameras
 AS_GOOD = 1.3  # as much left unexplained, or
 ALL_BUT = 0.02
 FOLDED_SHARE = 0.5
+CLEAR_SHARE = 0.95  # from where on the arrival times are beyond doubt
 FALSE_ALARM = 1e-4
 ROLLING_TURNS = 0.15
 
@@ -67,7 +69,9 @@ def find_ripple(time_s: Floats, bands: Floats, rate_hz: float) -> Ripple | None:
     if total <= 0 or share[best] < _chance_level(n, hz.size):
         return Ripple(rms * math.sqrt(2), None, (), 0.0, rms)
     choice, others = _choose(hz, share, best, rate_hz)
-    turn = 2 * math.pi * hz[choice] * time_s
+    fine = hz[choice] + np.linspace(-1.0, 1.0, REFINED) / (PER_RESOLUTION * span_s)
+    best_hz = float(fine[np.argmax(_explained(time_s, off, fine, base))])
+    turn = 2 * math.pi * best_hz * time_s
     waves = np.column_stack([np.cos(turn), np.sin(turn)])
     waves = waves - base @ (base.T @ waves)
     part = np.linalg.lstsq(waves, off, rcond=None)[0]
@@ -77,7 +81,7 @@ def find_ripple(time_s: Floats, bands: Floats, rate_hz: float) -> Ripple | None:
     slope = float(np.polynomial.polynomial.polyfit(np.arange(strips), phase, 1)[1]) if strips > 2 else 0.0
     return Ripple(
         amplitude=float(np.median(np.hypot(part[0], part[1]))),
-        hz=float(hz[choice]),
+        hz=best_hz,
         others_hz=others,
         turns=abs(slope) * strips / (2 * math.pi),
         noise=float(np.sqrt(np.mean(rest**2))),
@@ -124,7 +128,7 @@ def _choose(hz: Floats, share: Floats, best: int, rate_hz: float) -> tuple[int, 
         near = np.flatnonzero(np.abs(hz - mains) < MAINS_OFF_HZ)
         if near.size and share[top := int(near[np.argmax(share[near])])] > FOLDED_SHARE * share[best]:
             folded = abs(_folded(hz[top], rate_hz) - _folded(hz[best], rate_hz)) < MAINS_OFF_HZ
-            usual += [top] if top in tops or folded else []
+            usual += [top] if top in tops or (folded and share[best] < CLEAR_SHARE) else []
     choice = max(usual or [best], key=lambda k: float(share[k]))
     rest = {*tops, best} - {choice}
     others = sorted((k for k in rest if abs(hz[k] - hz[choice]) > MAINS_OFF_HZ), key=lambda k: -float(share[k]))
