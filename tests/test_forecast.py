@@ -6,8 +6,10 @@ import numpy as np
 import pytest
 from lenses import STOPS, TRUTH, true_contrast
 from numpy.testing import assert_allclose
-from sweeps import a_lane
+from references import diffraction_mtf
+from sweeps import a_lane, a_truth
 
+from sweep.cameras.simulated import station_truth
 from sweep.errors import StationError
 from sweep.forecast import CARRIED_FAR_SHARE, CARRIED_SHARE, forecast
 from sweep.lens import Bench
@@ -169,3 +171,56 @@ def test_an_earlier_result_that_says_less_is_filled_up():
 def test_another_lens_is_refused(earlier, told):
     with pytest.raises(StationError, match=told):
         forecast(a_lane(), earlier)
+
+
+# A usual lens. What the trade expects of one is in test_analyse.py, beside a sweep of one.
+
+
+def worst(result):
+    """Worst contrast by stop."""
+    return {s.stop: s.worst_contrast for s in result.stops}
+
+
+def test_stopped_down_it_is_like_any_lens():
+    # From f/4 on lens errors hardly count: what is left is geometry, diffraction and pixels.
+    station = a_lane()
+    sim = a_truth(station, lens=replace(TRUTH, focus_offset_mm=0.0))
+    truth = {t.stop: t.worst_contrast for t in station_truth(station, sim)}
+    for stop, contrast in worst(forecast(station)).items():
+        if stop >= 4.0:
+            assert_allclose(contrast, truth[stop], atol=0.02)
+
+
+def test_in_focus_at_a_small_stop_only_diffraction_and_the_sensor_are_left():
+    # The closed form at s = wavelength N (1 + m) v / pitch (Goodman, 6.4.2), the pixel, a blur of 0.3 px.
+    v, station = 58.0 / 360.0, a_lane((1.4, 8.0, 11.0), (0.0,))
+    s = 0.53 * np.array([8.0, 11.0]) * (1.0 + 3.45 / 58.0) * v / 3.45
+    expected = diffraction_mtf(s) * np.sinc(v) * np.exp(-2.0 * (np.pi * 0.3 * v) ** 2)
+    found = worst(forecast(station))
+    assert_allclose([found[8.0], found[11.0]], expected, rtol=0.01)
+
+
+def test_what_is_assumed_is_said():
+    told = reasons(a_lane())
+    assert "Assumed: a usual lens with 1.2 waves" in told
+    # light goes as 1 / N^2: (8 / 1.4)^2 = 32.7
+    assert "f/8 needs 33 times that of f/1.4" in told
+
+
+def test_the_need_is_met_by_contrast_alone():
+    easy, hard = forecast(a_lane(contrast=0.2)).recommendation, forecast(a_lane(contrast=0.9)).recommendation
+    assert easy.meets_need
+    assert easy.shortfalls == ()
+    assert not hard.meets_need
+    assert "0.9" in " ".join(hard.shortfalls)
+
+
+def test_a_feature_beyond_nyquist():
+    found = forecast(a_lane(feature_um=50.0))
+    assert not found.recommendation.meets_need
+    assert all("beyond-nyquist" in s.why_not for s in found.stops)
+
+
+def test_a_depth_range_counts_like_targets():
+    near, far = forecast(a_lane(depths=(0.0,))), forecast(a_lane(depths=(0.0,), depth_range_mm=[0.0, 30.0]))
+    assert worst(far)[1.4] < 0.1 < worst(near)[1.4]
