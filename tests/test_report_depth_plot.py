@@ -16,7 +16,7 @@ from numpy.testing import assert_allclose
 from results import STOPS, a_result, a_station
 from scipy.stats import norm
 
-from sweep.report.depth_plot import depth_svg, depths_explained, draw_depths, usable_text
+from sweep.report.depth_plot import _between_marks, depth_svg, depths_explained, draw_depths, usable_text
 from sweep.result import DepthMap, Note, Result
 from sweep.station import Station
 
@@ -85,6 +85,20 @@ def test_steps_of_grey_hold_the_contrast_and_are_few(name: str) -> None:
     assert 1 <= len(greys) <= 7
     assert all(r == g == b for r, g, b in greys)
     assert all(b[0] - a[0] > 0.05 for a, b in pairwise(greys))
+
+
+def test_what_is_lost_between_the_stops_is_never_below_nothing() -> None:
+    # Rounding in the cubics: below 0 there is no step of grey, and the picture would be blank there.
+    rng = np.random.default_rng(1)
+    lost_from = rng.integers(3, 8, 200)[:, None]
+    falling = np.sort(rng.random((200, len(STOPS))), axis=1)[:, ::-1] * (np.arange(len(STOPS)) < lost_from)
+    found = _map(a_result(a_station()))
+    rows = [
+        replace(row, contrast=tuple(column), contrast_u=(0.0,) * 200)
+        for row, column in zip(found.stops, falling.T, strict=True)
+    ]
+    _, contrast, _ = _between_marks(rows, [1.2, *STOPS[1:], 19.0])
+    assert contrast.min() == 0.0
 
 
 def test_the_bold_border_is_where_the_need_is_sure() -> None:

@@ -27,8 +27,7 @@ Floats = NDArray[np.float64]
 ROSE = 5.0
 DEPTHS = 25
 MARGIN = 0.25  # of the span of the depths in question, mapped beyond them on both sides
-WIDEST_MARGIN = 1.0  # likewise, looked at for the ends of the usable range: farther than that no sweep speaks for
-ALIKE = 0.25  # of the defocus that takes all contrast at the middle stop: depths that lie closer count as one
+ALIKE = 0.02  # of the defocus that takes all contrast at the middle stop: depths that lie closer count as one
 NEAREST = -0.9  # of the way from the plane of focus to the entrance pupil
 _STEP = 0.05  # of the defocus that takes all contrast: the grid of the usable range
 _FREQUENCIES = np.geomspace(0.005, NYQUIST_CY_PX, 64)  # cycles per pixel; the largest feature is 100 pixels wide
@@ -41,10 +40,10 @@ def depth_map(station: Station, stops: Sequence[Stop], lens: DepthView, places: 
     one. The depths are those of the targets, or `need.depth_range_mm`, and a quarter of their span beyond; where all
     are alike, as far as blur alone takes to lose the feature at the middle stop.
     """
-    depths = np.linspace(*_around(station, stops, MARGIN), DEPTHS)
+    mapped_mm, searched_mm = _around(station, stops)
+    depths = np.linspace(*mapped_mm, DEPTHS)
     mapped = [_place(station, d) for d in depths]
     on_targets = [p for p in places if p.target >= 0]
-    widest = _around(station, stops, WIDEST_MARGIN)
     rows = []
     for k, stop in enumerate(stops):
         used = _Used(station, lens, k, stop)
@@ -53,7 +52,7 @@ def depth_map(station: Station, stops: Sequence[Stop], lens: DepthView, places: 
         rows.append(
             DepthStop(
                 stop=stop.stop,
-                usable_mm=used.usable_mm(widest),
+                usable_mm=used.usable_mm(searched_mm),
                 contrast=tuple(map(float, contrast)),
                 contrast_u=tuple(map(float, u)),
                 smallest_detected_um=tuple(map(_known, detected)),
@@ -120,12 +119,12 @@ class _Used:
             found.append(TargetDetail(name, _known(detected[mine].max()), _known(at_need[mine].max())))
         return tuple(found)
 
-    def usable_mm(self, widest: tuple[float, float]) -> tuple[float | None, float | None] | None:
+    def usable_mm(self, searched_mm: tuple[float, float]) -> tuple[float | None, float | None] | None:
         """The depths about the best one at which the contrast need is kept, with the wanted confidence.
 
-        An end is None where the need is still kept at the end of `widest` (mm).
+        An end is None where the need is still kept at the end of what is searched.
         """
-        low, high = widest
+        low, high = searched_mm
         steps = math.ceil((high - low) / (_STEP * _lost_in_mm(self.station, self.stop)))
         depths = np.linspace(low, high, max(steps, DEPTHS) + 1)
         places = [_place(self.station, d) for d in depths]
@@ -184,13 +183,17 @@ def _about_the_best(depths: Floats, contrast: Floats, wanted: float) -> tuple[fl
     return ends[0], ends[1]
 
 
-def _around(station: Station, stops: Sequence[Stop], margin: float) -> tuple[float, float]:
-    """The depths in question and `margin` of their span beyond on both sides, no nearer than the lens allows (mm)."""
+def _around(station: Station, stops: Sequence[Stop]) -> tuple[tuple[float, float], tuple[float, float]]:
+    """The depths to be mapped, and those searched for the ends of what is usable; no nearer than the lens allows (mm).
+
+    No sweep speaks for depths far outside of its own.
+    """
     depths = station.need.depth_range_mm or [t.depth_mm for t in station.targets]
     low, high = min(depths), max(depths)
-    lost = _lost_in_mm(station, stops[len(stops) // 2])
-    more = margin * (high - low) if high - low > ALIKE * lost else lost
-    return max(low - more, min(low, NEAREST * station.pupil_distance_mm)), high + more
+    span, lost = high - low, _lost_in_mm(station, stops[len(stops) // 2])
+    nearest = min(low, NEAREST * station.pupil_distance_mm)
+    mapped, searched = (MARGIN * span if span > ALIKE * lost else lost), max(span, lost)
+    return (max(low - mapped, nearest), high + mapped), (max(low - searched, nearest), high + searched)
 
 
 def _lost_in_mm(station: Station, stop: Stop) -> float:

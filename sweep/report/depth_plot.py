@@ -153,7 +153,7 @@ def _between_marks(rows: Sequence[DepthStop], edges: Sequence[float]) -> tuple[P
         np.asarray(PchipInterpolator(marks, np.array(values))(inside)).T
         for values in ([row.contrast for row in rows], [row.contrast_u for row in rows])
     )
-    return x, contrast, u
+    return x, np.maximum(contrast, 0.0), u  # rounding may leave a lost contrast below 0, and so without a step
 
 
 def _levels(highest: float) -> list[float]:
