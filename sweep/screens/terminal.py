@@ -99,7 +99,8 @@ class Terminal:
                 lines = [f"[{number}/{of}] {self._board.do()}."]
             case StepDone(stop=stop, exposure_ms=exposure_ms, tone=tone):
                 what = "Dark frames" if stop is None else f"f/{stop:g}"
-                lines = [f"{what} taken: {exposure_ms:g} ms, light tone at {tone:.0%} of full scale."]
+                light = "" if stop is None else f", light tone at {tone:.0%} of full scale"
+                lines = [f"{what} taken: {exposure_ms:g} ms{light}."]
             case Trouble(text=text):
                 lines = [text]
             case Finished(folder=folder, taken=taken):
