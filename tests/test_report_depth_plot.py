@@ -33,6 +33,7 @@ def _cases() -> dict[str, tuple[Result, Station]]:
         "ruled out": a_station(max_exposure_ms=0.01),
         "names": a_station([("Förderband-Oberfläche mit Kratzern und Öl", 3.0), ("$x_1$ & <b>", 0.0)]),
         "alike": a_station([("left", 1.0), ("right", 1.0), ("top", 1.0)]),
+        "shallow": a_station([("low", -0.61), ("middle", 0.03), ("high", 0.47)]),
         "depths": a_station(depth_range_mm=[-9.0, 12.0]),
     }
     found = {name: (a_result(station), station) for name, station in stations.items()}

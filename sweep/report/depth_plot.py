@@ -78,8 +78,8 @@ def _figure(found: DepthMap, result: Result, station: Station) -> Figure:
     grid = figure.add_gridspec(
         2,
         1,
-        left=0.095,
-        right=0.77,
+        left=0.115,
+        right=0.785,
         top=0.985,
         bottom=0.105 if len(marks) <= MANY else 0.14,
         hspace=0.0,
@@ -129,6 +129,7 @@ def _contrast(
     need = station.need
     axes.set_ylim(depths_mm[-1], depths_mm[0])  # nearer the camera on top
     axes.yaxis.set_major_locator(MaxNLocator(8, prune="both"))
+    axes.yaxis.set_label_coords(-0.085, 0.5)  # room for ticks of two decimals
     axes.set_ylabel("Depth from the plane of focus (mm)\nfarther \N{LEFTWARDS ARROW}   \N{RIGHTWARDS ARROW} nearer")
     x, contrast, u = _between_marks(rows, edges)
     levels = _levels(float(contrast.max()))
