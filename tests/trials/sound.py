@@ -83,7 +83,7 @@ def tables(rows: pd.DataFrame) -> str:
     limit = 100 * (1 - 0.025 ** (1 / len(rows)))
     return "\n\n".join(
         [
-            table(["warning", "sweeps with it", "of", "% (95 % limits)"], seen),
+            table(["warning", "sweeps with it", "of", "% (95 % limits)"], seen or [["none", 0, len(rows), ""]]),
             f"Never, in {len(rows)} sweeps (95 % limits 0 to {limit:.2g} %): {', '.join(never)}.",
             table(["sweeps", "count", "% with any false warning (95 % limits)", "middle reduced chi-square"], groups),
             f"Readings refused: {share(refused, read)} % of {read}.",
