@@ -491,15 +491,20 @@ def test_the_table_fits_a_terminal_and_says_what_to_do_once():
     for finding in found.findings:
         assert finding.name in text
         assert finding.verdict in text
+    assert len(text.splitlines()) < 24
     assert text.startswith("This camera is not fit to measure as it is.")
     flat = " ".join(text.split())
-    assert flat.count("Mend that first, then probe again.") == 1
-    assert flat.index("Switch off automatic exposure") < flat.index("Mend that first")
+    assert flat.count("hidden by the automatics") == 1
+    assert "Mend" not in flat
+    assert flat.index("hidden by the automatics") < flat.index("Switch off automatic exposure")
 
 
-def test_a_sound_camera_fits_into_24_rows():
+def test_a_sound_camera_fits_into_24_rows_and_the_manual_has_all_its_codes():
     at = station()
-    assert len(printed(probe_table(probe(simulated(at), at.camera))).splitlines()) < 24
+    found = probe(simulated(at), at.camera)
+    assert len(printed(probe_table(found)).splitlines()) < 24
+    manual = (HERE.parent / "docs" / "probe.md").read_text(encoding="utf-8")
+    assert all(f"| `{code}` |" in manual for code in ["light", *(finding.code for finding in found.findings)])
 
 
 @pytest.mark.parametrize(("around", "status"), [(Around, 0), (Deaf, 1), (lambda c: Dying(c, 5), 3)])

@@ -47,25 +47,26 @@ def _judged(seen: Observed, bench: Bench, stated: Stated, edges: Sequence[Region
     pulsing = ripple is not None and ripple.amplitude > rhythm.RIPPLE_GOOD
     locked = light.automatics(seen, response, pulsing)
     is_locked = locked.verdict != "not fit"
-    hidden = light.AUTOMATICS if not is_locked else "exposures that are not what they say" if coarse_ms else ""
-    straight = light.linearity(response, hidden, rhythm.lamp_swing(ripple, seen))
-    bent = hidden or ("the bent response" if straight.verdict == "not fit" else "")
+    spoilt = light.AUTOMATICS if not is_locked else light.EXPOSURES if coarse_ms is not None else ""
+    straight = light.linearity(seen, response, spoilt, rhythm.lamp_swing(ripple, seen))
+    spoilt = spoilt or ("the bent response" if straight.verdict == "not fit" else "")
     striped = ripple is not None and pulsing and ripple.turns > ROLLING_TURNS
-    still = is_locked and not striped
-    processed = picture.processing(picture.processing_of(seen, bench, stated, edges), stated, still)
-    noisy = bent or ("the processing" if processed.verdict == "not fit" else "")
+    unrest = light.AUTOMATICS if not is_locked else rhythm.PULSES if striped else ""
+    processed = picture.processing(picture.processing_of(seen, bench, stated, edges), stated, unrest)
+    transfer = picture.transfer_of(seen, bench, black_dn)
+    unsound = spoilt or ("the processing" if processed.verdict == "not fit" else "")
     return [
         locked,
         straight,
-        light.black(seen, response, stated, bent),
-        light.exposure(seen, response, coarse_ms if is_locked else None, bent),
-        *([light.gain(seen, response, bent), light.settling(seen, is_locked)] if seen.gains else []),
+        light.black(seen, response, stated, spoilt),
+        light.exposure(seen, response, coarse_ms if is_locked else None, spoilt),
+        *([light.gain(seen, response, spoilt), light.settling(seen, is_locked)] if seen.gains else []),
         rhythm.frames_finding(seen, bench.frames),
         rhythm.rate_finding(seen, is_locked),
         rhythm.flicker(ripple, seen, is_locked),
         rhythm.drift(seen, pulsing, is_locked),
         processed,
-        picture.noise(picture.transfer_of(seen, bench, black_dn), seen, noisy, black_dn),
+        picture.noise(transfer, seen, unsound, black_dn),
     ]
 
 

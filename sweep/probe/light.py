@@ -15,7 +15,7 @@ import numpy as np
 from sweep.choose.wording import number
 from sweep.measure.linear import Floats
 from sweep.probe.bench import Series
-from sweep.probe.records import Figures, Finding, Verdict, percent
+from sweep.probe.records import Figures, Finding, Verdict, hidden, percent
 from sweep.probe.run import SETTLE_MOST, Observed
 from sweep.station import Camera as Stated
 
@@ -34,11 +34,12 @@ LEAST_OFF_MS = 0.001
 LIGHT_UNSURE = 0.001
 ZERO_SHARE = 0.05
 AUTOMATICS = "the automatics"
+EXPOSURES = "exposures that are not what they say"
+DARK_LEVELS = "dark levels that are cut off at 0"
 BY_HAND = (
     "Exposure and gain cannot be set from here: set and lock them on the camera, everything automatic off. Half the "
     "exposure must give half the level above black."
 )
-MEND_FIRST = "Mend that first, then probe again."
 COARSE = 0.1
 LIGHT_OFF = 0.1
 SAME_LIGHT = 0.1
@@ -142,7 +143,7 @@ def automatics(seen: Observed, response: Response | None, rippling: bool) -> Fin
         verdict: Verdict = "take care" if drift < DRIFT_FIT else "not fit"
         to_do = f"{off} If all is off: is the lamp warm, does anything move?"
         return Finding("automatics", "Automatics", verdict, stays, to_do, figures)
-    if response is None:
+    if not seen.settable:
         return Finding("automatics", "Automatics", "not told", stays, BY_HAND, figures)
     return Finding("automatics", "Automatics", "good", f"none seen; {stays}", "", figures)
 
@@ -163,13 +164,13 @@ def _comes_back(seen: Observed) -> float:
     return float((levels[-3:].mean() - levels[lowest]) / fall) if fall > 0.05 * seen.rest.level else 0.0
 
 
-def linearity(response: Response | None, hidden: str, ripple: float) -> Finding:
-    """Is the level, less black, proportional to the exposure? `hidden`: what keeps that from being told."""
+def linearity(seen: Observed, response: Response | None, spoilt: str, ripple: float) -> Finding:
+    """Is the level, less black, proportional to the exposure? `spoilt`: what keeps that from being told."""
     name = "Linearity"
-    if response is None:
+    if not seen.settable:
         return Finding("linearity", name, "not told", "needs several exposures", BY_HAND)
-    if hidden:
-        return Finding("linearity", name, "not told", f"hidden by {hidden}", MEND_FIRST)
+    if spoilt or response is None:
+        return hidden("linearity", name, spoilt or DARK_LEVELS)
     figures: Figures = {
         "deviation": response.deviation,
         "deviation_at_ms": response.at_ms,
@@ -189,9 +190,9 @@ def linearity(response: Response | None, hidden: str, ripple: float) -> Finding:
     return Finding("linearity", name, verdict, found, to_do, figures)
 
 
-def black(seen: Observed, response: Response | None, stated: Stated, hidden: str) -> Finding | None:
+def black(seen: Observed, response: Response | None, stated: Stated, spoilt: str) -> Finding | None:
     """The level without light, and whether it clips at zero; None where it cannot be told from the exposures."""
-    if response is None or hidden or stated.response != "linear":
+    if response is None or spoilt or stated.response != "linear":
         return None
     darkest = min(seen.ladder, key=lambda s: s.exposure_ms or 0.0)
     zero = max(sample.zero_share for sample in darkest.settled)
@@ -205,7 +206,7 @@ def black(seen: Observed, response: Response | None, stated: Stated, hidden: str
     return Finding("black", "Black level", "good", found, "", figures)
 
 
-def exposure(seen: Observed, response: Response | None, coarse_ms: float | None, hidden: str) -> Finding:
+def exposure(seen: Observed, response: Response | None, coarse_ms: float | None, spoilt: str) -> Finding:
     """Which exposures can be set, and are they what the light says?"""
     name = "Exposure"
     if not seen.settable:
@@ -225,7 +226,7 @@ def exposure(seen: Observed, response: Response | None, coarse_ms: float | None,
         return Finding(
             "exposure", name, "not fit" if coarse_ms > COARSE * used_ms else "take care", found, to_do, figures
         )
-    if response is not None and not hidden and not _at_zero(seen.ladder[-1]):
+    if response is not None and not spoilt and not _at_zero(seen.ladder[-1]):
         by_light = response.light_ms(seen.ladder[-1].level)
         figures |= {"least_by_light_ms": by_light, "step_by_light_ms": step_by_light(seen.fine, response)}
         if abs(by_light - least_ms) > max(LIGHT_OFF * least_ms, LEAST_OFF_MS, LIGHT_UNSURE * used_ms):
@@ -262,14 +263,14 @@ def step_by_light(fine: Sequence[Series], response: Response) -> float | None:
     return min(jumps) if jumps else None
 
 
-def gain(seen: Observed, response: Response | None, hidden: str) -> Finding:
+def gain(seen: Observed, response: Response | None, spoilt: str) -> Finding:
     """Does a gain that is asked for in dB give as much light?"""
     name = "Gain"
     base, *others = seen.gains
     if all(s.gain_db is None or abs(s.gain_db - (base.gain_db or 0.0)) < 0.01 for s in others):
         return Finding("gain", name, "good", "cannot be set in dB: left at its least", "", {"settable": 0})
-    if response is None or hidden:
-        return Finding("gain", name, "not told", f"hidden by {hidden}", MEND_FIRST)
+    if response is None or spoilt:
+        return hidden("gain", name, spoilt or DARK_LEVELS)
     low = base.level - response.black_dn
     figures: Figures = {"settable": 1}
     told, off = [], 0.0
@@ -293,7 +294,7 @@ def settling(seen: Observed, locked: bool) -> Finding:
     period_ms = 1000 * float(np.median(np.diff([s.arrived_s for s in seen.rest.samples])))
     figures: Figures = {"settling_frames": frames, "settling_ms": frames * period_ms}
     if not locked:
-        return Finding("settling", "Settling", "not told", f"hidden by {AUTOMATICS}", MEND_FIRST, figures)
+        return hidden("settling", "Settling", AUTOMATICS, figures)
     if frames > SETTLE_MOST:
         to_do = "The level goes on changing after an exposure was set: look for smoothing over frames or automatics."
         return Finding("settling", "Settling", "not fit", f"not within {SETTLE_MOST} frames", to_do, figures)

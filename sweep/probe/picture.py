@@ -16,8 +16,7 @@ from sweep.measure.linear import Floats, sharpness_sites
 from sweep.measure.noise import QUANTISATION_VARIANCE, NoisePoint, PhotonTransfer, area_noise, fit_photon_transfer
 from sweep.notices import BENT_TRANSFER, CERTAIN, CORRELATION, OVERSHOOT
 from sweep.probe.bench import Bench, Series
-from sweep.probe.light import MEND_FIRST
-from sweep.probe.records import Figures, Finding, percent
+from sweep.probe.records import Figures, Finding, hidden, percent
 from sweep.probe.run import Observed
 from sweep.station import Camera as Stated
 from sweep.station import Region
@@ -111,8 +110,8 @@ def processing_of(seen: Observed, bench: Bench, stated: Stated, edges: Sequence[
     return Processing(shared, over_time, overshoot, len(overshoots), compressed)
 
 
-def processing(found: Processing, stated: Stated, still: bool) -> Finding:
-    """Does the camera sharpen, smooth or compress? Unless the picture is `still`, its noise cannot tell."""
+def processing(found: Processing, stated: Stated, unrest: str) -> Finding:
+    """Does the camera sharpen, smooth or compress? `unrest`: what keeps the noise from telling."""
     figures: Figures = {
         "noise_shared_by_neighbours": found.neighbours,
         "noise_shared_by_frames": found.frames,
@@ -120,17 +119,17 @@ def processing(found: Processing, stated: Stated, still: bool) -> Finding:
         "edges_seen": found.edges,
     }
     told = []
-    if abs(found.neighbours) > CORRELATION and still:
+    if abs(found.neighbours) > CORRELATION and not unrest:
         told.append(f"neighbours share noise ({found.neighbours:+.2f})")
-    if found.frames > SHARED_OVER_TIME and still:
+    if found.frames > SHARED_OVER_TIME and not unrest:
         told.append(f"frames share noise ({found.frames:+.2f})")
     if found.overshoot is not None and found.overshoot > OVERSHOOT:
         told.append(f"edges overshoot by {percent(found.overshoot)}")
     if found.compressed:
         told.append(f"compressed ({found.compressed})")
     if not told:
-        if not still:
-            return Finding("processing", "Processing", "not told", "hidden by changing light", MEND_FIRST, figures)
+        if unrest:
+            return hidden("processing", "Processing", unrest, figures)
         edges = (
             "too few edges for overshoot"
             if found.overshoot is None
@@ -167,11 +166,11 @@ def transfer_of(seen: Observed, bench: Bench, black_dn: float) -> PhotonTransfer
     return fit_photon_transfer(points)
 
 
-def noise(transfer: PhotonTransfer | None, seen: Observed, hidden: str, black_dn: float) -> Finding:
+def noise(transfer: PhotonTransfer | None, seen: Observed, spoilt: str, black_dn: float) -> Finding:
     """Temporal noise, and electrons for each DN where the noise tells them."""
     name = "Noise"
-    if hidden:
-        return Finding("noise", name, "not told", f"hidden by {hidden}", MEND_FIRST)
+    if spoilt:
+        return hidden("noise", name, spoilt)
     if transfer is None:
         to_do = "Probe again with an even tone in view, and with more light."
         return Finding("noise", name, "not told", "hidden by rounding, or no even area in view", to_do)

@@ -18,7 +18,10 @@ Tell = Callable[[str, float], None]
 
 @dataclass(frozen=True, slots=True)
 class Finding:
-    """The answer to one question. `found` says it in words, `to_do` what follows, empty where nothing does."""
+    """The answer to one question. `found` says it in words, `to_do` what follows, empty where nothing does.
+
+    `hidden_by`: what keeps the question from being answered, where another finding names it.
+    """
 
     code: str
     name: str
@@ -26,6 +29,12 @@ class Finding:
     found: str
     to_do: str = ""
     figures: Figures = field(default_factory=dict)
+    hidden_by: str = ""
+
+
+def hidden(code: str, name: str, by: str, figures: Figures | None = None) -> Finding:
+    """A question that waits for another one's mending."""
+    return Finding(code, name, "not told", f"hidden by {by}", f"Mend {by} first.", figures or {}, by)
 
 
 @dataclass(frozen=True, slots=True)

@@ -8,9 +8,9 @@ import numpy as np
 from sweep.choose.wording import listed, number
 from sweep.measure.linear import Floats
 from sweep.probe.bench import Sample
-from sweep.probe.light import AUTOMATICS, MEND_FIRST
+from sweep.probe.light import AUTOMATICS
 from sweep.probe.pulse import ROLLING_TURNS, Ripple, evened, find_ripple
-from sweep.probe.records import Figures, Finding, Verdict, percent
+from sweep.probe.records import Figures, Finding, Verdict, hidden, percent
 from sweep.probe.run import Observed
 
 LOST_PERIODS = 1.6
@@ -18,6 +18,7 @@ REPEATED_FIT = 0.34
 SLOWER = 0.9
 SHORT_OF_EXPOSURE = 0.97
 RIPPLE_GOOD = 0.003
+PULSES = "the pulsing light"
 LEAST_LEFT = 0.1
 DRIFT_GOOD_A_MIN = 0.005  # a lamp that has warmed up (common practice, no source)
 
@@ -94,7 +95,7 @@ def lamp_swing(ripple: Ripple | None, seen: Observed) -> float:
 def flicker(ripple: Ripple | None, seen: Observed, locked: bool) -> Finding:
     """Does the lamp pulse, and how often a second?"""
     if not locked:
-        return Finding("flicker", "Flicker", "not told", f"hidden by {AUTOMATICS}", MEND_FIRST)
+        return hidden("flicker", "Flicker", AUTOMATICS)
     rate_hz = 1 / max(float(np.median(periods_s(seen.rest.samples))), 1e-6)
     if ripple is None:
         to_do = "Give more light, then probe again."
@@ -142,11 +143,10 @@ def drift(seen: Observed, pulsing: bool, locked: bool) -> Finding:
     figures: Figures = {"drift_a_minute": a_min, "drift_a_minute_u": u, "over_s": span_s}
     found = f"{100 * a_min:+.2g} ± {200 * u:.1g} % a minute, over {span_s:.0f} s"
     if not locked:
-        return Finding("drift", "Drift", "not told", f"hidden by {AUTOMATICS}", MEND_FIRST, figures)
+        return hidden("drift", "Drift", AUTOMATICS, figures)
     if abs(a_min) - 2 * u <= DRIFT_GOOD_A_MIN:
         return Finding("drift", "Drift", "good", found, "", figures)
     if pulsing:
-        to_do = "Probe again in light that does not pulse."
-        return Finding("drift", "Drift", "not told", "hidden by the pulsing light", to_do, figures)
+        return hidden("drift", "Drift", PULSES, figures)
     to_do = "Let lamp and camera warm up for 20 to 30 minutes, then probe again; is daylight kept out?"
     return Finding("drift", "Drift", "take care", found, to_do, figures)

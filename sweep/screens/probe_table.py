@@ -26,14 +26,27 @@ def probe_table(probe: Probe) -> Iterator[RenderableType]:
     table.add_column("asked", no_wrap=True)
     table.add_column("found", overflow="fold")
     table.add_column("verdict", no_wrap=True)
+    waiting: dict[str, list[str]] = {}
     for finding in probe.findings:
-        verdict = Text(finding.verdict, style=STYLE[finding.verdict])
-        table.add_row(Text(finding.name), Text(finding.found), verdict)
+        if finding.hidden_by:
+            waiting.setdefault(finding.hidden_by, []).append(finding.name)
+        else:
+            table.add_row(Text(finding.name), Text(finding.found), _verdict(finding.verdict))
+    for by, names in waiting.items():
+        table.add_row(Text("The rest"), Text(f"{', '.join(names)}: hidden by {by}"), _verdict("not told"))
     yield table
-    # The worst first; what several findings ask for is said once.
+    yield from _work(probe)
+
+
+def _verdict(verdict: Verdict) -> Text:
+    return Text(verdict, style=STYLE[verdict])
+
+
+def _work(probe: Probe) -> Iterator[RenderableType]:
+    """What to do, the worst first; what several findings ask for is said once."""
     work: dict[str, list[str]] = {}
     for finding in sorted(probe.findings, key=lambda f: -VERDICTS.index(f.verdict)):
-        if finding.to_do:
+        if finding.to_do and not finding.hidden_by:
             work.setdefault(finding.to_do, []).append(finding.name)
     if work:
         yield Text("What to do", style="bold")
