@@ -148,4 +148,12 @@ def _waves(bench: Bench, pupil: Pupil, v_cy_px: Floats) -> tuple[Floats, Floats,
     per_nm = (pupil.f_number * bench.working / (bench.pixel_pitch_um * 1e3))[:, None]
     s = v_cy_px * per_nm * bench.wavelengths_nm[:, None, None]
     w020 = (pupil.w020[:, None] + bench.spread[:, None, None] * pupil.colour[:, None]) * ratio
-    return s, w020, pupil.w040[:, None] * ratio, pupil.w060[:, None] * ratio
+    return s, _held(w020), _held(pupil.w040[:, None] * ratio), _held(pupil.w060[:, None] * ratio)
+
+
+MOST_WAVES = 40.0
+"""Beyond it nothing is left of any contrast, and the time of the quadrature grows with the waves."""
+
+
+def _held(waves: Floats) -> Floats:
+    return np.clip(waves, -MOST_WAVES, MOST_WAVES)
