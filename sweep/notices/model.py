@@ -3,7 +3,7 @@
 import numpy as np
 
 from sweep.fit import LensFit
-from sweep.notices.thresholds import CERTAIN, FOCUS_STEP_WAVES, MISFIT_CHI2, MISFIT_CONTRAST
+from sweep.notices.thresholds import CERTAIN, FOCUS_STEP_WAVES, MISFIT_CHI2, MISFIT_CONTRAST, SLIGHT_MISFIT
 from sweep.notices.wording import mark
 from sweep.outlook import Discrepancy
 from sweep.readings import Sweep
@@ -26,7 +26,7 @@ def model_notices(fit: LensFit | None, discrepancy: Discrepancy, sweep: Sweep, s
             )
         ]
     off = float(np.sqrt(np.mean(discrepancy.deviation**2))) if discrepancy.readings else 0.0
-    if off < MISFIT_CONTRAST and fit.reduced_chi2 < MISFIT_CHI2:
+    if off < MISFIT_CONTRAST and (fit.reduced_chi2 < MISFIT_CHI2 or off < SLIGHT_MISFIT):
         return []
     worst = int(np.argmax(fit.misfit))
     view = fit.views[worst]
