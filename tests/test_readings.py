@@ -8,13 +8,14 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from sweeps import a_lane, a_sweep, a_truth, shuffled, with_frames, with_shots
+from sweeps import a_lane, a_sweep, a_truth, shuffled, with_frames, with_notes, with_shots
 
 from sweep.cameras.simulated import RenderedSweep, Scene, exposure_for, station_truth
 from sweep.errors import SourceError
 from sweep.figures import reading_of
 from sweep.frames import Shot
 from sweep.readings import measure_sweep
+from sweep.result import Note
 
 TWO = {"stops": (2.8, 5.6), "depths": (4.0, -4.0)}
 
@@ -200,6 +201,37 @@ def test_a_stop_that_is_clipped_throughout_is_not_read():
             assert ("frames-saturated" in reading.why_not) == (stop == 2.8)
             assert (reading.mtf50_cy_px is None) == (stop == 2.8)
             assert (reading.saturated_fraction > 0.2) == (stop == 2.8)
+
+
+WELLS = {"full_well_e": 7000.0}  # of 10,000 electrons that the codes have room for: the wells are full at 0.7
+
+
+@pytest.mark.parametrize("camera", [{}, {"bit_depth": 8, "black_level_dn": 2}, {"layout": "rggb"}, {"response": 2.2}])
+def test_a_full_well_below_the_top_code_is_clipped(camera):
+    # The light side of an edge is half of its patch.
+    station = a_lane(**TWO, camera=camera)
+    for level, full in [(0.6, False), (0.8, True)]:
+        sightings = measure_sweep(a_sweep(station, level=level, **WELLS), station).sightings
+        for s in [s for s in sightings if s.kind == "edge"]:
+            assert s.ok != full
+            assert ("frames-saturated" in s.why_not) == full
+            assert_allclose(s.saturated_fraction, 0.5 if full else 0.0, atol=0.05 * full)
+
+
+def test_noise_that_does_not_fall_is_no_full_well():
+    station = a_lane(**TWO)
+    shaken = measure_sweep(a_sweep(station, vibration_px=0.4), station)
+    coarse = measure_sweep(with_frames(a_sweep(station, frames=2), lambda s, p: p // 16 * 16), station)
+    assert {s.saturated_fraction for s in (*shaken.sightings, *coarse.sightings)} == {0.0}
+
+
+def test_compression_that_takes_the_noise_of_the_light_side_is_no_full_well():
+    station = a_lane(**TWO)
+    steady = with_frames(a_sweep(station), lambda s, p: np.where(p > 2200, 2600, p).astype(np.uint16))
+    jpeg = Note("compressed-source", "6 frames are JPEG files. Record PNG or TIFF files.")
+    for sweep, full in [(steady, True), (with_notes(steady, jpeg), False)]:
+        edges = [s for s in measure_sweep(sweep, station).sightings if s.kind == "edge"]
+        assert {s.saturated_fraction > 0 for s in edges} == {full}
 
 
 def test_a_pixel_is_clipped_when_any_channel_is():

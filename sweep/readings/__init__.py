@@ -14,7 +14,7 @@ from sweep.errors import SourceError
 from sweep.frames import Shot, Source
 from sweep.measure.linear import Scale, sharpness_sites
 from sweep.measure.noise import fit_photon_transfer
-from sweep.readings.shared import with_bars_contrasts, with_shared_noise, with_star_curves
+from sweep.readings.shared import with_bars_contrasts, with_shared_noise, with_star_curves, without_full_wells
 from sweep.readings.sightings import CLIPPED_SHARE, CLIPPED_SHARE_FOR_LIGHT, PatchSite, Sighting, Sweep
 from sweep.readings.walk import Progress, Walk
 from sweep.station import Station
@@ -45,6 +45,8 @@ def measure_sweep(source: Source, station: Station, progress: Progress | None = 
     ]
     sightings = [s for stop, group in by_stop.items() for s in walk.stop(stop, group, sites, scale)]
     sightings = with_bars_contrasts(with_star_curves(walk.look_again(sightings, scale)))
+    if not any(note.code == "compressed-source" for note in source.notes):  # compression takes noise as it likes
+        sightings = without_full_wells(sightings)
     lit = [p for s in sightings for p in s.noise if s.saturated_fraction < CLIPPED_SHARE]
     return Sweep(
         tuple(by_stop),

@@ -1,4 +1,4 @@
-"""What a patch's stops share: the level at zero frequency of stars and bars, and the noise of neighbours."""
+"""What a patch's stops share: the level at zero frequency of stars and bars, the noise of neighbours, full wells."""
 
 from collections.abc import Sequence
 from dataclasses import replace
@@ -57,3 +57,32 @@ def _less_sure_star(sighting: Sighting, factor: float) -> Sighting:
     rings = replace(star.rings, u=star.rings.u * factor, astigmatic_u=star.rings.astigmatic_u * factor)
     transfer = replace(curve.transfer, u=curve.transfer.u * factor)
     return replace(sighting, star=replace(star, rings=rings), star_curve=replace(curve, transfer=transfer))
+
+
+def without_full_wells(sightings: list[Sighting]) -> list[Sighting]:
+    """The sightings, those edges called clipped whose light side can't rise further though no code is at the top.
+
+    Noise rises with light until wells are full, then it falls (EMVA 1288 finds saturation by it): there the light side
+    is steadier than the dark one.
+    """
+    return [_clipped(s) if _at_full_well(s) else s for s in sightings]
+
+
+def _at_full_well(sighting: Sighting) -> bool:
+    points = sorted(sighting.noise, key=lambda p: p.mean_dn)
+    if sighting.kind != "edge" or len(points) < 2 or min(p.dof for p in points) < _ENOUGH_DOF:
+        return False
+    dark, light = points[0], points[-1]
+    return light.mean_dn > 2.0 * dark.mean_dn and light.variance_dn2 < _STEADY * dark.variance_dn2
+
+
+_ENOUGH_DOF, _STEADY = 100.0, 0.25
+
+
+def _clipped(sighting: Sighting) -> Sighting:
+    assert sighting.edge is not None
+    assert sighting.edge.curve is not None
+    light_side = sighting.edge.curve.distance(sighting.site.sites.x, sighting.site.sites.y) > 0
+    why = (*(code for code in sighting.why_not if code != "frames-saturated"), "frames-saturated")
+    share = max(sighting.saturated_fraction, float(np.mean(light_side)))
+    return replace(sighting, ok=False, why_not=why, saturated_fraction=share)
