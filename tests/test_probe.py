@@ -392,6 +392,14 @@ def test_a_coarse_step_is_told_by_light():
     assert_allclose(figures["step_by_light_ms"], Coarse.STEP_MS, rtol=0.25)
 
 
+def test_a_black_level_below_zero_is_told_where_no_pixel_is_dark_enough_to_show_it():
+    at = station()
+    device = Mapped(simulated(at, stop=1.4), lambda p: np.maximum(p, 110) - 110)
+    black = of(probe(device, at.camera), "black")
+    assert black.verdict == "take care"
+    assert_allclose(black.figures["black_level_dn"], at.camera.black_level_dn - 110, atol=1)
+
+
 def test_a_camera_that_cannot_be_set_is_judged_by_what_it_sends():
     at = station()
     inner = simulated(at)
@@ -402,6 +410,8 @@ def test_a_camera_that_cannot_be_set_is_judged_by_what_it_sends():
     assert found.verdict == "take care"
     assert "20 Hz stay unseen" in of(found, "flicker").found
     assert len({of(found, code).to_do for code in bad(found)}) == 1
+    unstated = probe(ByHand(inner), at.camera.model_copy(update={"black_level_dn": 0.0}))
+    assert of(unstated, "noise").hidden_by == "a black level that is not stated"
 
 
 @pytest.mark.parametrize(("exposure_ms", "word"), [(0.01, "dark"), (30.0, "clips")])

@@ -54,7 +54,8 @@ def _judged(seen: Observed, bench: Bench, stated: Stated, edges: Sequence[Region
     unrest = light.AUTOMATICS if not is_locked else rhythm.PULSES if striped else ""
     processed = picture.processing(picture.processing_of(seen, bench, stated, edges), stated, unrest)
     transfer = picture.transfer_of(seen, bench, black_dn)
-    unsound = spoilt or ("the processing" if processed.verdict == "not fit" else "")
+    dark = "" if seen.settable or stated.black_level_dn else "a black level that is not stated"
+    unsound = spoilt or ("the processing" if processed.verdict == "not fit" else dark)
     return [
         locked,
         straight,

@@ -25,6 +25,7 @@ DRIFT_FRAMES = 20
 DRIFT_GOOD, DRIFT_FIT = 0.01, 0.03
 LINEAR_GOOD, LINEAR_FIT = 0.01, 0.03
 LOWEST_SHARE = 0.05
+LEVEL_SHARE = 0.002  # of a level, by which it may be off
 ROUNDING = 0.15  # of a code step, by which the mean of little noise may be off
 POWERS = np.arange(0.25, 1.61, 0.01)
 BENT_POWER = 0.06
@@ -33,6 +34,7 @@ LEAST_GOOD_MS = 1.0
 LEAST_OFF_MS = 0.001
 LIGHT_UNSURE = 0.001
 ZERO_SHARE = 0.05
+BELOW_ZERO = 0.002
 AUTOMATICS = "the automatics"
 EXPOSURES = "exposures that are not what they say"
 DARK_LEVELS = "dark levels that are cut off at 0"
@@ -72,7 +74,7 @@ def response_of(seen: Observed) -> Response | None:
     exposure, level = _points(seen)
     if np.unique(exposure).size < 4:
         return None
-    weight = 1.0 / np.maximum(level, 0.01 * level.max())
+    weight = 1.0 / (LEVEL_SHARE * np.maximum(level, 0.01 * level.max()) + ROUNDING * seen.codes.step)
 
     def line(power: float) -> tuple[Floats, float]:
         design = np.column_stack([np.ones(exposure.size), exposure**power])
@@ -197,11 +199,11 @@ def black(seen: Observed, response: Response | None, stated: Stated, spoilt: str
     darkest = min(seen.ladder, key=lambda s: s.exposure_ms or 0.0)
     zero = max(sample.zero_share for sample in darkest.settled)
     figures: Figures = {"black_level_dn": response.black_dn, "zero_share": zero}
-    if zero > ZERO_SHARE and seen.codes.container > 8:
+    cut = zero > ZERO_SHARE and seen.codes.container > 8
+    if cut or response.black_dn < -max(2.0 * seen.codes.step, BELOW_ZERO * seen.codes.top_dn):
+        found = f"{percent(zero)} of the pixels are at 0 in the shortest exposure" if cut else "below 0, and so cut off"
         to_do = "Raise the camera's black level (offset) until no pixel is 0 without light: else dark levels read high."
-        return Finding(
-            "black", "Black level", "take care", f"{percent(zero)} of the dark pixels are at 0", to_do, figures
-        )
+        return Finding("black", "Black level", "take care", found, to_do, figures)
     found = f"{max(response.black_dn, 0.0):.1f} DN, by the line through the levels"
     return Finding("black", "Black level", "good", found, "", figures)
 
@@ -229,7 +231,8 @@ def exposure(seen: Observed, response: Response | None, coarse_ms: float | None,
     if response is not None and not spoilt and not _at_zero(seen.ladder[-1]):
         by_light = response.light_ms(seen.ladder[-1].level)
         figures |= {"least_by_light_ms": by_light, "step_by_light_ms": step_by_light(seen.fine, response)}
-        if abs(by_light - least_ms) > max(LIGHT_OFF * least_ms, LEAST_OFF_MS, LIGHT_UNSURE * used_ms):
+        rounding_ms = 2 * ROUNDING * seen.codes.step / response.slope_dn_ms
+        if abs(by_light - least_ms) > max(LIGHT_OFF * least_ms, LEAST_OFF_MS, LIGHT_UNSURE * used_ms, rounding_ms):
             found += f"; by light the least is {number(by_light)} ms"
             to_do = f"Stay well above {number(max(by_light, least_ms))} ms: shorter exposures are not what they say."
             return Finding("exposure", name, "take care", found, to_do, figures)
