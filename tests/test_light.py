@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from sweeps import STOPS, a_lane, a_sweep, shuffled, with_frames, with_shots
+from sweeps import STOPS, a_lane, a_sweep, scaled, shuffled, with_shots
 
 from sweep.light import light_of
 from sweep.readings import measure_sweep
@@ -18,13 +18,6 @@ RING = (1.02, 0.98, 1.0, 1.03, 0.97, 1.01)
 
 def light(sweep, station=None):
     return light_of(measure_sweep(sweep, station or a_lane()))
-
-
-def scaled(sweep, factor):
-    """Each frame's light times `factor(shot)`: a number, or an array over the frame."""
-    return with_frames(
-        sweep, lambda shot, pixels: np.clip(64 + (pixels - 64.0) * factor(shot), 0, 4095).round().astype(np.uint16)
-    )
 
 
 def test_f_numbers_follow_the_ring():

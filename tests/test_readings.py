@@ -8,12 +8,11 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from sweeps import a_lane, a_sweep, a_truth, shuffled, with_frames, with_notes, with_shots
+from sweeps import a_lane, a_sweep, a_truth, at_exposures, shuffled, with_frames, with_notes, with_shots
 
-from sweep.cameras.simulated import RenderedSweep, Scene, exposure_for, station_truth
+from sweep.cameras.simulated import RenderedSweep, station_truth
 from sweep.errors import SourceError
 from sweep.figures import reading_of
-from sweep.frames import Shot
 from sweep.readings import measure_sweep
 from sweep.result import Note
 
@@ -142,20 +141,6 @@ def test_black_is_as_stated(darks):
 
 
 # Exposures.
-
-
-def at_exposures(station, factors, *, stops=None, **effects):
-    """One sweep whose k-th frame of every stop is exposed `factors[k]` times as long."""
-    sim, rng = a_truth(station, **effects), np.random.default_rng(4)
-    scene, shots, frames = Scene(station, sim, rng), [], {}
-    for stop in station.lens.stops:
-        base = exposure_for(station, sim, stop, 0.6)
-        for k, factor in enumerate(factors):
-            factor = factor if stops is None or stop in stops else 1.0
-            shot = Shot(f"f{stop:g}_{k}.png", stop, factor * base, 0.0, "target", len(shots))
-            shots.append(shot)
-            frames[shot.file] = scene.expose(stop, shot.exposure_ms, 0.0, rng)
-    return RenderedSweep(tuple(shots), frames, station.camera.bit_depth)
 
 
 def test_frames_of_several_exposures_are_pooled_and_clipped_ones_left_out():
