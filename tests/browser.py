@@ -162,7 +162,8 @@ class Tab:
     def complaints(self) -> list[str]:
         """What the console has said: errors of scripts, refusals by policy, requests that failed.
 
-        A press that comes too late is refused with status 409: that is no fault.
+        A press that comes too late is refused with status 409, and the last picture may be asked for when the
+        server has gone: these are no faults.
         """
         self.js("0")
         said = []
@@ -173,7 +174,7 @@ class Tab:
                 said.append(event["params"]["exceptionDetails"]["exception"].get("description", "exception"))
             if event["method"] == "Log.entryAdded" and event["params"]["entry"]["level"] == "error":
                 said.append(f"{event['params']['entry']['text']} {event['params']['entry'].get('url', '')}")
-        return [line for line in said if "status of 409" not in line]
+        return [line for line in said if "status of 409" not in line and "ERR_CONNECTION_REFUSED" not in line]
 
     def _mouse(self, kind: str, x: float, y: float) -> None:
         buttons = 0 if kind == "mouseReleased" else 1

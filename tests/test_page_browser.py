@@ -16,7 +16,7 @@ from guided import PLAN, STOPS, MemoryKeeper, small_camera, small_station
 from test_frame import Camera as EdgeCamera
 from test_framing import STATION as FRAME_STATION
 
-from sweep.capture import Action, Begin, Event, Finished, Live, conduct
+from sweep.capture import Action, Ask, Begin, Event, Finished, Live, conduct
 from sweep.demo import SimulatedHand
 from sweep.frame import set_up
 from sweep.framing import Sight
@@ -55,15 +55,18 @@ class GuidedRun:
     def _go(self) -> None:
         camera = small_camera(STATION)
         hand = SimulatedHand(camera, STOPS)
+        waiting: list[Ask] = []
         with RunPage(STATION, self.door) as page:
 
             def show(event: Event) -> Action:
                 answer = page(event)
                 time.sleep(FRAME_S)
-                # A hand that waits, so that the browser may act at leisure.
-                if not isinstance(event, Begin) and not self.holds.is_set():
-                    done = hand(event)
-                    assert done is not Action.END
+                if isinstance(event, Ask) and self.holds.is_set():
+                    waiting[:] = [event]  # the hand does what it is asked later, so that the browser may act at leisure
+                elif not isinstance(event, Begin):
+                    if waiting and not self.holds.is_set():
+                        hand(waiting.pop())
+                    hand(event)
                 return answer
 
             self.finished = conduct(Live(camera, STATION), self.keeper, STATION, PLAN, show)
@@ -106,13 +109,20 @@ def shown(selector: str) -> str:
 
 def through(tab: Tab, press: Callable[[], None], until: str) -> None:
     """Press whenever the page asks for it, until an expression is true."""
-    for _ in range(600):
+    until_s = time.monotonic() + 200
+    while time.monotonic() < until_s:
         if tab.js(until):
             return
         if tab.js("state?.phase === 'ask' && state.hint.includes('“Take now”')"):
             press()
         time.sleep(0.1)
     raise AssertionError(f"never: {until}")
+
+
+def still(tab: Tab, run: GuidedRun) -> None:
+    """Let the hand wait; what it had begun goes on to the next stop's question."""
+    run.holds.set()
+    tab.wait("state.hint.startsWith('Turn the ring')")
 
 
 def end(tab: Tab, run: GuidedRun) -> None:
@@ -132,8 +142,7 @@ def test_a_run_by_clicks_with_a_reload_in_the_middle(browser, run):
     through(tab, lambda: tab.click("#take"), "state.progress.number >= 2")
     tab.wait("document.querySelector('#live').naturalWidth > 0")
     assert tab.js("document.querySelectorAll('#overlay .patch').length") == 4
-    run.holds.set()
-    time.sleep(0.5)
+    still(tab, run)
     before = tab.js("JSON.stringify([state.do, state.step, state.progress, state.buttons])")
     tab.go(run.door.address)
     tab.wait("state !== null && you.acting")
@@ -200,7 +209,7 @@ def test_sounds_differ_and_come_once_and_the_screen_is_kept_on(browser, run):
     tab.wait("awake !== null || !navigator.wakeLock")
     through(tab, lambda: tab.click("#take"), "state.progress.number >= 2")
     tab.wait("window.heard.includes('taken')")
-    run.holds.set()
+    still(tab, run)
     # Each by its own rhythm: numbers and lengths of notes differ, not pitch alone.
     rhythms = tab.js("JSON.stringify(Object.values(SOUNDS).map((s) => s.notes.map((n) => [n[1], n[2]])))")
     assert len({json.dumps(rhythm) for rhythm in json.loads(rhythms)}) == 3
@@ -241,7 +250,7 @@ def test_targets_are_large_named_and_nothing_is_cut_off(browser, run, dark):
     tab.wait(shown("#take"))
     tab.click("#take")
     through(tab, lambda: tab.click("#take"), "state.progress.number >= 2")
-    run.holds.set()
+    still(tab, run)
     for width, height in SIZES.values():
         tab.resize(width, height, dark=dark)
         assert well_laid_out(tab) == []

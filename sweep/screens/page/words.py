@@ -200,22 +200,16 @@ class Telling:
             return
         if phase == "over" or not isinstance(step, Ask):
             return
-        stop = "darks" if step.stop is None else f"f/{step.stop:g}"
-        if phase == "paused":
-            yield _button("pause", "Go on", main=True)
-            yield _button("end", "End run")
-            return
-        taking = phase == "taking"
-        # It leads on by itself at most stops; then this is for the one who knows better than the light.
-        yield _button("take", "Take now", main=not taking and (step.confirm or step.stop is None), on=not taking)
-        if taking:
-            yield _button("back", f"Take {stop} again", on=step.stop is not None)
-        elif step.stop is not None and step.leaving is not None:
-            yield _button("back", f"Undo f/{step.leaving:g}")
-        yield _button(
-            "skip", "Leave darks out" if step.stop is None else f"Skip {stop}", on=not taking or step.stop is not None
-        )
-        yield _button("pause", "Pause")
+        # All of them in every phase: a button that moves under a gloved finger does what was not meant.
+        taking, paused, darks = phase == "taking", phase == "paused", step.stop is None
+        stop = "darks" if darks else f"f/{step.stop:g}"
+        # Most stops lead on by themselves; then "Take now" is for the one who knows better than the light.
+        leads_on = paused or (not taking and (step.confirm or darks))
+        yield _button("take", "Go on" if paused else "Take now", main=leads_on, on=not taking)
+        back = f"Take {stop} again" if taking else "Undo" if step.leaving is None else f"Undo f/{step.leaving:g}"
+        yield _button("back", back, on=not paused and not darks and (taking or step.leaving is not None))
+        yield _button("skip", "Leave darks out" if darks else f"Skip {stop}", on=not paused and not (darks and taking))
+        yield _button("pause", "Pause", on=not paused)
         yield _button("end", "End run")
 
 
