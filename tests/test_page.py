@@ -2,6 +2,7 @@
 
 import contextlib
 import http.client
+import itertools
 import json
 import socket
 import time
@@ -77,7 +78,10 @@ class News:
 
     def next(self) -> tuple[str, Any]:
         name, data = "message", None
-        while line := self.answer.readline().decode().rstrip("\n"):
+        first = self.answer.readline()
+        assert first, "the stream of news has ended"
+        lines = itertools.chain([first], iter(self.answer.readline, b"\n"))
+        for line in (raw.decode().rstrip("\n") for raw in lines):
             key, _, value = line.partition(": ")
             if key == "event":
                 name = value

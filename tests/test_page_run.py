@@ -1,14 +1,15 @@
 """The guided run on the page: its words, sounds and buttons, and a whole run by a scripted browser."""
 
 import json
-from collections.abc import Iterator
+import threading
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
 import cv2
 import numpy as np
 import pytest
-from guided import STOPS, small_station
+from guided import PLAN, STOPS, MemoryKeeper, small_camera, small_station
 from results import a_result, a_station
 from test_page import News, ask, press
 
@@ -19,17 +20,20 @@ from sweep.capture import (
     Event,
     Exposed,
     Finished,
+    Live,
     Score,
     Seen,
     Show,
     StepDone,
     Taken,
     Trouble,
+    conduct,
 )
+from sweep.demo import SimulatedHand
 from sweep.errors import CameraError, Interrupted
 from sweep.ring import RingView, State
 from sweep.screens.board import Board
-from sweep.screens.page import RunPage, open_door
+from sweep.screens.page import Door, RunPage, open_door
 from sweep.screens.page.preview import LONGEST_PX, preview
 from sweep.screens.page.words import Telling, way
 from sweep.station import Camera
@@ -248,6 +252,75 @@ def test_a_preview_of_samples_at_the_top_of_their_words_is_not_blown_out():
     jpeg = preview(np.full((120, 160), 2048 << 4, np.uint16), camera)
     # 255 x 0.5^(1/2.2) = 186
     assert abs(float(cv2.imdecode(np.frombuffer(jpeg, np.uint8), 0).mean()) - 186) < 3
+
+
+# ---- whole runs
+
+
+class Person(threading.Thread):
+    """A browser that answers the news; `decide(state)` gives the action to press, or None."""
+
+    def __init__(self, door: Door, decide: Callable[[dict[str, Any]], str | None]) -> None:
+        super().__init__(daemon=True)
+        self._door, self._decide = door, decide
+        self.states: list[dict[str, Any]] = []
+        self.start()
+
+    def run(self) -> None:
+        news = News(self._door, "person")
+        name, data = news.next()
+        while name != "farewell":
+            if name == "message":
+                self.states.append(data["state"])
+                action = self._decide(data["state"])
+                if action is not None:
+                    press(self._door, "person", action=action, step=data["state"]["step"])
+            name, data = news.next()
+        news.close()
+
+
+def whole_run(decide: Callable[[dict[str, Any]], str | None]) -> tuple[Finished, MemoryKeeper, list[dict[str, Any]]]:
+    """A run at the small simulated station, whose ring a simulated hand turns; only the page answers."""
+    door, keeper, camera = open_door("127.0.0.1"), MemoryKeeper(), small_camera(STATION)
+    hand = SimulatedHand(camera, STOPS)
+    with RunPage(STATION, door) as page:
+        person = Person(door, decide)
+
+        def show(event: Event) -> Action:
+            assert person.is_alive()
+            answer = page(event)
+            if not isinstance(event, Begin):
+                hand(event)
+            return answer
+
+        finished = conduct(Live(camera, STATION), keeper, STATION, PLAN, show)
+    person.join(20)
+    return finished, keeper, person.states
+
+
+def plain(state: dict[str, Any]) -> str | None:
+    """Begin, and take a stop when the page asks to."""
+    if state["phase"] == "begin" or (state["phase"] == "ask" and "“Take now”" in state["hint"]):
+        return "take"
+    return None
+
+
+def test_a_whole_run_by_the_page_alone():
+    finished, keeper, states = whole_run(plain)
+    assert finished.taken == STOPS
+    assert not finished.ended
+    assert len(keeper.shots) == len(STOPS) * PLAN.frames + PLAN.darks
+    assert {state["mode"] for state in states} == {"run"}
+    begun = next(state for state in states if state["phase"] != "wait")
+    assert (begun["phase"], bool(begun["cautions"])) == ("begin", True)
+    assert (states[-1]["phase"], states[-1]["do"]) == ("over", "All frames are taken")
+    assert "taken" in {sound["kind"] for state in states for sound in state["sounds"]}
+
+
+def test_end_on_the_page_ends_the_run():
+    finished, _, _ = whole_run(lambda state: "end" if state["progress"]["number"] == 1 else plain(state))
+    assert finished.ended
+    assert finished.taken == ()
 
 
 def test_what_was_meant_for_the_step_before_is_refused(monkeypatch):
