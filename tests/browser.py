@@ -130,7 +130,7 @@ class Tab:
             value = self.js(text)
             if value:
                 return value
-            assert time.monotonic() < until_s, f"still not: {text}"
+            assert time.monotonic() < until_s, f"still not: {text}, but {self.js('document.body.innerText')}"
             time.sleep(0.05)
 
     def click(self, selector: str) -> None:
