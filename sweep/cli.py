@@ -177,7 +177,8 @@ def record(
             screen = Beside(run_page, screen, has_keys=sys.stdin.isatty() and sys.stdout.isatty())
         with open_camera(source, station) as camera, screen:
             text = station_file.read_text(encoding="utf-8-sig")
-            run(camera, station, text, folder, _with_simulated_hand(camera, station, screen), exposure_ms)
+            show = _with_simulated_hand(camera, station, screen, begins=tell is None)
+            run(camera, station, text, folder, show, exposure_ms)
         return _replay(folder, station, out, tell=tell)
 
 
@@ -338,15 +339,15 @@ def _probe_progress() -> "Iterator[Tell]":
         yield lambda what, share: bar.update(task, description=f"Looking at {what}", completed=share)
 
 
-def _with_simulated_hand(camera: "Camera", station: "Station", screen: "Screen") -> "Show":
-    """The screen; where the camera is simulated, together with the hand on its ring."""
+def _with_simulated_hand(camera: "Camera", station: "Station", screen: "Screen", *, begins: bool) -> "Show":
+    """The screen; where the camera is simulated, together with the hand on its ring, which may also begin the run."""
     if camera.facts().get("device") != "simulated station":
         return screen
     from sweep.cameras.simulated_camera import SimulatedCamera
     from sweep.demo import SimulatedHand, with_hand
 
     assert isinstance(camera, SimulatedCamera)
-    return with_hand(SimulatedHand(camera, station.lens.stops), screen)
+    return with_hand(SimulatedHand(camera, station.lens.stops), screen, begins=begins)
 
 
 def _load(station_file: Path) -> "Station":

@@ -127,11 +127,15 @@ def demo_camera(seed: int) -> tuple[SimulatedCamera, SimulatedHand]:
     return camera, SimulatedHand(camera, station.lens.stops)
 
 
-def with_hand(hand: SimulatedHand, show: Show) -> Show:
-    """A screen that is watched while the simulated hand does the work; the screen's own answers come first."""
+def with_hand(hand: SimulatedHand, show: Show, *, begins: bool = True) -> Show:
+    """A screen that is watched while the simulated hand does the work; the screen's own answers come first.
+
+    begins: the hand also begins the run, which is else left to the screen.
+    """
 
     def both(event: Event) -> Action:
-        answer, done = show(event), hand(event)
+        answer = show(event)
+        done = Action.NONE if isinstance(event, Begin) and not begins else hand(event)
         return done if answer is Action.NONE else answer
 
     return both

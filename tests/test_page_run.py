@@ -29,7 +29,7 @@ from sweep.capture import (
     Trouble,
     conduct,
 )
-from sweep.demo import SimulatedHand
+from sweep.demo import SimulatedHand, with_hand
 from sweep.errors import CameraError, Interrupted
 from sweep.ring import RingView, State
 from sweep.screens.board import Board
@@ -456,3 +456,9 @@ def test_the_terminal_joins_once_the_page_has_begun_and_answers_where_it_has_key
         assert screen(seen()) is (Action.SKIP if has_keys else Action.NONE)
     assert not terminal.open
     assert len(terminal.events) == 2
+
+
+def test_a_simulated_hand_may_leave_the_beginning_to_the_page():
+    hand = SimulatedHand(small_camera(STATION), STOPS)
+    assert with_hand(hand, lambda event: Action.NONE)(BEGIN) is Action.TAKE
+    assert with_hand(hand, lambda event: Action.NONE, begins=False)(BEGIN) is Action.NONE
