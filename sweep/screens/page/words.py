@@ -88,7 +88,7 @@ class Telling:
             "light": self._light(),
             "scored": f"Contrast of a feature of {self.station.need.feature_um:g} µm, live",
             "scores": [_score(score.target, score.contrast, board.need) for score in board.seen.scores]
-            if board.seen
+            if board.seen and board.stop is not None
             else [],
             "frame": self._frame(),
             "patches": _patches(self.station),
